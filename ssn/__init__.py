@@ -1,0 +1,59 @@
+"""ssn: semismooth Newton solver kernel with a benchmark harness."""
+
+from . import costs
+from .complementarity import ComplementarityProblem
+from .composite import CompositeProblem
+from .control import ControlProblem
+from .costs import Bounds, SparseCost
+from .errors import InputError, MissingExtraError, NotConverged, ProblemFileError, SolveInterrupted, StopSolve
+from .globalization import DualSearch, EnvelopeSearch, FullStep, ResidualSearch
+from .pieces import Pieces
+from .protocols import Cost, Equation, Linearization, SmoothPart
+from .records import Certificate, StepRecord
+from .reference import proximal_gradient
+from .smooth import AffineMap, LeastSquares, Logistic, Quadratic, SmoothMap
+from .solution import Solution
+from .solve import solve
+from .states import StateModel, SteadyState
+from .status import Outcome
+from .work import WorkCounts
+
+__version__ = "0.1.0"
+
+__all__ = [
+    "AffineMap",
+    "Bounds",
+    "Certificate",
+    "ComplementarityProblem",
+    "CompositeProblem",
+    "ControlProblem",
+    "Cost",
+    "DualSearch",
+    "EnvelopeSearch",
+    "Equation",
+    "FullStep",
+    "InputError",
+    "LeastSquares",
+    "Linearization",
+    "Logistic",
+    "MissingExtraError",
+    "NotConverged",
+    "Outcome",
+    "Pieces",
+    "ProblemFileError",
+    "Quadratic",
+    "ResidualSearch",
+    "SmoothMap",
+    "SmoothPart",
+    "Solution",
+    "SolveInterrupted",
+    "SparseCost",
+    "StateModel",
+    "SteadyState",
+    "StepRecord",
+    "StopSolve",
+    "WorkCounts",
+    "costs",
+    "proximal_gradient",
+    "solve",
+]

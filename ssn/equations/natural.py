@@ -1,0 +1,188 @@
+"""The natural residual R(x) = x - prox_{s g}(x - s F(x)), F a gradient or any smooth map.
+
+With g = 0 within bounds it is the mid function of complementarity, mid(x - upper, x - lower, s F(x)). Its Newton
+derivative I - D (I - s F'), D that of the proximal map, gives where D is diagonal the reduced system on the range
+of D (bounds and L1: the inactive set)
+
+    (F' + (1 - D)/(s D))_II d_I = -(R/(s D))_I - F'_IA d_A,   d_A = -R_A,
+
+symmetric where F' is. Source: J.-S. Pang and L. Qi, SIAM J. Optim. 3 (1993) 443-465 (from memory).
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+from typing import Any, Protocol
+
+import numpy as np
+import numpy.typing as npt
+
+from ..inner import InnerProduct, relative
+from ..pieces import Pieces
+from ..protocols import Cost, Evaluation, FallbackStep, ProxDerivative
+from ..status import Outcome
+from ..work import WorkCounts
+
+FloatArray = npt.NDArray[np.float64]
+
+
+class NaturalMap(Protocol):
+    """F with its derivative, and the potential f where F = f'."""
+
+    affine: bool
+    symmetric: bool
+
+    def value(self, x: FloatArray) -> FloatArray:
+        """F(x), derivatives in the Euclidean sense."""
+        ...
+
+    def derivative(self, x: FloatArray) -> Any:
+        """F'(x)."""
+        ...
+
+
+@dataclass(frozen=True)
+class NaturalPoint:
+    """What one evaluation knows."""
+
+    force: FloatArray
+    v: FloatArray
+    moved: FloatArray
+    derivative: ProxDerivative
+    step: Any
+
+
+class NaturalEquation:
+    """R(x) = 0 for a map, a cost and a step.
+
+    Parameters
+    ----------
+    natural_map : NaturalMap
+    cost : Cost
+    step : float or array
+        s > 0; an array only where the proximal map does not depend on it (bounds).
+    weights : array, shape (n,)
+        Inner product of the unknown.
+    potential : callable, optional
+        f with F = f'; brings the envelope and the proximal gradient fallback.
+    magnitude : float
+        Size of the unknown below which accuracy is no longer relative; 0 keeps it relative.
+    """
+
+    def __init__(
+        self,
+        natural_map: NaturalMap,
+        cost: Cost,
+        step: Any,
+        weights: FloatArray,
+        *,
+        potential: Callable[[FloatArray], float] | None = None,
+        magnitude: float = 0.0,
+        work: WorkCounts | None = None,
+    ) -> None:
+        self.map, self.cost, self.step = natural_map, cost, step
+        self.inner = InnerProduct(weights)
+        self.weights = weights
+        self.potential = potential
+        self.magnitude = magnitude
+        self.work = work if work is not None else WorkCounts()
+        self.piecewise_affine = bool(natural_map.affine)
+        self.symmetric = bool(natural_map.symmetric)
+        self.preferred_search = "residual" if potential is None else "envelope"
+        self._best_norm = np.inf
+        self._derivative_at: tuple[Any, Any] = (None, None)
+        self._first_value: float | None = None
+
+    def evaluate(self, x: FloatArray) -> Evaluation:
+        """One evaluation of F and one proximal map."""
+        self.work.operator_products += 1
+        force = self.map.value(x)
+        if not np.isfinite(force).all():
+            return Evaluation(x, force, np.inf, np.inf, Pieces())
+        v = x - self.step * force / self.weights
+        self.work.proximal_maps += 1
+        moved = self.cost.prox(v, self._cost_step())
+        residual = x - moved
+        norm = self.inner.norm(residual)
+        accuracy = relative(norm, max(self.inner.norm(moved), self.magnitude))
+        data = NaturalPoint(force, v, moved, self.cost.prox_derivative(v, self._cost_step()), self.step)
+        return Evaluation(x, residual, norm, accuracy, self.cost.pieces(v, self._cost_step()), data)
+
+    def _cost_step(self) -> float:
+        return float(self.step) if np.ndim(self.step) == 0 else 1.0
+
+    def jacobian(self, x: FloatArray) -> Any:
+        """F'(x), evaluated once a point (once altogether for an affine F)."""
+        known, derivative = self._derivative_at
+        if derivative is None or not (self.map.affine or known is x):
+            derivative = self.map.derivative(x)
+            self._derivative_at = (x, derivative)
+        return derivative
+
+    def merit_line(self, at: Evaluation, direction: FloatArray) -> None:
+        """None: no merit function that is cheap along a line."""
+        return None
+
+    # the forward-backward envelope, where there is a potential
+
+    def envelope(self, at: Evaluation) -> float:
+        """f(x) + <F, z - x> + ||z - x||^2 / (2 s) + g(z), z the proximal gradient point."""
+        assert self.potential is not None
+        point: NaturalPoint = at.data
+        self.work.operator_products += 1
+        gap = -at.residual
+        value = self.potential(at.x) + float(point.force @ gap) + self.cost.value(point.moved, self.weights)
+        return value + float((self.weights / self.step * gap) @ gap) / 2.0
+
+    def envelope_decrease(self, at: Evaluation) -> float:
+        """||x - z||^2 / (2 s)."""
+        return float((self.weights / self.step * at.residual) @ at.residual) / 2.0
+
+    def proximal_gradient_point(self, at: Evaluation) -> FloatArray:
+        """Z of the evaluation."""
+        moved: FloatArray = at.data.moved
+        return moved
+
+    def shrink_step(self, at: Evaluation) -> Evaluation:
+        """Halve the step until the potential lies below its quadratic model at the proximal gradient point."""
+        if self.potential is None or self.piecewise_affine:
+            return at
+        for _ in range(60):
+            gap = -at.residual
+            model = float(at.data.force @ gap) + 0.95 * self.envelope_decrease(at)
+            here, there = self.potential(at.x), self.potential(at.data.moved)
+            self.work.operator_products += 2
+            if np.isfinite(there) and there <= here + model + 1e-13 * (abs(here) + abs(there)):
+                break
+            self.step = 0.5 * self.step
+            at = self.evaluate(at.x)
+            self._best_norm = np.inf
+        return at
+
+    def is_best(self, at: Evaluation) -> bool:
+        """Whether the residual norm is the smallest seen; remembers it."""
+        if at.norm < self._best_norm:
+            self._best_norm = at.norm
+            return True
+        return False
+
+    def fallback(self, at: Evaluation) -> FallbackStep | None:
+        """The proximal gradient step, backtracked on the objective; for maps without a potential a damped step."""
+        if self.potential is None:
+            return None
+        at = self.shrink_step(at)
+        decrease = self.envelope_decrease(at)
+        return FallbackStep(at.data.moved, "proximal gradient", decrease) if decrease > 0 else None
+
+    def verdict(self, at: Evaluation) -> tuple[Outcome, str] | None:
+        """Report an objective that falls without bound."""
+        if self.potential is None:
+            return None
+        value = self.potential(at.x)
+        if self._first_value is None:
+            self._first_value = value
+        limit = 1e12 * (1.0 + abs(self._first_value))
+        if value < -limit:
+            return Outcome.UNBOUNDED, f"the smooth part has fallen to {value:.1e}"
+        return None

@@ -1,0 +1,129 @@
+"""What a solve returns: fixed fields, always present."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from typing import Any
+
+import numpy as np
+import numpy.typing as npt
+
+from .errors import NotConverged
+from .pieces import Pieces
+from .records import Certificate, StepRecord
+from .status import Outcome
+from .work import WorkCounts
+
+FloatArray = npt.NDArray[np.float64]
+
+
+@dataclass(frozen=True)
+class Solution:
+    """The result of `ssn.solve`.
+
+    Attributes
+    ----------
+    x : array
+        The returned point: the solution, or the best iterate where the solve failed. Shape of the start.
+    converged : bool
+        True only where the residual computed afresh at `x` is within the tolerance.
+    outcome : Outcome
+        Why the solve ended; explains itself and says what to try.
+    message : str
+        Details of this case.
+    residual_norm : float
+        Norm of the equation's residual at the last evaluated iterate that led to `x`.
+    accuracy : float
+        The figure compared with the tolerance, computed afresh at `x`.
+    steps : tuple of StepRecord
+        One record a Newton step.
+    start_norm : float
+        Residual norm at the start.
+    pieces : Pieces
+        Active sets at the solution.
+    multipliers : mapping of str to array
+        The forces that go with the pieces; signs in the docstrings of costs and problems.
+    margins : array or None
+        Distance of each component to its nearest kink, in the unit of x: strict complementarity is the smallest one.
+    certificate : Certificate or None
+        Distance bound to the exact discrete solution, where the problem is strongly convex.
+    state, adjoint : array or None
+        Control problems: y and p with E'p = C'Wy(z - Cy).
+    work : WorkCounts
+        What the whole solve cost, final checks included.
+    objective : float
+        The objective at x; nan for equations.
+    choices : mapping of str to str
+        What "auto" decided and why.
+    """
+
+    x: FloatArray
+    converged: bool
+    outcome: Outcome
+    message: str
+    residual_norm: float
+    accuracy: float
+    tolerance: float
+    steps: tuple[StepRecord, ...]
+    start_norm: float
+    pieces: Pieces
+    multipliers: Mapping[str, FloatArray] = field(default_factory=dict)
+    margins: FloatArray | None = None
+    certificate: Certificate | None = None
+    state: FloatArray | None = None
+    adjoint: FloatArray | None = None
+    work: WorkCounts = field(default_factory=WorkCounts)
+    objective: float = float("nan")
+    choices: Mapping[str, str] = field(default_factory=dict)
+    problem: Any = field(default=None, repr=False, compare=False)
+    iterate: FloatArray | None = field(default=None, repr=False, compare=False)
+
+    def __repr__(self) -> str:
+        size = "x".join(map(str, self.x.shape))
+        certified = "" if self.certificate is None else f", certified to {self.certificate.relative:.1e}"
+        return (
+            f"Solution({self.outcome.value}, {len(self.steps)} steps, accuracy {self.accuracy:.1e}{certified}, "
+            f"x of shape {size})"
+        )
+
+    def require(self) -> Solution:
+        """Return self, or raise `NotConverged` (with this solution attached) unless converged."""
+        if not self.converged:
+            raise NotConverged(f"{self.outcome.value}: {self.message or self.outcome.explanation} {self.outcome.advice}", self)
+        return self
+
+    @property
+    def contractions(self) -> list[float]:
+        """Residual norm after each step divided by that before."""
+        return [s.contraction for s in self.steps]
+
+    def history(self) -> str:
+        """Return the steps as a text table."""
+        lines = [f"{'step':>4} {'residual':>9} {'accuracy':>9} {'length':>7} {'inner':>5} {'changes':>8}  action"]
+        lines.append(f"{0:>4} {self.start_norm:9.1e}")
+        for s in self.steps:
+            changes = "-" if s.piece_changes is None else str(s.piece_changes)
+            reason = f" ({s.reason})" if s.reason else ""
+            lines.append(
+                f"{s.index:>4} {s.residual_norm:9.1e} {s.accuracy:9.1e} {s.length:7.3g} {s.inner_iterations:>5} "
+                f"{changes:>8}  {s.action}{reason}"
+            )
+        return "\n".join(lines)
+
+    def plot(self, path: Any = None) -> Any:
+        """Draw residual norm, accuracy and changes of the active sets over the steps.
+
+        Parameters
+        ----------
+        path : str or path, optional
+            File to write; without it the matplotlib figure is returned.
+
+        Raises
+        ------
+        MissingExtraError
+            Where matplotlib is not installed.
+        """
+        from .plotting import plot_history
+
+        return plot_history(self, path)
