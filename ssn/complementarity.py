@@ -47,17 +47,27 @@ class ComplementarityProblem:
     convex = False
 
     def __init__(
-        self, F: Any, lower: Any = 0.0, upper: Any = np.inf, *, size: int | None = None, magnitude: float | None = None
+        self,
+        F: Any,
+        lower: Any = 0.0,
+        upper: Any = np.inf,
+        *,
+        size: int | None = None,
+        magnitude: float | None = None,
     ) -> None:
         if not (hasattr(F, "value") and hasattr(F, "derivative")):
-            raise InputError("F must be an AffineMap, a SmoothMap, or an object with value(x) and derivative(x)")
+            raise InputError(
+                "F must be an AffineMap, a SmoothMap, or an object with value(x) and derivative(x)"
+            )
         low, high = bound_arrays(lower, upper)
         sizes = {int(k) for k in (getattr(F, "size", None), size) if k is not None}
         sizes |= {a.shape[0] for a in (low, high) if a.ndim == 1}
         if any(a.ndim > 1 for a in (low, high)):
             raise InputError(f"lower {low.shape} and upper {high.shape} must be numbers or vectors")
         if len(sizes) != 1:
-            raise InputError(f"the number of unknowns is not clear: F, lower, upper and size say {sorted(sizes) or 'nothing'}")
+            raise InputError(
+                f"the number of unknowns is not clear: F, lower, upper and size say {sorted(sizes) or 'nothing'}"
+            )
         self.unknowns = sizes.pop()
         self.map = F
         self.affine = bool(getattr(F, "affine", False))
@@ -82,7 +92,9 @@ class ComplementarityProblem:
         """F'(x), checked for shape."""
         derivative = self.map.derivative(x)
         if getattr(derivative, "shape", None) != (self.unknowns, self.unknowns):
-            raise InputError(f"F'(x) has shape {getattr(derivative, 'shape', None)}, expected n x n, n = {self.unknowns}")
+            raise InputError(
+                f"F'(x) has shape {getattr(derivative, 'shape', None)}, expected n x n, n = {self.unknowns}"
+            )
         return derivative
 
     @property
@@ -90,7 +102,9 @@ class ComplementarityProblem:
         """Whether F is the gradient of a quadratic: affine with a symmetric matrix."""
         if self._symmetric is None:
             self._symmetric = self.affine and bool(
-                self.map.symmetric if hasattr(self.map, "symmetric") else is_symmetric(self.derivative(self.start()))
+                self.map.symmetric
+                if hasattr(self.map, "symmetric")
+                else is_symmetric(self.derivative(self.start()))
             )
         return self._symmetric
 
@@ -144,4 +158,6 @@ class ComplementarityProblem:
         """||mid(x - upper, x - lower, F/diag F')|| relative to ||x||, evaluated afresh."""
         step = self.row_step(x)
         residual = x - np.clip(x - step * self.value(x), self.lower, self.upper)
-        return relative(float(np.linalg.norm(residual)), max(float(np.linalg.norm(x)), self.magnitude(x, step)))
+        return relative(
+            float(np.linalg.norm(residual)), max(float(np.linalg.norm(x)), self.magnitude(x, step))
+        )

@@ -42,7 +42,9 @@ class CompositeProblem:
         Naming what does not fit.
     """
 
-    def __init__(self, *, smooth: SmoothPart, cost: Cost, weights: Any = None, size: int | None = None) -> None:
+    def __init__(
+        self, *, smooth: SmoothPart, cost: Cost, weights: Any = None, size: int | None = None
+    ) -> None:
         if not isinstance(smooth, SmoothPart):
             raise InputError(f"smooth must have value, gradient and hessian, got {type(smooth).__name__}")
         own = getattr(smooth, "size", None)
@@ -85,7 +87,9 @@ class CompositeProblem:
         """The Hessian of f, checked for shape."""
         hessian = self.part.hessian(u)
         if getattr(hessian, "shape", None) != (self.unknowns, self.unknowns):
-            raise InputError(f"the Hessian has shape {getattr(hessian, 'shape', None)}, expected n x n, n = {self.unknowns}")
+            raise InputError(
+                f"the Hessian has shape {getattr(hessian, 'shape', None)}, expected n x n, n = {self.unknowns}"
+            )
         return hessian
 
     def potential(self, u: FloatArray) -> float:
@@ -142,7 +146,9 @@ class CompositeProblem:
                     dense = hessian.toarray() if hasattr(hessian, "toarray") else np.asarray(hessian)
                     root = np.sqrt(self.weights)
                     values = sla.eigvalsh(dense / np.outer(root, root))
-                    rounding = 10.0 * self.unknowns * np.finfo(float).eps * float(np.abs(values).max(initial=0.0))
+                    rounding = (
+                        10.0 * self.unknowns * np.finfo(float).eps * float(np.abs(values).max(initial=0.0))
+                    )
                     least = float(values[0]) if values.size else 0.0
                     self._strong = least if abs(least) > rounding else 0.0
         return self._strong
@@ -180,7 +186,7 @@ class LeastSquaresMap:
     """A of a `LeastSquares` part as a tracking map, so that the dual equation serves."""
 
     def __init__(self, part: LeastSquares, weights: FloatArray, work: WorkCounts) -> None:
-        self.part, self.work = part, work
+        self.part, self.work, self.weights = part, work, weights
         self.controls = InnerProduct(weights)
         self.observations = InnerProduct(part.weights)
 
@@ -192,4 +198,4 @@ class LeastSquaresMap:
     def adjoint(self, q: FloatArray) -> FloatArray:
         """W^-1 A' Wy q."""
         self.work.operator_products += 1
-        return transpose_product(self.part.A, self.part.weights * q) / self.controls.vector
+        return transpose_product(self.part.A, self.part.weights * q) / self.weights

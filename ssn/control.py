@@ -74,7 +74,9 @@ class ControlProblem:
         observation_mass: Any = None,
     ) -> None:
         if not isinstance(state, StateModel):
-            raise InputError(f"state must be a state model such as SteadyState(E), got {type(state).__name__}")
+            raise InputError(
+                f"state must be a state model such as SteadyState(E), got {type(state).__name__}"
+            )
         self.state = state
         size = state.size
         self.alpha = scalar(control_weight, "control_weight", nonnegative=True)
@@ -82,11 +84,15 @@ class ControlProblem:
         if control_operator is None:
             if mass is None:
                 raise InputError("give control_operator (B), or state_mass for a distributed control")
-            self.control_operator: Any = sp.csr_array(sp.diags_array(mass)) if isinstance(mass, np.ndarray) else mass
+            self.control_operator: Any = (
+                sp.csr_array(sp.diags_array(mass)) if isinstance(mass, np.ndarray) else mass
+            )
         else:
             self.control_operator = as_matrix(control_operator, "control_operator", shape=(size, None))
         n = int(self.control_operator.shape[1])
-        self.observation = None if observation is None else as_matrix(observation, "observation", shape=(None, size))
+        self.observation = (
+            None if observation is None else as_matrix(observation, "observation", shape=(None, size))
+        )
         m = size if self.observation is None else int(self.observation.shape[0])
         used = control_operator is None
         weight = _mass(observation_mass, "observation_mass", m)

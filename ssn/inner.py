@@ -24,7 +24,9 @@ class InnerProduct:
             self.size = self.matrix.shape[0]
             diagonal = self.matrix.diagonal()
             if (diagonal <= 0).any():
-                raise InputError(f"{name} has a nonpositive diagonal entry at {int(np.argmax(diagonal <= 0))}")
+                raise InputError(
+                    f"{name} has a nonpositive diagonal entry at {int(np.argmax(diagonal <= 0))}"
+                )
         else:
             self.vector = np.asarray(weight, dtype=np.float64)
             self.size = self.vector.size
@@ -33,6 +35,7 @@ class InnerProduct:
         """W x for a vector (n,)."""
         if self.vector is not None:
             return self.vector * x
+        assert self.matrix is not None
         return np.asarray(self.matrix @ x)
 
     def dot(self, x: FloatArray, y: FloatArray) -> float:

@@ -38,6 +38,8 @@ class Limits:
 
 
 TIGHT = 1e-12
+# steps without any progress near rounding level after which a solve counts as stalled
+STAGNANT_STEPS = 8
 
 
 @dataclass
@@ -85,12 +87,20 @@ def run(
             if index - first_index >= limits.max_steps:
                 result.message = f"{limits.max_steps} steps taken"
                 return result
+            if _stagnant(result, top_norm):
+                result.outcome, result.message = (
+                    Outcome.STALLED,
+                    "no more progress: the residual is at rounding level",
+                )
+                return result
             repeated = _recurrence(seen, at, index)
             if repeated is not None:
                 stricter = globalization.tightened()
                 if stricter is None and globalization.name == "full":
                     result.outcome = Outcome.CYCLING
-                    result.message = f"the active sets and residual of step {repeated} came back at step {index - 1}"
+                    result.message = (
+                        f"the active sets and residual of step {repeated} came back at step {index - 1}"
+                    )
                     return result
                 if stricter is not None:
                     globalization = stricter
@@ -106,7 +116,9 @@ def run(
             top_norm = max(top_norm, new.norm)
             reason = step.reason
             if repeated is not None:
-                reason = (reason + "; " if reason else "") + f"active sets of step {repeated} recurred: stricter search"
+                reason = (
+                    reason + "; " if reason else ""
+                ) + f"active sets of step {repeated} recurred: stricter search"
             record = StepRecord(
                 index=index,
                 residual_norm=new.norm,
@@ -137,6 +149,18 @@ def run(
     except KeyboardInterrupt:
         result.outcome = Outcome.INTERRUPTED
     return result
+
+
+def _stagnant(result: LoopResult, top_norm: float) -> bool:
+    """Whether neither accuracy nor residual norm has improved in the last steps, near rounding level."""
+    recent = result.steps[-STAGNANT_STEPS:]
+    earlier = result.steps[:-STAGNANT_STEPS]
+    if len(recent) < STAGNANT_STEPS or not earlier or recent[-1].residual_norm > 1e-7 * top_norm:
+        return False
+    return all(
+        min(getattr(s, figure) for s in recent) > 0.9 * min(getattr(s, figure) for s in earlier)
+        for figure in ("accuracy", "residual_norm")
+    )
 
 
 def _recurrence(seen: dict[bytes, list[tuple[int, float]]], at: Evaluation, index: int) -> int | None:

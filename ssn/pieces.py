@@ -25,7 +25,9 @@ class Pieces(Mapping[str, LabelArray]):
     __slots__ = ("_digest", "_labels", "legend")
 
     def __init__(
-        self, labels: Mapping[str, npt.ArrayLike] | None = None, legend: Mapping[str, tuple[str, ...]] | None = None
+        self,
+        labels: Mapping[str, npt.ArrayLike] | None = None,
+        legend: Mapping[str, tuple[str, ...]] | None = None,
     ) -> None:
         frozen: dict[str, LabelArray] = {}
         for name, given in (labels or {}).items():

@@ -162,7 +162,9 @@ class NewtonEquation(Protocol):
         """Residual, norm, accuracy, pieces."""
         ...
 
-    def merit_line(self, at: Evaluation, direction: FloatArray) -> Callable[[float], tuple[float, float]] | None:
+    def merit_line(
+        self, at: Evaluation, direction: FloatArray
+    ) -> Callable[[float], tuple[float, float]] | None:
         """A function t -> (merit slope, its derivative) along x + t d where that is cheap, else None."""
         ...
 
@@ -206,7 +208,10 @@ class Direction:
 class LinearSolver(Protocol):
     """Solves the Newton systems of one equation; keeps between steps what does not change."""
 
-    name: str
+    @property
+    def name(self) -> str:
+        """Its name in options and histories."""
+        ...
 
     def solve(self, at: Evaluation, forcing: float) -> Direction:
         """Return d with ||G(x) d + F(x)|| <= forcing ||F(x)||."""
@@ -230,12 +235,15 @@ class StepOutcome:
 class Globalization(Protocol):
     """Turns a direction into the next point."""
 
-    name: str
+    @property
+    def name(self) -> str:
+        """Its name in options and histories."""
+        ...
 
     def advance(self, equation: Any, at: Evaluation, direction: Direction) -> StepOutcome:
         """Return the next point, or an outcome without one and the reason."""
         ...
 
-    def tightened(self) -> Globalization | None:
+    def tightened(self) -> Any:
         """A stricter variant, taken when active sets recur; None if there is none."""
         ...

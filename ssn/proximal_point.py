@@ -22,15 +22,37 @@ from .protocols import FloatArray, Globalization
 from .records import StepRecord
 from .status import Outcome
 
+# relative error of S*(S u - z), with room for the condition of the state operator
+ROUNDING = 1e-13
+
+
+# Newton steps at most at one point: a hard point is given up and taken up again with a larger parameter
+POINT_STEPS = 40
+
 
 @dataclass(frozen=True)
 class ProximalPointPath:
-    """First parameter as a fraction of ||S||^2, factor, least fraction, and how many points at most."""
+    """First parameter as a fraction of ||S||^2, factor, and how many points at most.
+
+    A parameter so small that v = (h - S* q)/a would lose the digits that the tolerance asks for is not taken; the path
+    then goes on with the last one.
+    """
 
     first: float = 1e-2
     factor: float = 0.1
-    least: float = 1e-7
-    max_points: int = 60
+    max_points: int = 200
+
+    def next_factor(self, steps: int) -> float:
+        """The change of a after a point that took so many Newton steps: fall when easy, rise when hard."""
+        if steps <= 8:
+            return self.factor
+        return (
+            float(np.sqrt(self.factor))
+            if steps <= 15
+            else 1.0
+            if steps <= 25
+            else 1.0 / float(np.sqrt(self.factor))
+        )
 
 
 @dataclass
@@ -52,8 +74,13 @@ def follow(
     limits: Limits,
     path: ProximalPointPath,
     callback: Callable[[StepRecord], None] | None,
+    finish: Callable[[FloatArray, int, int], LoopResult | None] | None = None,
 ) -> PathResult:
-    """Run the path from the control `start`; `size` is ||S||^2."""
+    """Run the path from the control `start`; `size` is ||S||^2.
+
+    After every point ``finish(control, first_index, steps_left)`` may try to end the solve by plain Newton steps on the
+    natural residual; its result is taken where it converged.
+    """
     alpha = path.first * size
     control = start
     solver = None
@@ -67,13 +94,16 @@ def follow(
         if x is None:
             x = equation.start(control)
         left = max(limits.max_steps - len(steps), 1)
-        inner = replace(limits, tolerance=max(inner_tolerance, 0.1 * limits.tolerance), max_steps=left)
+        inner = replace(
+            limits, tolerance=max(inner_tolerance, 0.1 * limits.tolerance), max_steps=min(left, POINT_STEPS)
+        )
         loop = run(
             equation, solver, globalization(), x, inner,
             callback=callback, first_index=len(steps) + 1, stage=f"proximal weight {alpha:.1e}",
         )  # fmt: skip
         if point == 1:
             start_norm, start_accuracy = loop.start_norm, loop.start_accuracy
+        taken = len(steps)
         steps.extend(loop.steps)
         new = loop.last.data.corrected if loop.last.data is not None else control
         controls = equation.tracking.controls
@@ -81,17 +111,24 @@ def follow(
         x, control = loop.last.x, new
         loop.steps, loop.start_norm, loop.start_accuracy = steps, start_norm, start_accuracy
         inner_limited = inner.tolerance > 0.1 * limits.tolerance
-        if loop.outcome not in (Outcome.CONVERGED, Outcome.STALLED):
+        if loop.outcome not in (Outcome.CONVERGED, Outcome.STALLED, Outcome.STEP_LIMIT):
             break
-        if change <= limits.tolerance and not inner_limited:
+        if finish is not None:
+            ended = finish(control, len(steps) + 1, limits.max_steps - len(steps))
+            if ended is not None:
+                ended.steps = steps + ended.steps
+                ended.start_norm, ended.start_accuracy = start_norm, start_accuracy
+                return PathResult(ended, equation, ended.best.data.moved, point)
+        if change <= limits.tolerance and not inner_limited and loop.outcome is Outcome.CONVERGED:
             loop.outcome = Outcome.CONVERGED
             break
         if len(steps) >= limits.max_steps:
             loop.outcome, loop.message = Outcome.STEP_LIMIT, f"{limits.max_steps} steps taken"
             break
         inner_tolerance = min(0.1 * inner_tolerance, 0.1 * change)
-        if alpha > path.least * size:
-            alpha *= path.factor
+        data_size = np.sqrt(size) * equation.tracking.observations.norm(equation.target)
+        floor = ROUNDING * data_size / (limits.tolerance * max(controls.norm(control), 1e-300))
+        alpha = max(alpha * path.next_factor(len(steps) - taken), min(alpha, floor))
         loop.outcome, loop.message = Outcome.STEP_LIMIT, f"{point} points of the proximal path taken"
     return PathResult(loop, equation, control, point)
 

@@ -86,13 +86,19 @@ def proximal_gradient(
     tolerance = scalar(tolerance, "tolerance", positive=True)
     max_iterations = count(max_iterations, "max_iterations")
     if not hasattr(problem, "smooth") or (hasattr(problem, "symmetric") and not problem.symmetric):
-        raise InputError("proximal_gradient needs an objective; use extragradient for complementarity without one")
+        raise InputError(
+            "proximal_gradient needs an objective; use extragradient for complementarity without one"
+        )
     controls, cost = problem.controls, problem.cost
     mu = float(problem.strong_convexity)
     affine = bool(getattr(problem, "affine", True))
     before = problem.work.copy()
     began = time.monotonic()
-    u = np.zeros(problem.unknowns) if start is None else float_array(start, "start", shape=(problem.unknowns,))
+    u = (
+        np.zeros(problem.unknowns)
+        if start is None
+        else float_array(start, "start", shape=(problem.unknowns,))
+    )
     u = cost.prox(u, 1e-300)
     _, gradient = problem.smooth(u)
     y, gradient_y = u, gradient
@@ -110,7 +116,11 @@ def proximal_gradient(
             gap_norm = controls.norm(gap)
             curvature = controls.dot(gradient_z - gradient_y, gap)
             noise = 1e-14 * controls.norm(gradient_z) * gap_norm
-            if not np.isfinite(curvature) or curvature <= lipschitz * gap_norm**2 + noise or lipschitz > 1e300:
+            if (
+                not np.isfinite(curvature)
+                or curvature <= lipschitz * gap_norm**2 + noise
+                or lipschitz > 1e300
+            ):
                 break
             lipschitz *= 2.0
         if not (np.isfinite(gap_norm) and np.isfinite(gradient_z).all()):

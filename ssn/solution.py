@@ -11,6 +11,7 @@ import numpy.typing as npt
 
 from .errors import NotConverged
 from .pieces import Pieces
+from .plotting import plot_history
 from .records import Certificate, StepRecord
 from .status import Outcome
 from .work import WorkCounts
@@ -90,7 +91,10 @@ class Solution:
     def require(self) -> Solution:
         """Return self, or raise `NotConverged` (with this solution attached) unless converged."""
         if not self.converged:
-            raise NotConverged(f"{self.outcome.value}: {self.message or self.outcome.explanation} {self.outcome.advice}", self)
+            raise NotConverged(
+                f"{self.outcome.value}: {self.message or self.outcome.explanation} {self.outcome.advice}",
+                self,
+            )
         return self
 
     @property
@@ -100,7 +104,9 @@ class Solution:
 
     def history(self) -> str:
         """Return the steps as a text table."""
-        lines = [f"{'step':>4} {'residual':>9} {'accuracy':>9} {'length':>7} {'inner':>5} {'changes':>8}  action"]
+        lines = [
+            f"{'step':>4} {'residual':>9} {'accuracy':>9} {'length':>7} {'inner':>5} {'changes':>8}  action"
+        ]
         lines.append(f"{0:>4} {self.start_norm:9.1e}")
         for s in self.steps:
             changes = "-" if s.piece_changes is None else str(s.piece_changes)
@@ -124,6 +130,4 @@ class Solution:
         MissingExtraError
             Where matplotlib is not installed.
         """
-        from .plotting import plot_history
-
         return plot_history(self, path)

@@ -14,16 +14,15 @@ from .control import ControlProblem
 from .equations.complementarity import MidEquation
 from .equations.dual import DualEquation
 from .equations.general import GeneralEquation
-from .equations.natural import NaturalEquation
+from .equations.natural import NaturalEquation, NaturalPoint
 from .errors import InputError, SolveInterrupted
 from .globalization import CATALOGUE, DualSearch, EnvelopeSearch, FullStep, ResidualSearch
 from .inner import relative
-from .linear.general import GeneralSolver
-from .linear.reduced import ReducedSolver
-from .linear.subspace import SubspaceSolver
+from .linear import CATALOGUE as LINEAR
+from .linear import GeneralSolver, ReducedSolver, SubspaceSolver
 from .newton import Limits, LoopResult, run
-from .proximal_point import ProximalPointPath, follow, operator_size
 from .protocols import FloatArray, Globalization, LinearSolver
+from .proximal_point import ProximalPointPath, follow, operator_size
 from .records import StepRecord
 from .smooth import LeastSquares
 from .solution import Solution
@@ -32,7 +31,10 @@ from .validate import count, float_array, scalar
 
 Callback = Callable[[StepRecord], None]
 
-LINEAR_CHOICES = ("auto", "subspace", "reduced", "general")
+# plain Newton steps on the natural residual that end a proximal point path
+POLISH_STEPS = 6
+
+LINEAR_CHOICES = ("auto", *LINEAR)
 
 
 @dataclass
@@ -46,6 +48,7 @@ class Plan:
     start: FloatArray
     choices: dict[str, str]
     path: ProximalPointPath | None = None
+    polish: NaturalEquation | None = None
 
 
 def solve(
@@ -95,7 +98,8 @@ def solve(
         On Ctrl-C, with the best iterate attached.
     """
     limits = Limits(
-        tolerance=scalar(tolerance, "tolerance", positive=True), max_steps=count(max_steps, "max_steps", least=0)
+        tolerance=scalar(tolerance, "tolerance", positive=True),
+        max_steps=count(max_steps, "max_steps", least=0),
     )
     if callback is not None and not callable(callback):
         raise InputError(f"callback must be callable, got {type(callback).__name__}")
@@ -121,7 +125,9 @@ def prepare(
     if linear not in LINEAR_CHOICES:
         raise InputError(f"linear must be one of {', '.join(LINEAR_CHOICES)}, got {linear!r}")
     if isinstance(globalization, str) and globalization != "auto" and globalization not in CATALOGUE:
-        raise InputError(f"globalization must be 'auto', {', '.join(map(repr, CATALOGUE))}, got {globalization!r}")
+        raise InputError(
+            f"globalization must be 'auto', {', '.join(map(repr, CATALOGUE))}, got {globalization!r}"
+        )
     if isinstance(problem, ControlProblem):
         plan = _prepare_control(problem, start)
     elif isinstance(problem, CompositeProblem):
@@ -132,11 +138,13 @@ def prepare(
         plan = _prepare_equation(problem, start)
     elif callable(problem):
         raise InputError(
-            "a plain function brings no derivative: give an object with residual(x) and linearize(x) -> ssn.Linearization"
+            "a plain function brings no derivative: give an object with residual(x) and "
+            "linearize(x) -> ssn.Linearization"
         )
     else:
         raise InputError(
-            f"cannot solve a {type(problem).__name__}: give a ControlProblem, CompositeProblem, ComplementarityProblem, "
+            f"cannot solve a {type(problem).__name__}: give a ControlProblem, CompositeProblem, "
+            "ComplementarityProblem, "
             "or an object with residual(x) and linearize(x)"
         )
     if linear not in ("auto", plan.solver.name):
@@ -154,7 +162,9 @@ def _forced(choice: str | Globalization, equation: Any) -> Globalization:
     if isinstance(made, DualSearch) and not isinstance(equation, DualEquation):
         raise InputError("globalization='dual' needs a control problem or least squares with a convex cost")
     if isinstance(made, EnvelopeSearch) and getattr(equation, "potential", None) is None:
-        raise InputError("globalization='envelope' needs an objective: a composite problem or symmetric complementarity")
+        raise InputError(
+            "globalization='envelope' needs an objective: a composite problem or symmetric complementarity"
+        )
     return made.fresh() if isinstance(made, ResidualSearch) else made
 
 
@@ -194,8 +204,21 @@ def _prepare_composite(problem: CompositeProblem, start: Any, globalization: Any
             "path": "proximal point: no strong convexity is assumed",
         }
         x = np.zeros(problem.unknowns) if u is None else u
-        return Plan(problem, equation, SubspaceSolver(equation), DualSearch(), x, choices, ProximalPointPath())
-    equation = NaturalEquation(
+        return Plan(
+            problem, equation, SubspaceSolver(equation), DualSearch(), x, choices, ProximalPointPath(),
+            _natural_equation(problem),
+        )  # fmt: skip
+    equation = _natural_equation(problem)
+    x = problem.cost.prox(np.zeros(problem.unknowns) if u is None else u, 1e-300)
+    choices = {
+        "equation": "natural residual",
+        "globalization": "envelope: the forward-backward envelope falls at every step",
+    }
+    return Plan(problem, equation, ReducedSolver(equation), EnvelopeSearch(), x if u is None else u, choices)
+
+
+def _natural_equation(problem: CompositeProblem) -> NaturalEquation:
+    return NaturalEquation(
         problem,
         problem.cost,
         problem.natural_step(),
@@ -203,12 +226,6 @@ def _prepare_composite(problem: CompositeProblem, start: Any, globalization: Any
         potential=problem.potential,
         work=problem.work,
     )
-    x = problem.cost.prox(np.zeros(problem.unknowns) if u is None else u, 1e-300)
-    choices = {
-        "equation": "natural residual",
-        "globalization": "envelope: the forward-backward envelope falls at every step",
-    }
-    return Plan(problem, equation, ReducedSolver(equation), EnvelopeSearch(), x if u is None else u, choices)
 
 
 def _prepare_complementarity(problem: ComplementarityProblem, start: Any) -> Plan:
@@ -219,7 +236,11 @@ def _prepare_complementarity(problem: ComplementarityProblem, start: Any) -> Pla
     choices = {
         "equation": "mid(x - upper, x - lower, F / |diagonal of F'|)",
         "globalization": "residual: nonmonotone, "
-        + ("projected gradient behind it" if problem.symmetric else "Fischer-Burmeister least squares behind it"),
+        + (
+            "projected gradient behind it"
+            if problem.symmetric
+            else "Fischer-Burmeister least squares behind it"
+        ),
     }
     return Plan(problem, equation, ReducedSolver(equation), ResidualSearch().fresh(), x, choices)
 
@@ -230,7 +251,10 @@ def _prepare_equation(problem: Any, start: Any) -> Plan:
         raise InputError("give start: an Equation does not tell its number of unknowns")
     x = float_array(given, "start", ndim=1)
     equation = GeneralEquation(problem, x.size)
-    choices = {"equation": "given by the caller", "globalization": "residual: nonmonotone, least squares behind it"}
+    choices = {
+        "equation": "given by the caller",
+        "globalization": "residual: nonmonotone, least squares behind it",
+    }
     return Plan(problem, equation, GeneralSolver(equation), ResidualSearch().fresh(), x, choices)
 
 
@@ -247,10 +271,37 @@ def _run_path(plan: Plan, limits: Limits, callback: Callback | None, before: Any
             solver.carry_over(previous)
         return solver
 
+    natural = plan.polish
+
+    def finish(control: FloatArray, first_index: int, left: int) -> LoopResult | None:
+        assert natural is not None
+        short = Limits(limits.tolerance, min(left, POLISH_STEPS))
+        ended = run(
+            natural, ReducedSolver(natural), EnvelopeSearch(), control, short,
+            callback=callback, first_index=first_index, stage="natural residual",
+        )  # fmt: skip
+        return ended if ended.outcome in (Outcome.CONVERGED, Outcome.STOPPED, Outcome.INTERRUPTED) else None
+
     kind = type(plan.globalization)
     size = operator_size(base.tracking)
-    result = follow(make_equation, make_solver, kind, plan.start, size, limits, plan.path, callback)
-    plan.equation = result.equation
+    result = follow(
+        make_equation,
+        make_solver,
+        kind,
+        plan.start,
+        size,
+        limits,
+        plan.path,
+        callback,
+        finish if natural else None,
+    )
+    plan.equation = (
+        natural
+        if natural is not None
+        and result.loop.best.data is not None
+        and isinstance(result.loop.best.data, NaturalPoint)
+        else result.equation
+    )
     return _finish(plan, result.loop, limits, before)
 
 
@@ -364,7 +415,9 @@ def _finish_complementarity(plan: Plan, result: LoopResult) -> tuple[FloatArray,
     force = problem.value(x)
     step = plan.equation.step
     residual = x - np.clip(x - step * force, problem.lower, problem.upper)
-    accuracy = relative(float(np.linalg.norm(residual)), max(float(np.linalg.norm(x)), plan.equation.magnitude))
+    accuracy = relative(
+        float(np.linalg.norm(residual)), max(float(np.linalg.norm(x)), plan.equation.magnitude)
+    )
     v = x - step * force
     pieces = problem.cost.pieces(v, 1.0)
     on_bound = pieces["control"] != 1

@@ -66,13 +66,17 @@ class SteadyState:
     def __init__(self, E: Any, *, solver: str = "auto", accuracy: float = 1e-12) -> None:
         self.matrix = as_square(E, "E")
         if isinstance(self.matrix, LinearOperator):
-            raise InputError("SteadyState needs an explicit matrix E; give an object with the StateModel members instead")
+            raise InputError(
+                "SteadyState needs an explicit matrix E; give an object with the StateModel members instead"
+            )
         if solver not in ("auto", "direct", "multigrid"):
             raise InputError(f"solver must be 'auto', 'direct' or 'multigrid', got {solver!r}")
         self.size = int(self.matrix.shape[0])
         self.symmetric = is_symmetric(self.matrix)
         if solver == "multigrid" and not (self.symmetric and (self.matrix.diagonal() > 0).all()):
-            raise InputError("solver='multigrid' needs a symmetric E with a positive diagonal; use solver='direct'")
+            raise InputError(
+                "solver='multigrid' needs a symmetric E with a positive diagonal; use solver='direct'"
+            )
         self.work = WorkCounts()
         self._solver = solver
         self._accuracy = accuracy

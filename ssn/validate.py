@@ -14,7 +14,12 @@ FloatArray = npt.NDArray[np.float64]
 
 
 def float_array(
-    value: Any, name: str, *, shape: tuple[int, ...] | None = None, finite: bool = True, ndim: int | None = None
+    value: Any,
+    name: str,
+    *,
+    shape: tuple[int, ...] | None = None,
+    finite: bool = True,
+    ndim: int | None = None,
 ) -> FloatArray:
     """Return `value` as a new float64 array, or raise `InputError` naming the first bad entry.
 
@@ -35,7 +40,9 @@ def float_array(
     if bad.any():
         index = tuple(int(i) for i in np.argwhere(bad)[0])
         where = f"{name}[{', '.join(map(str, index))}]" if index else name
-        raise InputError(f"{where} is {array[index]}: {int(bad.sum())} entr(y/ies) not usable; check the input")
+        raise InputError(
+            f"{where} is {array[index]}: {int(bad.sum())} entr(y/ies) not usable; check the input"
+        )
     return array
 
 
@@ -80,7 +87,9 @@ def weight_array(value: Any, name: str, size: int) -> FloatArray:
     return array
 
 
-def bound_arrays(lower: Any, upper: Any, *, names: tuple[str, str] = ("lower", "upper")) -> tuple[FloatArray, FloatArray]:
+def bound_arrays(
+    lower: Any, upper: Any, *, names: tuple[str, str] = ("lower", "upper")
+) -> tuple[FloatArray, FloatArray]:
     """Return bounds as arrays (scalars stay zero-dimensional); infinite entries are allowed, crossing ones not."""
     low = float_array(lower, names[0], finite=False)
     high = float_array(upper, names[1], finite=False)
@@ -91,10 +100,14 @@ def bound_arrays(lower: Any, upper: Any, *, names: tuple[str, str] = ("lower", "
     try:
         crossed = np.asarray(low > high)
     except ValueError as error:
-        raise InputError(f"{names[0]} {low.shape} and {names[1]} {high.shape} do not broadcast together") from error
+        raise InputError(
+            f"{names[0]} {low.shape} and {names[1]} {high.shape} do not broadcast together"
+        ) from error
     if crossed.any():
         index = tuple(int(i) for i in np.argwhere(crossed)[0])
         at = f" at index {', '.join(map(str, index))}" if index else ""
         full_low, full_high = np.broadcast_arrays(low, high)
-        raise InputError(f"{names[0]} {full_low[index]} > {names[1]} {full_high[index]}{at}: no value lies between")
+        raise InputError(
+            f"{names[0]} {full_low[index]} > {names[1]} {full_high[index]}{at}: no value lies between"
+        )
     return low, high

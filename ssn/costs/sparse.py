@@ -54,17 +54,22 @@ class SparseCost:
         try:
             self._shape: tuple[int, ...] = np.broadcast_shapes(*shapes)
         except ValueError as error:
-            raise InputError(f"beta, lower, upper have shapes {shapes} that do not broadcast together") from error
+            raise InputError(
+                f"beta, lower, upper have shapes {shapes} that do not broadcast together"
+            ) from error
         for array in (self.beta, self.lower, self.upper):
             array.setflags(write=False)
 
     def __repr__(self) -> str:
-        return f"{type(self).__name__}(beta={_brief(self.beta)}, lower={_brief(self.lower)}, upper={_brief(self.upper)})"
+        beta, lower, upper = (_brief(a) for a in (self.beta, self.lower, self.upper))
+        return f"{type(self).__name__}(beta={beta}, lower={lower}, upper={upper})"
 
     def check_size(self, size: int) -> None:
         """Raise `InputError` unless the parameters fit `size` unknowns."""
         if self._shape not in ((), (1,), (size,)):
-            raise InputError(f"{type(self).__name__} has parameters of shape {self._shape} for {size} unknowns")
+            raise InputError(
+                f"{type(self).__name__} has parameters of shape {self._shape} for {size} unknowns"
+            )
 
     def value(self, u: FloatArray, weights: FloatArray | None = None) -> float:
         """Return g(u); inf where a bound is violated."""
@@ -130,7 +135,9 @@ class SparseCost:
         t = step * self.beta
         u = v if not self.beta.any() else smooth_max(v - t, zero) - smooth_max(-v - t, zero)
         with np.errstate(invalid="ignore"):
-            raised = np.where(np.isfinite(self.lower), smooth_max(u, np.where(np.isfinite(self.lower), self.lower, 0.0)), u)
+            raised = np.where(
+                np.isfinite(self.lower), smooth_max(u, np.where(np.isfinite(self.lower), self.lower, 0.0)), u
+            )
             top = np.where(np.isfinite(self.upper), self.upper, 0.0)
             return np.where(np.isfinite(self.upper), -smooth_max(-raised, -top), raised)
 

@@ -28,7 +28,13 @@ class MidEquation(NaturalEquation):
     def __init__(self, problem: Any, step: FloatArray, magnitude: float) -> None:
         potential = problem.potential if problem.symmetric else None
         super().__init__(
-            problem, problem.cost, step, problem.weights, potential=potential, magnitude=magnitude, work=problem.work
+            problem,
+            problem.cost,
+            step,
+            problem.weights,
+            potential=potential,
+            magnitude=magnitude,
+            work=problem.work,
         )
         self.preferred_search = "residual"
         self.lower, self.upper = problem.lower, problem.upper
@@ -49,7 +55,11 @@ class MidEquation(NaturalEquation):
 
     def _projected_gradient(self, at: Evaluation) -> FallbackStep | None:
         assert self.potential is not None
-        here = self.potential(at.x) if not (at.x < self.lower).any() and not (at.x > self.upper).any() else np.inf
+        here = (
+            self.potential(at.x)
+            if not (at.x < self.lower).any() and not (at.x > self.upper).any()
+            else np.inf
+        )
         t = 1.0
         for _ in range(40):
             x = np.clip(at.x - t * self.step * at.data.force, self.lower, self.upper)
@@ -80,7 +90,10 @@ class FischerBurmeister:
             a, b = (high - x)[has_high], -f[has_high]
             root = np.hypot(a, b)
             safe = np.where(root > 0, root, 1.0)
-            pa, pb = np.where(root > 0, a / safe, np.sqrt(0.5)) - 1, np.where(root > 0, b / safe, np.sqrt(0.5)) - 1
+            pa, pb = (
+                np.where(root > 0, a / safe, np.sqrt(0.5)) - 1,
+                np.where(root > 0, b / safe, np.sqrt(0.5)) - 1,
+            )
             value[has_high] = root - a - b
             dx[has_high], df[has_high] = -pa, -pb
         has_low = np.isfinite(low)
@@ -88,7 +101,10 @@ class FischerBurmeister:
             a, b = (x - low)[has_low], value[has_low]
             root = np.hypot(a, b)
             safe = np.where(root > 0, root, 1.0)
-            pa, pb = 1 - np.where(root > 0, a / safe, np.sqrt(0.5)), 1 - np.where(root > 0, b / safe, np.sqrt(0.5))
+            pa, pb = (
+                1 - np.where(root > 0, a / safe, np.sqrt(0.5)),
+                1 - np.where(root > 0, b / safe, np.sqrt(0.5)),
+            )
             value[has_low] = a + b - root
             dx[has_low] = pa + pb * dx[has_low]
             df[has_low] = pb * df[has_low]

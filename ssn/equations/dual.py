@@ -85,7 +85,12 @@ class DualEquation:
     preferred_search = "dual"
 
     def __init__(
-        self, tracking: TrackingMap, target: FloatArray, alpha: float, cost: Cost, linear: FloatArray | None = None
+        self,
+        tracking: TrackingMap,
+        target: FloatArray,
+        alpha: float,
+        cost: Cost,
+        linear: FloatArray | None = None,
     ) -> None:
         self.tracking, self.target, self.alpha, self.cost = tracking, target, alpha, cost
         self.linear = linear
@@ -123,7 +128,9 @@ class DualEquation:
         lifted = self.tracking.adjoint(residual)
         # q - r = S u - z is the true dual variable of u
         corrected = self.prox(v + lifted / self.alpha)
-        accuracy = relative(self.tracking.controls.norm(u - corrected), self.tracking.controls.norm(corrected))
+        accuracy = relative(
+            self.tracking.controls.norm(u - corrected), self.tracking.controls.norm(corrected)
+        )
         step = 1.0 / self.alpha
         data = DualPoint(q, v, u, observed, lifted, corrected, self.cost.prox_derivative(v, step))
         return Evaluation(x, residual, norm, accuracy, self.cost.pieces(v, step), data)

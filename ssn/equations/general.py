@@ -50,7 +50,9 @@ class GeneralEquation:
         self.work.operator_products += 1
         with np.errstate(all="ignore"):
             residual = self._checked(self.user.residual(x.copy()), "the residual")
-        norm = float(np.sqrt(np.mean((residual / self.scale) ** 2))) if np.isfinite(residual).all() else np.inf
+        norm = (
+            float(np.sqrt(np.mean((residual / self.scale) ** 2))) if np.isfinite(residual).all() else np.inf
+        )
         if not np.isfinite(norm):
             return Evaluation(x, residual, np.inf, np.inf, Pieces())
         linearization = self.linearize(x)
@@ -82,9 +84,13 @@ class GeneralEquation:
         weighted = at.residual / self.scale**2
         gradient = transpose_product(derivative, weighted)
         if isinstance(derivative, LinearOperator):
-            size = float(np.linalg.norm(derivative @ at.residual)) / max(float(np.linalg.norm(at.residual)), 1e-300)
+            size = float(np.linalg.norm(derivative @ at.residual)) / max(
+                float(np.linalg.norm(at.residual)), 1e-300
+            )
         else:
-            size = float(np.sqrt(abs(derivative).power(2).sum() if sp.issparse(derivative) else (derivative**2).sum()))
+            size = float(
+                np.sqrt(abs(derivative).power(2).sum() if sp.issparse(derivative) else (derivative**2).sum())
+            )
         return bool(np.linalg.norm(gradient) <= 1e-6 * size * np.linalg.norm(weighted))
 
     def fallback(self, at: Evaluation) -> FallbackStep | None:
@@ -93,7 +99,9 @@ class GeneralEquation:
         return least_squares_step(self, at, derivative, np.broadcast_to(1.0 / self.scale, (self.size,)))
 
 
-def least_squares_step(equation: Any, at: Evaluation, derivative: Any, row_scale: FloatArray) -> FallbackStep | None:
+def least_squares_step(
+    equation: Any, at: Evaluation, derivative: Any, row_scale: FloatArray
+) -> FallbackStep | None:
     """The first of a family of regularised least-squares steps that lowers the squared residual.
 
     (G' W^2 G + mu diag) d = -G' W^2 F with mu = 1e-6, 1e-4, ..., 1e6; along -G'F by backtracking for an operator G.
@@ -121,7 +129,9 @@ def least_squares_step(equation: Any, at: Evaluation, derivative: Any, row_scale
                 return FallbackStep(at.x - t * gradient, "steepest descent", gain)
             t *= 0.25
         return None
-    weighted = sp.diags_array(row_scale) @ derivative if sp.issparse(derivative) else row_scale[:, None] * derivative
+    weighted = (
+        sp.diags_array(row_scale) @ derivative if sp.issparse(derivative) else row_scale[:, None] * derivative
+    )
     normal = weighted.T @ weighted
     diagonal = normal.diagonal()
     diagonal = np.maximum(diagonal, 1e-8 * max(float(diagonal.max()), 1e-300))

@@ -44,7 +44,9 @@ class EnvelopeSearch:
             reason = "no length along the Newton direction lowers the envelope"
         trial = equation.evaluate(safe)
         if not trial.finite or (safe == at.x).all():
-            return StepOutcome(None, 0.0, evaluations + 1, "none", reason or "the proximal gradient step stands still")
+            return StepOutcome(
+                None, 0.0, evaluations + 1, "none", reason or "the proximal gradient step stands still"
+            )
         return StepOutcome(trial, 0.0, evaluations + 1, "proximal gradient", reason)
 
     def tightened(self) -> None:

@@ -49,7 +49,11 @@ class ResidualSearch:
                 trial = equation.evaluate(at.x + t * direction.vector)
                 evaluations += 1
                 finite_trial |= trial.finite
-                if trial.finite and trial.norm <= (1.0 - self.sigma * t) * reference and not (trial.x == at.x).all():
+                if (
+                    trial.finite
+                    and trial.norm <= (1.0 - self.sigma * t) * reference
+                    and not (trial.x == at.x).all()
+                ):
                     return StepOutcome(trial, t, evaluations, "full step" if t == 1.0 else "shortened")
                 t *= 0.5
         step = equation.fallback(at)
@@ -61,7 +65,9 @@ class ResidualSearch:
         trial = equation.evaluate(step.x)
         self._history.clear()
         if not trial.finite:
-            return StepOutcome(None, 0.0, evaluations + 1, "none", "the fallback step leads to NaN or infinity")
+            return StepOutcome(
+                None, 0.0, evaluations + 1, "none", "the fallback step leads to NaN or infinity"
+            )
         return StepOutcome(trial, 1.0, evaluations + 1, step.name, reason)
 
     def tightened(self) -> ResidualSearch | None:

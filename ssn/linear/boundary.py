@@ -35,7 +35,9 @@ def as_matrix(value: Any, name: str, *, shape: tuple[int | None, int | None] = (
         if bad.any():
             k = int(np.argmax(bad))
             row = int(np.searchsorted(result.indptr, k, side="right")) - 1
-            raise InputError(f"{name}[{row}, {int(result.indices[k])}] is {result.data[k]}; check the assembly")
+            raise InputError(
+                f"{name}[{row}, {int(result.indices[k])}] is {result.data[k]}; check the assembly"
+            )
     elif isinstance(value, LinearOperator) or (
         not isinstance(value, np.ndarray) and hasattr(value, "matvec") and hasattr(value, "shape")
     ):
@@ -44,7 +46,9 @@ def as_matrix(value: Any, name: str, *, shape: tuple[int | None, int | None] = (
         try:
             result = np.array(value, dtype=np.float64, copy=True)
         except (TypeError, ValueError) as error:
-            raise InputError(f"{name} must be a sparse matrix, an array or a LinearOperator: {error}") from error
+            raise InputError(
+                f"{name} must be a sparse matrix, an array or a LinearOperator: {error}"
+            ) from error
         if result.ndim != 2:
             raise InputError(f"{name} must have 2 dimensions, got shape {result.shape}")
         bad = ~np.isfinite(result)

@@ -81,9 +81,15 @@ class Factorization:
             return
         known = np.where(np.arange(n) % 7 < 3, -1.0, 1.0) * (1.0 + (np.arange(n) % 5) / 8.0)
         found = self.solve(np.asarray(matrix @ known))
-        error = float(np.linalg.norm(found - known) / np.linalg.norm(known)) if np.isfinite(found).all() else np.inf
+        error = (
+            float(np.linalg.norm(found - known) / np.linalg.norm(known))
+            if np.isfinite(found).all()
+            else np.inf
+        )
         if not error < LOST_DIGITS:
-            raise SingularMatrixError(f"{self.method}: a known vector is recovered with error {error:.1e} only")
+            raise SingularMatrixError(
+                f"{self.method}: a known vector is recovered with error {error:.1e} only"
+            )
 
     def _factorize(self, matrix: Any) -> None:
         if not sp.issparse(matrix):
@@ -113,7 +119,10 @@ class Factorization:
         self.method = "SuperLU"
         options: dict[str, Any] = {}
         if self.symmetric:
-            options = {"options": {"SymmetricMode": True}, "diag_pivot_thresh": 0.0 if self.positive_definite else 0.1}
+            options = {
+                "options": {"SymmetricMode": True},
+                "diag_pivot_thresh": 0.0 if self.positive_definite else 0.1,
+            }
         try:
             with warnings.catch_warnings():
                 warnings.simplefilter("ignore")
@@ -162,4 +171,8 @@ class Factorization:
 
 def _same_pattern(known: tuple[Any, Any], a: sp.csc_array) -> bool:
     indptr, indices = known
-    return indices.size == a.indices.size and np.array_equal(indptr, a.indptr) and np.array_equal(indices, a.indices)
+    return (
+        indices.size == a.indices.size
+        and np.array_equal(indptr, a.indptr)
+        and np.array_equal(indices, a.indices)
+    )

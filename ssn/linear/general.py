@@ -47,7 +47,9 @@ class GeneralSolver:
             if self._factor is not None and self._claims == claims:
                 self._factor.refactorize(matrix)
             else:
-                self._factor = Factorization(matrix, symmetric=claims[0], positive_definite=claims[1], work=work)
+                self._factor = Factorization(
+                    matrix, symmetric=claims[0], positive_definite=claims[1], work=work
+                )
                 self._claims = claims
         except SingularMatrixError as error:
             self._factor = None
@@ -57,7 +59,9 @@ class GeneralSolver:
         left = float(np.linalg.norm(matrix @ d + at.residual) / np.linalg.norm(at.residual))
         return Direction(d, left, 0, "solved" if left < 1e-6 else "inaccurate")
 
-    def _krylov(self, operator: LinearOperator, at: Evaluation, forcing: float, claims: tuple[bool, bool]) -> Direction:
+    def _krylov(
+        self, operator: LinearOperator, at: Evaluation, forcing: float, claims: tuple[bool, bool]
+    ) -> Direction:
         iterations = 0
         work = self.equation.work
 
@@ -72,7 +76,14 @@ class GeneralSolver:
             d, _ = cg(counted, -at.residual, rtol=forcing, atol=0.0, maxiter=self.max_inner)
         else:
             restart = min(100, at.x.size)
-            d, _ = gmres(counted, -at.residual, rtol=forcing, atol=0.0, maxiter=self.max_inner // restart + 1, restart=restart)
+            d, _ = gmres(
+                counted,
+                -at.residual,
+                rtol=forcing,
+                atol=0.0,
+                maxiter=self.max_inner // restart + 1,
+                restart=restart,
+            )
         left = float(np.linalg.norm(apply(d) + at.residual) / np.linalg.norm(at.residual))
         if not np.isfinite(left) or left > 0.999:
             return Direction(None, left, iterations, "singular", "the Krylov solver made no progress")

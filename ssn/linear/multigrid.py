@@ -34,7 +34,12 @@ class MultigridSolver:
     method = "multigrid"
 
     def __init__(
-        self, matrix: sp.csr_array, *, accuracy: float = 1e-12, max_iterations: int = 200, work: WorkCounts | None = None
+        self,
+        matrix: sp.csr_array,
+        *,
+        accuracy: float = 1e-12,
+        max_iterations: int = 200,
+        work: WorkCounts | None = None,
     ) -> None:
         import pyamg
 
@@ -57,7 +62,9 @@ class MultigridSolver:
         """Solve A x = rhs (A is symmetric, `transposed` changes nothing)."""
         if not rhs.any():
             return np.zeros_like(rhs)
-        x, info = cg(self.matrix, rhs, rtol=self.accuracy, atol=0.0, maxiter=self.max_iterations, M=self._cycle)
+        x, info = cg(
+            self.matrix, rhs, rtol=self.accuracy, atol=0.0, maxiter=self.max_iterations, M=self._cycle
+        )
         if info != 0:
             residual = float(np.linalg.norm(rhs - self.matrix @ x) / np.linalg.norm(rhs))
             if residual > 100 * self.accuracy:

@@ -83,7 +83,9 @@ class ReducedSolver:
         size = float(np.abs(matrix.diagonal()).max()) or 1.0
         for power in (-8, -4, 0):
             shift = size * 10.0**power
-            shifted = matrix + shift * (sp.eye_array(inactive.size) if sp.issparse(matrix) else np.eye(inactive.size))
+            shifted = matrix + shift * (
+                sp.eye_array(inactive.size) if sp.issparse(matrix) else np.eye(inactive.size)
+            )
             try:
                 factor = self._factorize(shifted)
             except SingularMatrixError:

@@ -95,7 +95,9 @@ class SubspaceSolver:
             residual = b - d - tracking.forward(derivative.apply(lifted_d)) / alpha
             residual_norm = observations.norm(residual)
             if not np.isfinite(residual_norm):
-                return Direction(None, np.inf, inner, "singular", "the Newton operator returned NaN or infinity")
+                return Direction(
+                    None, np.inf, inner, "singular", "the Newton operator returned NaN or infinity"
+                )
             if best is None or residual_norm < best[0]:
                 best = (residual_norm, d, lifted_d)
             if residual_norm <= forcing * norm_b or inner >= self.max_inner:
@@ -141,6 +143,8 @@ class SubspaceSolver:
             coefficients = basis @ observations.apply(vector)
             vector = vector - coefficients @ basis
             lifted = lifted - coefficients @ kept
+            if coefficients @ coefficients < 0.5:  # little was taken away, so rounding took nothing either
+                break
         rest = observations.norm(vector)
         if rest < LOST_ORTHOGONALITY:
             return False
@@ -159,7 +163,11 @@ class SubspaceSolver:
         """Keep the half of the subspace on which S* is largest."""
         controls = self.equation.tracking.controls
         lifted = self._lifted[: self._rank]
-        weighted = lifted * controls.vector if controls.vector is not None else np.stack([controls.apply(r) for r in lifted])
+        weighted = (
+            lifted * controls.vector
+            if controls.vector is not None
+            else np.stack([controls.apply(r) for r in lifted])
+        )
         _, vectors = sla.eigh(weighted @ lifted.T)
         keep = vectors[:, -(self._rank // 2) :].T
         rows = keep.shape[0]

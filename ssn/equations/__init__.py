@@ -1,0 +1,1 @@
+"""Equations that the Newton loop solves, one a file."""
