@@ -144,7 +144,11 @@ class ProblemFile:
         except ProblemFileError:
             raise
         except (Exception, SystemExit) as error:
-            raise self._error(_explained(error, doing), _line_in(self.path, error)) from error
+            line = _line_in(self.path, error)
+            text = _explained(error, doing)
+            if line is None and not isinstance(error, InputError):
+                text += _outside(error)
+            raise self._error(text, line) from error
 
     def _signature(self) -> Mapping[str, inspect.Parameter]:
         return inspect.signature(self.builder).parameters
@@ -273,6 +277,12 @@ def _line_in(path: Path, error: BaseException) -> int | None:
         frame.lineno for frame in traceback.extract_tb(error.__traceback__) if frame.filename == str(path)
     ]
     return lines[-1] if lines else None
+
+
+def _outside(error: BaseException) -> str:
+    """Where an exception comes from that did not pass through the problem file."""
+    frames = traceback.extract_tb(error.__traceback__)
+    return f" (at {shown(Path(frames[-1].filename))}:{frames[-1].lineno})" if frames else ""
 
 
 def _explained(error: BaseException, doing: str) -> str:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -33,6 +33,8 @@ Callback = Callable[[StepRecord], None]
 
 # plain Newton steps on the natural residual that end a proximal point path
 POLISH_STEPS = 6
+# continuations at most while the accuracy computed afresh is worse than the iteration's own figure
+CONFIRMATIONS = 3
 
 LINEAR_CHOICES = ("auto", *LINEAR)
 
@@ -111,8 +113,7 @@ def solve(
     if plan.path is not None:
         solution = _run_path(plan, limits, observer, before)
     else:
-        result = run(plan.equation, plan.solver, plan.globalization, plan.start, limits, callback=observer)
-        solution = _finish(plan, result, limits, before)
+        solution = _run_until_confirmed(plan, limits, observer, before)
     if solution.outcome is Outcome.INTERRUPTED:
         raise SolveInterrupted("solve interrupted; the best iterate is attached as .solution", solution)
     return solution
@@ -258,6 +259,32 @@ def _prepare_equation(problem: Any, start: Any) -> Plan:
     return Plan(problem, equation, GeneralSolver(equation), ResidualSearch().fresh(), x, choices)
 
 
+def _run_until_confirmed(plan: Plan, limits: Limits, callback: Callback | None, before: Any) -> Solution:
+    """Iterate; go on with a tighter inner tolerance while the accuracy at the returned point is not confirmed."""
+    result = run(plan.equation, plan.solver, plan.globalization, plan.start, limits, callback=callback)
+    solution = _finish(plan, result, limits, before)
+    inner = limits
+    for _ in range(CONFIRMATIONS):
+        if solution.outcome is not Outcome.INACCURATE or not np.isfinite(solution.accuracy):
+            break
+        left = limits.max_steps - len(result.steps)
+        inner = replace(
+            inner, tolerance=0.1 * inner.tolerance * limits.tolerance / solution.accuracy, max_steps=left
+        )
+        more = run(
+            plan.equation, plan.solver, plan.globalization, result.best.x, inner,
+            callback=callback, first_index=len(result.steps) + 1,
+        )  # fmt: skip
+        if not more.steps and more.outcome is not Outcome.INTERRUPTED:
+            break
+        more.steps, more.start_norm = result.steps + more.steps, result.start_norm
+        if more.outcome in (Outcome.STALLED, Outcome.STEP_LIMIT):
+            more.outcome = Outcome.CONVERGED  # by the iteration's own figure; confirmed or not just below
+        result = more
+        solution = _finish(plan, result, limits, before)
+    return solution
+
+
 def _run_path(plan: Plan, limits: Limits, callback: Callback | None, before: Any) -> Solution:
     assert plan.path is not None
     base: DualEquation = plan.equation
@@ -320,7 +347,7 @@ def _finish(plan: Plan, result: LoopResult, limits: Limits, before: Any) -> Solu
         fresh = plan.equation.evaluate(x.copy())
         accuracy = fresh.accuracy
     outcome, message = result.outcome, result.message
-    if outcome is Outcome.CONVERGED and not accuracy <= 10 * limits.tolerance:
+    if outcome is Outcome.CONVERGED and not accuracy <= limits.tolerance:
         outcome = Outcome.INACCURATE
         message = f"accuracy {accuracy:.1e} when computed afresh, {best.accuracy:.1e} in the iteration"
     work = plan.equation.work

@@ -1,34 +1,41 @@
 """Results for people and programs: tables and sentences, pictures, an HTML page, JSON."""
 
-from .entry import Entry
+from .entry import Entry, setting
 from .html import page
-from .tables import (
-    catalogue_table,
-    comparison,
-    history_table,
-    overview_table,
-    pairs_table,
-    solution_summary,
+from .pictures import (
+    check_picture_path,
+    embedded,
+    history_figure,
+    is_figure,
+    pictures_available,
+    rate_figure,
+    require_pictures,
+    save,
 )
+from .tables import catalogue_table, comparison, conclusion, overview_table, pairs_table, solution_summary
 from .terminal import Terminal
-from .words import Sentence, assessment_sentences, solution_sentences
-from .writer import as_text, comparison_document, plain, solution_document
+from .writer import as_text, comparison_document, solution_document
 
 __all__ = [
     "Entry",
-    "Sentence",
     "Terminal",
     "as_text",
-    "assessment_sentences",
     "catalogue_table",
+    "check_picture_path",
     "comparison",
     "comparison_document",
-    "history_table",
+    "conclusion",
+    "embedded",
+    "history_figure",
+    "is_figure",
     "overview_table",
     "page",
     "pairs_table",
-    "plain",
+    "pictures_available",
+    "rate_figure",
+    "require_pictures",
+    "save",
+    "setting",
     "solution_document",
-    "solution_sentences",
     "solution_summary",
 ]

@@ -2,11 +2,12 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass, field
 from typing import Any
 
 from ..evidence import Assessment
-from .numbers import plainly
+from .numbers import counted, plainly
 
 
 @dataclass
@@ -20,8 +21,8 @@ class Entry:
         The problem file's docstring: what, source, caution.
     summary : list of (str, str)
         What the problem file says about the solution in its own terms.
-    figures : list of (str, Figure)
-        Caption and matplotlib figure.
+    pictures : list of (str, str)
+        Caption and data URI.
     remarks : list of str
         What could not be shown, and why.
     """
@@ -29,7 +30,7 @@ class Entry:
     assessment: Assessment
     description: str = ""
     summary: list[tuple[str, str]] = field(default_factory=list)
-    figures: list[tuple[str, Any]] = field(default_factory=list)
+    pictures: list[tuple[str, str]] = field(default_factory=list)
     remarks: list[str] = field(default_factory=list)
 
     @property
@@ -41,5 +42,10 @@ class Entry:
     @property
     def setting(self) -> str:
         """The other parameters, and the number of unknowns."""
-        others = [f"{k} = {plainly(v)}" for k, v in self.assessment.parameters.items() if k != "n"]
-        return ", ".join([*others, f"{self.assessment.unknowns} unknowns"])
+        return setting(self.assessment.parameters, self.assessment.unknowns)
+
+
+def setting(parameters: Mapping[str, Any], unknowns: int) -> str:
+    """Return the parameters but the mesh size, and the number of unknowns."""
+    others = [f"{name} = {plainly(value)}" for name, value in parameters.items() if name != "n"]
+    return ", ".join([*others, counted(unknowns, "unknown")])

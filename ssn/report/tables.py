@@ -143,14 +143,18 @@ def _verdict(sentences: Sequence[Sentence]) -> Table:
     table.add_column(ratio=1)
     for sentence in sentences:
         style = STYLES.get(sentence.status, "")
-        table.add_row(Text(sentence.topic), Text(sentence.text, style="" if sentence.status == HOLDS else style))
+        table.add_row(
+            Text(sentence.topic), Text(sentence.text, style="" if sentence.status == HOLDS else style)
+        )
     return table
 
 
 def _known(assessment: Assessment) -> Table:
     table = Table(box=box.SIMPLE_HEAD, pad_edge=False)
     for column in ("known value", "expected", "computed", "tolerance", "holds", "source"):
-        table.add_column(column, justify="right" if column in ("expected", "computed", "tolerance") else "left")
+        table.add_column(
+            column, justify="right" if column in ("expected", "computed", "tolerance") else "left"
+        )
     for k in assessment.known:
         holds = Text("yes", style=STYLES[HOLDS]) if k.holds else Text("no", style=STYLES[FAILS])
         row = [plainly(k.expected), plainly(k.computed), plainly(k.tolerance)]

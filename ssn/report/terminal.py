@@ -54,13 +54,23 @@ class Terminal:
         if not self.err.is_terminal:
             yield lambda text, fraction=None: None
             return
-        columns = (SpinnerColumn(), TextColumn("{task.description}", markup=False), BarColumn(20), TimeElapsedColumn())
+        columns = (
+            SpinnerColumn(),
+            TextColumn("{task.description}", markup=False),
+            BarColumn(20),
+            TimeElapsedColumn(),
+        )
         with Progress(*columns, console=self.err, transient=True) as bar:
             task = bar.add_task(what, total=None)
 
             def report(text: str, fraction: float | None = None) -> None:
                 known = fraction is not None
-                bar.update(task, description=f"{what}: {text}", total=1.0 if known else None, completed=fraction or 0.0)
+                bar.update(
+                    task,
+                    description=f"{what}: {text}",
+                    total=1.0 if known else None,
+                    completed=fraction or 0.0,
+                )
 
             yield report
 

@@ -37,14 +37,20 @@ def assessment_sentences(assessment: Assessment) -> list[Sentence]:
     found = [*solution_sentences(solution, changes=False)]
     found += [_reference(assessment), _rate(assessment)]
     if assessment.known:
-        found.append(_counted_evidence("Known values", [k.what for k in assessment.known if not k.holds], len(assessment.known)))
+        found.append(
+            _counted_evidence(
+                "Known values", [k.what for k in assessment.known if not k.holds], len(assessment.known)
+            )
+        )
     if assessment.checks:
         failing = [f"{c.name} ({c.detail})" if c.detail else c.name for c in assessment.checks if not c.holds]
         found.append(_counted_evidence("Checks", failing, len(assessment.checks)))
     if assessment.holds:
         found.append(Sentence("Conclusion", "All evidence holds.", HOLDS))
     else:
-        found.append(Sentence("Conclusion", "Does not hold: " + "; ".join(assessment.failures()) + ".", FAILS))
+        found.append(
+            Sentence("Conclusion", "Does not hold: " + "; ".join(assessment.failures()) + ".", FAILS)
+        )
     return found
 
 
@@ -80,7 +86,9 @@ def _convergence(solution: Solution) -> Sentence:
 def _certainty(solution: Solution) -> Sentence:
     certificate = solution.certificate
     if certificate is None:
-        text = "No distance bound: the problem is not known to be strongly convex. The accuracy is a residual."
+        text = (
+            "No distance bound: the problem is not known to be strongly convex. The accuracy is a residual."
+        )
         return Sentence("Certainty", text)
     text = f"Within {small(certificate.relative)} of the exact discrete solution, relative to its size"
     text += f" ({small(certificate.bound)} in the unit of the unknown's norm; bound: {certificate.method})."
@@ -114,7 +122,8 @@ def _rate(assessment: Assessment) -> Sentence:
         )
     meaning = {
         "exact": "Exact: near the solution one step lands on it, to rounding.",
-        "superlinear": "Superlinear" + (f", observed order {rate.order:.2f}." if rate.order is not None else "."),
+        "superlinear": "Superlinear"
+        + (f", observed order {rate.order:.2f}." if rate.order is not None else "."),
         "linear": "Only linear: the contraction does not fall with the distance.",
         "none": "No contraction near the solution.",
         "undecided": "Undecided: rounding leaves too little to see.",
@@ -125,12 +134,15 @@ def _rate(assessment: Assessment) -> Sentence:
 
 def _counted_evidence(topic: str, failing: list[str], total: int) -> Sentence:
     text = f"{total - len(failing)} of {total} hold"
-    return Sentence(topic, f"{text}; not: {'; '.join(failing)}." if failing else f"{text}.", FAILS if failing else HOLDS)
+    return Sentence(
+        topic, f"{text}; not: {'; '.join(failing)}." if failing else f"{text}.", FAILS if failing else HOLDS
+    )
 
 
 def _sizes(sizes: Mapping[str, Mapping[str, int]]) -> str:
     return "; ".join(
-        f"{name}: " + ", ".join(f"{count} {piece}" for piece, count in of.items()) for name, of in sizes.items()
+        f"{name}: " + ", ".join(f"{count} {piece}" for piece, count in of.items())
+        for name, of in sizes.items()
     )
 
 

@@ -76,7 +76,7 @@ def as_text(document: Mapping[str, Any]) -> str:
 
 def plain(value: Any) -> Any:
     """Return the value made of JSON's types: arrays become lists, NaN and infinity null, the rest its text."""
-    if value is None or isinstance(value, (bool, int, str)) and not isinstance(value, enum.Enum):
+    if value is None or (isinstance(value, (bool, int, str)) and not isinstance(value, enum.Enum)):
         return value
     if isinstance(value, (float, np.floating)):
         number = float(value)
