@@ -64,6 +64,10 @@ class Cost(Protocol):
         """A smooth map that tends to the proximal map as eps -> 0."""
         ...
 
+    def smoothed_prox_derivative(self, v: FloatArray, step: float, eps: float) -> ProxDerivative:
+        """The derivative of the smoothed map, eps > 0."""
+        ...
+
     def multipliers(self, u: FloatArray, subgradient: FloatArray) -> dict[str, FloatArray]:
         """Split a subgradient of g at u into named multipliers (bound forces and the like)."""
         ...

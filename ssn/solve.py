@@ -2,32 +2,30 @@
 
 from __future__ import annotations
 
+import sys
 from collections.abc import Callable
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
 
-from .complementarity import ComplementarityProblem
-from .composite import CompositeProblem, LeastSquaresMap
-from .control import ControlProblem
-from .equations.complementarity import MidEquation
 from .equations.dual import DualEquation
-from .equations.general import GeneralEquation
-from .equations.natural import NaturalEquation, NaturalPoint
+from .equations.natural import NaturalPoint
 from .errors import InputError, SolveInterrupted
-from .globalization import CATALOGUE, DualSearch, EnvelopeSearch, FullStep, ResidualSearch
-from .inner import relative
-from .linear import CATALOGUE as LINEAR
-from .linear import GeneralSolver, ReducedSolver, SubspaceSolver
+from .finish import finish
+from .globalization import EnvelopeSearch, FullStep
+from .linear import ReducedSolver, SubspaceSolver
 from .newton import Limits, LoopResult, run
-from .protocols import FloatArray, Globalization, LinearSolver
-from .proximal_point import ProximalPointPath, follow, operator_size
+from .prepare import Plan, prepare
+from .protocols import FloatArray, Globalization
+from .proximal_point import follow, operator_size
 from .records import StepRecord
-from .smooth import LeastSquares
+from .smoothing_path import follow_smoothing
 from .solution import Solution
 from .status import Outcome
-from .validate import count, float_array, scalar
+from .validate import count, scalar
+
+__all__ = ["Plan", "prepare", "solve"]
 
 Callback = Callable[[StepRecord], None]
 
@@ -36,21 +34,8 @@ POLISH_STEPS = 6
 # continuations at most while the accuracy computed afresh is worse than the iteration's own figure
 CONFIRMATIONS = 3
 
-LINEAR_CHOICES = ("auto", *LINEAR)
-
-
-@dataclass
-class Plan:
-    """A problem made ready for the loop: equation, linear solver, globalisation, start, and why."""
-
-    problem: Any
-    equation: Any
-    solver: LinearSolver
-    globalization: Globalization
-    start: FloatArray
-    choices: dict[str, str]
-    path: ProximalPointPath | None = None
-    polish: NaturalEquation | None = None
+# outcomes after which no other globalisation is tried
+SETTLED = (Outcome.CONVERGED, Outcome.STOPPED, Outcome.INTERRUPTED, Outcome.NOT_FINITE, Outcome.UNBOUNDED)
 
 
 def solve(
@@ -77,9 +62,10 @@ def solve(
         each problem); for an Equation the root mean square of F / scale.
     max_steps : int
         Newton steps at most, over a whole path.
-    globalization : {"auto", "full", "dual", "residual", "envelope"} or a Globalization
+    globalization : {"auto", "full", "dual", "residual", "envelope", "smoothing"} or a Globalization
         "auto": dual search where the problem has a dual equation, envelope search for other composite problems,
-        residual search otherwise.
+        residual search and smoothing path for complementarity, residual search otherwise. What was decided, and why,
+        stands in ``Solution.choices``.
     linear : {"auto", "subspace", "reduced", "general"}
         How Newton systems are solved; only the one that fits the equation is accepted beside "auto".
     callback : callable, optional
@@ -119,150 +105,13 @@ def solve(
     return solution
 
 
-def prepare(
-    problem: Any, start: Any = None, *, globalization: str | Globalization = "auto", linear: str = "auto"
-) -> Plan:
-    """Choose equation, linear solver and globalisation for a problem, and check that the choices fit."""
-    if linear not in LINEAR_CHOICES:
-        raise InputError(f"linear must be one of {', '.join(LINEAR_CHOICES)}, got {linear!r}")
-    if isinstance(globalization, str) and globalization != "auto" and globalization not in CATALOGUE:
-        raise InputError(
-            f"globalization must be 'auto', {', '.join(map(repr, CATALOGUE))}, got {globalization!r}"
-        )
-    if isinstance(problem, ControlProblem):
-        plan = _prepare_control(problem, start)
-    elif isinstance(problem, CompositeProblem):
-        plan = _prepare_composite(problem, start, globalization)
-    elif isinstance(problem, ComplementarityProblem):
-        plan = _prepare_complementarity(problem, start)
-    elif hasattr(problem, "residual") and hasattr(problem, "linearize"):
-        plan = _prepare_equation(problem, start)
-    elif callable(problem):
-        raise InputError(
-            "a plain function brings no derivative: give an object with residual(x) and "
-            "linearize(x) -> ssn.Linearization"
-        )
-    else:
-        raise InputError(
-            f"cannot solve a {type(problem).__name__}: give a ControlProblem, CompositeProblem, "
-            "ComplementarityProblem, "
-            "or an object with residual(x) and linearize(x)"
-        )
-    if linear not in ("auto", plan.solver.name):
-        raise InputError(f"linear={linear!r} does not fit this problem; it is solved by {plan.solver.name!r}")
-    if globalization != "auto":
-        plan.globalization = _forced(globalization, plan.equation)
-        plan.choices["globalization"] = f"{plan.globalization.name}: asked for"
-    return plan
-
-
-def _forced(choice: str | Globalization, equation: Any) -> Globalization:
-    made: Any = CATALOGUE[choice]() if isinstance(choice, str) else choice
-    if not hasattr(made, "advance"):
-        raise InputError(f"globalization must have an advance method, got {type(made).__name__}")
-    if isinstance(made, DualSearch) and not isinstance(equation, DualEquation):
-        raise InputError("globalization='dual' needs a control problem or least squares with a convex cost")
-    if isinstance(made, EnvelopeSearch) and getattr(equation, "potential", None) is None:
-        raise InputError(
-            "globalization='envelope' needs an objective: a composite problem or symmetric complementarity"
-        )
-    return made.fresh() if isinstance(made, ResidualSearch) else made
-
-
-def _start_array(start: Any, size: int, name: str = "start") -> FloatArray | None:
-    return None if start is None else float_array(start, name, shape=(size,))
-
-
-def _prepare_control(problem: ControlProblem, start: Any) -> Plan:
-    if not problem.convex:
-        raise InputError(f"{type(problem.cost).__name__} is not convex: control problems need a convex cost")
-    control = _start_array(start, problem.unknowns)
-    path = None if problem.alpha > 0 else ProximalPointPath()
-    alpha = problem.alpha if problem.alpha > 0 else 1.0
-    equation = DualEquation(problem, problem.reduced_target(), alpha, problem.cost)
-    choices = {
-        "equation": "dual equation: quadratic tracking, convex cost",
-        "globalization": "dual: the dual function is convex, exact search costs no solve",
-        "linear": "subspace: one factorisation of the state operator, basis kept between steps",
-    }
-    if path is not None:
-        choices["path"] = "proximal point: control_weight is 0"
-        x = np.zeros(problem.unknowns) if control is None else control
-    else:
-        x = equation.start(control)
-    return Plan(problem, equation, SubspaceSolver(equation), DualSearch(), x, choices, path)
-
-
-def _prepare_composite(problem: CompositeProblem, start: Any, globalization: Any) -> Plan:
-    u = _start_array(start, problem.unknowns)
-    wants_dual = globalization in ("auto", "dual") or isinstance(globalization, DualSearch)
-    if isinstance(problem.part, LeastSquares) and problem.cost.convex and wants_dual:
-        tracking = LeastSquaresMap(problem.part, problem.weights, problem.work)
-        equation: Any = DualEquation(tracking, problem.part.b, 1.0, problem.cost)
-        choices = {
-            "equation": "dual equation: least squares, convex cost",
-            "globalization": "dual: the dual function is convex, exact search costs no product",
-            "path": "proximal point: no strong convexity is assumed",
-        }
-        x = np.zeros(problem.unknowns) if u is None else u
-        return Plan(
-            problem, equation, SubspaceSolver(equation), DualSearch(), x, choices, ProximalPointPath(),
-            _natural_equation(problem),
-        )  # fmt: skip
-    equation = _natural_equation(problem)
-    x = problem.cost.prox(np.zeros(problem.unknowns) if u is None else u, 1e-300)
-    choices = {
-        "equation": "natural residual",
-        "globalization": "envelope: the forward-backward envelope falls at every step",
-    }
-    return Plan(problem, equation, ReducedSolver(equation), EnvelopeSearch(), x if u is None else u, choices)
-
-
-def _natural_equation(problem: CompositeProblem) -> NaturalEquation:
-    return NaturalEquation(
-        problem,
-        problem.cost,
-        problem.natural_step(),
-        problem.weights,
-        potential=problem.potential,
-        work=problem.work,
-    )
-
-
-def _prepare_complementarity(problem: ComplementarityProblem, start: Any) -> Plan:
-    given = _start_array(start, problem.unknowns)
-    x = problem.start() if given is None else given
-    step = problem.row_step(x)
-    equation = MidEquation(problem, step, problem.magnitude(x, step))
-    choices = {
-        "equation": "mid(x - upper, x - lower, F / |diagonal of F'|)",
-        "globalization": "residual: nonmonotone, "
-        + (
-            "projected gradient behind it"
-            if problem.symmetric
-            else "Fischer-Burmeister least squares behind it"
-        ),
-    }
-    return Plan(problem, equation, ReducedSolver(equation), ResidualSearch().fresh(), x, choices)
-
-
-def _prepare_equation(problem: Any, start: Any) -> Plan:
-    given = start if start is not None else getattr(problem, "start", None)
-    if given is None:
-        raise InputError("give start: an Equation does not tell its number of unknowns")
-    x = float_array(given, "start", ndim=1)
-    equation = GeneralEquation(problem, x.size)
-    choices = {
-        "equation": "given by the caller",
-        "globalization": "residual: nonmonotone, least squares behind it",
-    }
-    return Plan(problem, equation, GeneralSolver(equation), ResidualSearch().fresh(), x, choices)
-
-
 def _run_until_confirmed(plan: Plan, limits: Limits, callback: Callback | None, before: Any) -> Solution:
     """Iterate; go on with a tighter inner tolerance while the accuracy at the returned point is not confirmed."""
-    result = run(plan.equation, plan.solver, plan.globalization, plan.start, limits, callback=callback)
-    solution = _finish(plan, result, limits, before)
+    if plan.smoothing is not None:
+        result = _run_smoothing(plan, limits, callback)
+    else:
+        result = run(plan.equation, plan.solver, plan.globalization, plan.start, limits, callback=callback)
+    solution = finish(plan, result, limits, before)
     inner = limits
     for _ in range(CONFIRMATIONS):
         if solution.outcome is not Outcome.INACCURATE or not np.isfinite(solution.accuracy):
@@ -281,8 +130,34 @@ def _run_until_confirmed(plan: Plan, limits: Limits, callback: Callback | None, 
         if more.outcome in (Outcome.STALLED, Outcome.STEP_LIMIT):
             more.outcome = Outcome.CONVERGED  # by the iteration's own figure; confirmed or not just below
         result = more
-        solution = _finish(plan, result, limits, before)
+        solution = finish(plan, result, limits, before)
     return solution
+
+
+def _run_smoothing(plan: Plan, limits: Limits, callback: Callback | None) -> LoopResult:
+    """The smoothing path, then the plain search from its best point."""
+    assert plan.smoothing is not None
+    result = follow_smoothing(plan.equation, type(plan.solver), plan.start, limits, plan.smoothing, callback)
+    left = limits.max_steps - len(result.steps)
+    if result.outcome in SETTLED or left <= 0:
+        return result
+    ended = run(
+        plan.equation, plan.solver, plan.globalization, result.best.x, replace(limits, max_steps=left),
+        callback=callback, first_index=len(result.steps) + 1,
+    )  # fmt: skip
+    return _joined(result, ended)
+
+
+def _joined(first: LoopResult, then: LoopResult) -> LoopResult:
+    """The second result with the steps and start of the first, and the better of both points."""
+    best = first.best if first.best.accuracy < then.best.accuracy else then.best
+    return replace(
+        then,
+        best=best,
+        steps=first.steps + then.steps,
+        start_norm=first.start_norm,
+        start_accuracy=first.start_accuracy,
+    )
 
 
 def _run_path(plan: Plan, limits: Limits, callback: Callback | None, before: Any) -> Solution:
@@ -300,7 +175,7 @@ def _run_path(plan: Plan, limits: Limits, callback: Callback | None, before: Any
 
     natural = plan.polish
 
-    def finish(control: FloatArray, first_index: int, left: int) -> LoopResult | None:
+    def end_plainly(control: FloatArray, first_index: int, left: int) -> LoopResult | None:
         assert natural is not None
         short = Limits(limits.tolerance, min(left, POLISH_STEPS))
         ended = run(
@@ -320,7 +195,7 @@ def _run_path(plan: Plan, limits: Limits, callback: Callback | None, before: Any
         limits,
         plan.path,
         callback,
-        finish if natural else None,
+        end_plainly if natural else None,
     )
     plan.equation = (
         natural
@@ -329,137 +204,10 @@ def _run_path(plan: Plan, limits: Limits, callback: Callback | None, before: Any
         and isinstance(result.loop.best.data, NaturalPoint)
         else result.equation
     )
-    return _finish(plan, result.loop, limits, before)
-
-
-def _finish(plan: Plan, result: LoopResult, limits: Limits, before: Any) -> Solution:
-    """Recompute the accuracy at the returned point, certify it, and collect what belongs to it."""
-    best = result.best
-    fields: dict[str, Any] = {}
-    if isinstance(plan.equation, DualEquation):
-        x, accuracy, fields = _finish_dual(plan, result)
-    elif isinstance(plan.problem, CompositeProblem):
-        x, accuracy, fields = _finish_composite(plan, result)
-    elif isinstance(plan.problem, ComplementarityProblem):
-        x, accuracy, fields = _finish_complementarity(plan, result)
-    else:
-        x = best.x
-        fresh = plan.equation.evaluate(x.copy())
-        accuracy = fresh.accuracy
-    outcome, message = result.outcome, result.message
-    if outcome is Outcome.CONVERGED and not accuracy <= limits.tolerance:
-        outcome = Outcome.INACCURATE
-        message = f"accuracy {accuracy:.1e} when computed afresh, {best.accuracy:.1e} in the iteration"
-    work = plan.equation.work
-    return Solution(
-        x=x,
-        converged=outcome is Outcome.CONVERGED,
-        outcome=outcome,
-        message=message,
-        residual_norm=best.norm,
-        accuracy=accuracy,
-        tolerance=limits.tolerance,
-        steps=tuple(result.steps),
-        start_norm=result.start_norm,
-        pieces=fields.pop("pieces", best.pieces),
-        work=work.since(before) if before is not None else work.copy(),
-        choices=plan.choices,
-        problem=plan.problem,
-        iterate=best.x,
-        **fields,
-    )
-
-
-def _finish_dual(plan: Plan, result: LoopResult) -> tuple[FloatArray, float, dict[str, Any]]:
-    equation: DualEquation = plan.equation
-    problem, best = plan.problem, result.best
-    if plan.path is not None and result.last.data is not None:
-        best = result.last
-    if best.data is None:
-        return np.zeros(problem.unknowns), float("inf"), {"pieces": best.pieces}
-    tracking, alpha = equation.tracking, equation.alpha
-    controls = tracking.controls
-    z = best.data.corrected
-    control = isinstance(problem, ControlProblem)
-    if control:
-        response = problem.response(z)
-        observed = problem.observe(response)
-        misfit = equation.target - observed
-        p = problem.adjoint_of(misfit)
-        gradient = -problem.pull_back(p)
-        state = response + problem.offset()
-    else:
-        observed = tracking.forward(z)
-        misfit = equation.target - observed
-        gradient = -tracking.adjoint(misfit)
-    step = 1.0 / alpha
-    own_weight = problem.alpha if control else 0.0
-    # the normal map of the problem itself; on a path the natural residual with its last step
-    v = -step * gradient if own_weight > 0 else z - step * gradient
-    moved = equation.prox(v)
-    reference = controls.norm(z)
-    accuracy = relative(controls.norm(z - moved), controls.norm(moved))
-    subgradient = -gradient - own_weight * z
-    smooth_value = 0.5 * tracking.observations.dot(misfit, misfit) + 0.5 * own_weight * controls.dot(z, z)
-    fields: dict[str, Any] = {
-        "pieces": equation.cost.pieces(v, step),
-        "margins": equation.cost.margins(v, step),
-        "multipliers": equation.cost.multipliers(z, subgradient),
-        "objective": smooth_value + equation.cost.value(z, controls.vector),
-    }
-    if control:
-        error = problem.gradient_error(z, state, p)
-        fields["certificate"] = problem.certify(observed - best.data.observed, reference, error)
-        fields["state"], fields["adjoint"] = state, p
-    elif problem.strong_convexity > 0:
-        z, fields["certificate"] = problem.certify(z)
-    return z, accuracy, fields
-
-
-def _finish_composite(plan: Plan, result: LoopResult) -> tuple[FloatArray, float, dict[str, Any]]:
-    problem, best = plan.problem, result.best
-    if best.data is None:
-        return best.x, float("inf"), {}
-    z, certificate = problem.certify(best.data.moved)
-    accuracy = problem.accuracy(z)
-    step = problem.natural_step()
-    _, gradient = problem.smooth(z)
-    v = z - step * gradient
-    return z, accuracy, {
-        "pieces": problem.cost.pieces(v, step),
-        "margins": problem.cost.margins(v, step),
-        "multipliers": problem.cost.multipliers(z, -gradient),
-        "objective": problem.objective(z),
-        "certificate": certificate,
-    }  # fmt: skip
-
-
-def _finish_complementarity(plan: Plan, result: LoopResult) -> tuple[FloatArray, float, dict[str, Any]]:
-    problem, best = plan.problem, result.best
-    if best.data is None:
-        return best.x, float("inf"), {}
-    x = np.clip(best.x, problem.lower, problem.upper)
-    force = problem.value(x)
-    step = plan.equation.step
-    residual = x - np.clip(x - step * force, problem.lower, problem.upper)
-    accuracy = relative(
-        float(np.linalg.norm(residual)), max(float(np.linalg.norm(x)), plan.equation.magnitude)
-    )
-    v = x - step * force
-    pieces = problem.cost.pieces(v, 1.0)
-    on_bound = pieces["control"] != 1
-    objective = problem.potential(x) if problem.symmetric else float("nan")
-    return x, accuracy, {
-        "pieces": pieces,
-        "margins": problem.cost.margins(v, 1.0),
-        "multipliers": {"contact": np.where(on_bound, force, 0.0)},
-        "objective": objective,
-    }  # fmt: skip
+    return finish(plan, result.loop, limits, before)
 
 
 def _with_progress(callback: Callback | None) -> Callback:
-    import sys
-
     def observer(record: StepRecord) -> None:
         changes = "" if record.piece_changes is None else f", {record.piece_changes} pieces changed"
         print(

@@ -48,6 +48,11 @@ LEVELS: dict[str, float] = {
     "user_equation": 2,
     # the loop over a path of equations
     "proximal_point": 2.25,
+    "smoothing_path": 2.25,
+    # what "auto" decides, and the end of a solve
+    "extragradient": 2,
+    "prepare": 2.3,
+    "finish": 2.4,
     # front doors
     "batch": 2.5,
     "iteration": 2.5,

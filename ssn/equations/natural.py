@@ -11,6 +11,7 @@ symmetric where F' is. Source: J.-S. Pang and L. Qi, SIAM J. Optim. 3 (1993) 443
 
 from __future__ import annotations
 
+import copy
 from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Any, Protocol
@@ -68,6 +69,9 @@ class NaturalEquation:
         f with F = f'; brings the envelope and the proximal gradient fallback.
     magnitude : float
         Size of the unknown below which accuracy is no longer relative; 0 keeps it relative.
+    eps : float
+        Smoothing parameter in the unit of the unknown; with eps > 0 the proximal map takes its smoothed form and the
+        accuracy is the root mean square of the residual divided by eps.
     """
 
     def __init__(
@@ -80,12 +84,14 @@ class NaturalEquation:
         potential: Callable[[FloatArray], float] | None = None,
         magnitude: float = 0.0,
         work: WorkCounts | None = None,
+        eps: float = 0.0,
     ) -> None:
         self.map, self.cost, self.step = natural_map, cost, step
         self.inner = InnerProduct(weights)
         self.weights = weights
         self.potential = potential
         self.magnitude = magnitude
+        self.eps = eps
         self.work = work if work is not None else WorkCounts()
         self.piecewise_affine = bool(natural_map.affine)
         self.symmetric = bool(natural_map.symmetric)
@@ -102,12 +108,35 @@ class NaturalEquation:
             return Evaluation(x, force, np.inf, np.inf, Pieces())
         v = x - self.step * force / self.weights
         self.work.proximal_maps += 1
+        if self.eps > 0.0:
+            return self._smoothed_evaluation(x, force, v)
         moved = self.cost.prox(v, self._cost_step())
         residual = x - moved
         norm = self.inner.norm(residual)
         accuracy = relative(norm, max(self.inner.norm(moved), self.magnitude))
         data = NaturalPoint(force, v, moved, self.cost.prox_derivative(v, self._cost_step()), self.step)
         return Evaluation(x, residual, norm, accuracy, self.cost.pieces(v, self._cost_step()), data)
+
+    def _smoothed_evaluation(self, x: FloatArray, force: FloatArray, v: FloatArray) -> Evaluation:
+        moved = self.cost.smoothed_prox(v, self._cost_step(), self.eps)
+        residual = x - moved
+        norm = self.inner.norm(residual)
+        derivative = self.cost.smoothed_prox_derivative(v, self._cost_step(), self.eps)
+        accuracy = norm / (self.eps * float(np.sqrt(self.weights.sum())))
+        return Evaluation(
+            x, residual, norm, accuracy, Pieces(), NaturalPoint(force, v, moved, derivative, self.step)
+        )
+
+    def smoothed(self, eps: float) -> NaturalEquation:
+        """The same equation with the smoothed proximal map; the unsmoothed one for eps = 0. Work is shared."""
+        other = copy.copy(self)
+        other.eps = eps
+        return other
+
+    def smoothing_scale(self, at: Evaluation) -> float:
+        """A first smoothing parameter: the root mean square of the residual, or a thousandth of that of x."""
+        size = float(np.sqrt(self.weights.sum()))
+        return max(at.norm, 1e-3 * self.inner.norm(at.x), 1e-3 * self.magnitude) / size
 
     def _cost_step(self) -> float:
         return float(self.step) if np.ndim(self.step) == 0 else 1.0

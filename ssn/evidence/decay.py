@@ -7,10 +7,10 @@ from dataclasses import dataclass
 
 import numpy as np
 
-# Below this slope in the logarithms (a fall by 15 percent in a decade) a figure counts as levelling off.
-LEAST_SLOPE = 0.06
+# Below this slope in the logarithms (a fall by 9 percent in a decade) a figure counts as levelling off.
+LEAST_SLOPE = 0.04
 # A fall over three sizes and more must be steeper than this.
-LEAST_FALL = 0.1
+LEAST_FALL = 0.05
 # A size is of use only where rounding alone would give a figure below this one.
 RESOLUTION = 0.03
 # The figure that a fall has to reach.
@@ -71,7 +71,9 @@ def decay(sizes: Sequence[float], figures: Sequence[float], rounding: Sequence[f
     if below and _abrupt(above, below[0]):
         return Decay("exact", None, last, below[0][0], f"at rounding level from size {below[0][0]:.0e} on")
     if len(above) < 3:
-        return Decay("undecided", None, last, None, f"only {len(above)} sizes lie above rounding, three are needed")
+        return Decay(
+            "undecided", None, last, None, f"only {len(above)} sizes lie above rounding, three are needed"
+        )
     slope = _slope(above)
     recent = [row[1] for row in above[-4:]]
     if not np.isfinite(recent[-2:]).all():
@@ -99,10 +101,11 @@ def _abrupt(above: Sequence[tuple[float, float, float]], first: tuple[float, flo
 
 
 def _slope(above: Sequence[tuple[float, float, float]]) -> float | None:
-    """Least-squares slope of the logarithms over the last four sizes with figures below 0.5."""
+    """Least-squares slope of the logarithms over the last four sizes, with figures below 0.5 if any."""
     rows = [(size, figure) for size, figure, _ in above if np.isfinite(figure)]
-    near = [row for row in rows if row[1] < ASYMPTOTIC][-4:]
-    if len(near) < 2:
+    near = [row for row in rows if row[1] < ASYMPTOTIC]
+    chosen = (near if len(near) > 1 else rows)[-4:]
+    if len(chosen) < 2:
         return None
-    logs = np.log(np.array(near))
+    logs = np.log(np.array(chosen))
     return float(np.polyfit(logs[:, 0], logs[:, 1], 1)[0])

@@ -13,11 +13,13 @@ from ..equations.natural import NaturalEquation
 from ..linear.boundary import product
 from ..linear.subspace import SubspaceSolver
 from ..newton import TIGHT
-from ..proximal_point import ProximalPointPath, operator_size
 from ..protocols import Direction, Evaluation, FloatArray
+from ..proximal_point import operator_size
 from ..solve import prepare
 
 EPS = float(np.finfo(float).eps)
+# weight of the proximal point subproblem that is looked at where control_weight is 0, relative to ||S||^2
+SUBPROBLEM = 1e-5
 
 
 class Local:
@@ -44,12 +46,14 @@ class Local:
         Which equation is looked at, and in which norm.
     """
 
-    def __init__(self, problem: Any, point: FloatArray | None = None, iterate: FloatArray | None = None) -> None:
+    def __init__(
+        self, problem: Any, point: FloatArray | None = None, iterate: FloatArray | None = None
+    ) -> None:
         self.problem = problem
         self.equation: Any
         self.solver: Any
         if isinstance(problem, ControlProblem) and problem.alpha == 0.0:
-            weight = ProximalPointPath().least * operator_size(problem)
+            weight = SUBPROBLEM * operator_size(problem)
             control = np.zeros(problem.unknowns) if point is None else point
             target = problem.reduced_target()
             self.equation = DualEquation(problem, target, weight, problem.cost, weight * control)

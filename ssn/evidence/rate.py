@@ -9,6 +9,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from itertools import pairwise
 from typing import Any
 
 import numpy as np
@@ -119,10 +120,10 @@ def rate(
     tolerance nor on the number of steps of the solve. Dual equations are perturbed in the dual variable q, with
     S* q kept consistent, and measured in the observation norm. Composite problems are measured on the natural
     residual, whatever way they were solved. Where control_weight is 0 the equation of one proximal point
-    subproblem about the solution is measured, with the least weight of the path.
+    subproblem about the solution is measured, with a weight of 1e-5 ||S||^2.
     """
     sizes = [scalar(d, "deltas", positive=True) for d in deltas]
-    if len(sizes) < 3 or any(b >= a for a, b in zip(sizes, sizes[1:], strict=False)) or sizes[0] >= 1.0:
+    if len(sizes) < 3 or any(b >= a for a, b in pairwise(sizes)) or sizes[0] >= 1.0:
         raise InputError(f"deltas must be at least three falling numbers below 1, got {sizes}")
     samples = count(samples, "samples")
     if solution is None:
@@ -156,7 +157,9 @@ def rate(
         linear = judged.last < 1.0
         order = 1.0 if linear else None
         return RateVerdict("linear" if linear else "none", order, contractions, None, relative_floor, note)
-    return RateVerdict("undecided", judged.slope and 1.0 + judged.slope, contractions, None, relative_floor, note)
+    return RateVerdict(
+        "undecided", judged.slope and 1.0 + judged.slope, contractions, None, relative_floor, note
+    )
 
 
 def _polish(local: Local, max_steps: int = 80) -> Evaluation:
@@ -179,13 +182,14 @@ def _polish(local: Local, max_steps: int = 80) -> Evaluation:
 
 def _floor(local: Local, best: Evaluation, rng: np.random.Generator) -> float:
     """How well x* is known: the Newton step left at it, and the scatter of two steps from nearby points."""
-    left = local.step(best)
-    known = float("inf") if left.vector is None else local.norm(left.vector)
-    scatter = 0.0
+    known = scatter = 0.0
+    if best.norm > 0.0:
+        left = local.step(best)
+        known = float("inf") if left.vector is None else local.norm(left.vector)
     for smooth in (False, True):
         at = local.evaluate(best.x + NEAR * local.reference * local.direction(rng, smooth=smooth))
         for _ in range(2):
-            direction = local.step(at) if at.finite else None
+            direction = local.step(at) if at.finite and at.norm > 0.0 else None
             if direction is None or direction.vector is None:
                 break
             at = local.evaluate(at.x + direction.vector)
@@ -211,6 +215,9 @@ def _contraction(
         at = local.evaluate(best.x + size * h)
         if not at.finite:
             bad += 1
+            continue
+        if at.norm == 0.0:  # another root this near: no step leads back
+            worst = max(worst, 1.0)
             continue
         direction = local.step(at)
         if direction.vector is None:

@@ -65,8 +65,14 @@ class ReducedSolver:
         try:
             if key != self._key or self._factor is None:
                 matrix = _submatrix(jacobian, inactive, extra)
-                self._key, self._factor = key, self._factorize(matrix)
+                if self._factor is not None and self._factor.shape == matrix.shape:
+                    self._key = None
+                    self._factor.refactorize(matrix)
+                else:
+                    self._factor = self._factorize(matrix)
+                self._key = key
         except SingularMatrixError as error:
+            self._factor = None
             return self._regularised(matrix, rhs, inactive, direction, str(error))
         work.linear_solves += 1
         direction[inactive] = self._factor.solve(rhs)

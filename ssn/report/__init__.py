@@ -1,6 +1,6 @@
 """Results for people and programs: tables and sentences, pictures, an HTML page, JSON."""
 
-from .entry import Entry, setting
+from .entry import Entry, caution, setting
 from .html import page
 from .pictures import (
     check_picture_path,
@@ -12,15 +12,18 @@ from .pictures import (
     require_pictures,
     save,
 )
-from .tables import catalogue_table, comparison, conclusion, overview_table, pairs_table, solution_summary
-from .terminal import Terminal
+from .tables import Overview, catalogue_table, comparison, conclusion, pairs_table, solution_summary
+from .terminal import Report, Terminal
 from .writer import as_text, comparison_document, solution_document
 
 __all__ = [
     "Entry",
+    "Overview",
+    "Report",
     "Terminal",
     "as_text",
     "catalogue_table",
+    "caution",
     "check_picture_path",
     "comparison",
     "comparison_document",
@@ -28,7 +31,6 @@ __all__ = [
     "embedded",
     "history_figure",
     "is_figure",
-    "overview_table",
     "page",
     "pairs_table",
     "pictures_available",

@@ -10,11 +10,17 @@ from jinja2 import Environment, FileSystemLoader, StrictUndefined
 
 from ..solution import Solution
 from .entry import Entry
-from .numbers import plainly, small, whole
-from .tables import METHOD_COLUMNS, conclusion, method_row, overview_row
-from .words import assessment_sentences
-
-OVERVIEW_COLUMNS = ("problem", "steps", "accuracy", "certified", "agreement", "rate", "known", "conclusion")
+from .numbers import small, whole
+from .tables import (
+    METHOD_COLUMNS,
+    OVERVIEW_COLUMNS,
+    conclusion,
+    known_row,
+    method_notes,
+    method_row,
+    overview_row,
+)
+from .words import assessment_sentences, piece_sizes
 
 
 def page(
@@ -58,15 +64,14 @@ def _section(entry: Entry) -> dict[str, Any]:
     return {
         "heading": entry.heading,
         "setting": entry.setting,
+        "title": entry.title,
+        "caution": entry.caution,
         "description": entry.description,
         "sentences": assessment_sentences(a),
         "summary": entry.summary,
         "methods": [(m.converged, method_row(m)) for m in a.methods],
-        "notes": [f"{m.name}: {m.note}" for m in a.methods if m.note],
-        "known": [
-            (k.holds, [k.what, plainly(k.expected), plainly(k.computed), plainly(k.tolerance), k.source])
-            for k in a.known
-        ],
+        "notes": method_notes(a),
+        "known": [(k.holds, known_row(k)) for k in a.known],
         "checks": a.checks,
         "steps": _steps(a.solution),
         "choices": list(a.solution.choices.items()),
@@ -79,9 +84,7 @@ def _section(entry: Entry) -> dict[str, Any]:
 def _steps(solution: Solution) -> list[list[str]]:
     rows = [["0", small(solution.start_norm), "", "", "", "", "", "", "start"]]
     for s in solution.steps:
-        sizes = "; ".join(
-            ", ".join(f"{count} {piece}" for piece, count in of.items()) for of in s.pieces.values()
-        )
+        sizes = "; ".join(map(piece_sizes, s.pieces.values()))
         done = ", ".join(filter(None, (s.stage, s.action, s.reason)))
         rows.append(
             [str(s.index), small(s.residual_norm), small(s.accuracy), f"{s.contraction:.2g}", f"{s.length:.3g}",

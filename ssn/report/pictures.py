@@ -5,6 +5,7 @@ from __future__ import annotations
 import base64
 import importlib.util
 import io
+import math
 import sys
 from pathlib import Path
 from typing import Any
@@ -24,8 +25,8 @@ def history_figure(solution: Solution) -> Any:
 
 
 def rate_figure(assessment: Assessment) -> Any | None:
-    """Contraction of one step against the distance it starts from; None where nothing was measured."""
-    pairs = sorted((float(d), max(float(q), ROUNDING)) for d, q in assessment.rate.contractions)
+    """Draw the contraction of one step against the distance it starts from; None where nothing was measured."""
+    pairs = sorted((d, max(q, ROUNDING)) for d, q in assessment.rate.contractions if math.isfinite(q))
     if not pairs:
         return None
     figure = new_figure(7.0, 4.2)
@@ -33,14 +34,13 @@ def rate_figure(assessment: Assessment) -> Any | None:
     deltas, contractions = zip(*pairs, strict=True)
     axes.loglog(deltas, contractions, "o-", label="worst contraction of one step")
     axes.axhline(1.0, color="0.6", lw=0.8)
-    top = contractions[-1] if contractions[-1] > ROUNDING else 1.0
-    axes.loglog(
-        deltas, [top * d / deltas[-1] for d in deltas], "--", color="0.6", label="order 2, for the slope"
-    )
+    if assessment.rate.verdict == "superlinear":
+        guide = [contractions[-1] * d / deltas[-1] for d in deltas]
+        axes.loglog(deltas, guide, "--", color="0.6", label="slope of order 2")
     axes.set_xlabel("relative distance from the solution before the step")
     axes.set_ylabel("remaining part after it")
     axes.set_title(f"rate: {assessment.rate.verdict}")
-    axes.legend(frameon=False)
+    axes.legend(frameon=False, loc="lower right")
     axes.grid(alpha=0.3)
     return figure
 

@@ -5,31 +5,32 @@ from __future__ import annotations
 from collections.abc import Iterable, Sequence
 from typing import Any
 
-from rich import box
-from rich.console import Group, RenderableType
+from rich.console import Console, ConsoleOptions, Group, RenderableType, RenderResult
 from rich.table import Table
 from rich.text import Text
 
 from ..evidence import Assessment
 from ..solution import Solution
 from .entry import Entry
+from .grid import figure_table, fits, label_table
 from .numbers import counted, objective, plainly, seconds, small, whole
-from .words import FAILS, HOLDS, UNDECIDED, Sentence, assessment_sentences, solution_sentences
+from .words import FAILS, HOLDS, UNDECIDED, Sentence, assessment_sentences, solution_sentences, weak_points
 
 STYLES = {HOLDS: "green", FAILS: "bold red", UNDECIDED: "yellow"}
 METHOD_COLUMNS = (
-    "method", "outcome", "objective", "accuracy", "steps", "state solves", "products", "seconds", "distance", "certified"
+    "method", "outcome", "objective", "accuracy", "steps", "state solves", "products", "seconds", "distance",
+    "certified",
 )  # fmt: skip
+OVERVIEW_COLUMNS = ("problem", "steps", "accuracy", "certified", "agreement", "rate", "known", "conclusion")
+NARROW_OVERVIEW = ("problem", "steps", "agreement", "rate", "conclusion")
 
 
 def comparison(entry: Entry) -> RenderableType:
     """One assessed problem: methods, verdict in words, known values, the file's own summary."""
     assessment = entry.assessment
-    parts: list[RenderableType] = [_title(entry.heading, entry.setting), _methods(assessment)]
-    notes = [f"{m.name}: {m.note}" for m in assessment.methods if m.note]
-    parts += [Text(note, style="dim") for note in [*notes, *entry.remarks]]
-    parts.append(Text())
-    parts.append(_verdict(assessment_sentences(assessment)))
+    parts: list[RenderableType] = [_title(entry.heading, entry.setting), Text(), Methods(assessment)]
+    parts += [Text(note, style="dim") for note in [*method_notes(assessment), *entry.remarks]]
+    parts += [Text(), _verdict(assessment_sentences(assessment), entry.caution)]
     if assessment.known:
         parts += [Text(), _known(assessment)]
     if entry.summary:
@@ -37,23 +38,64 @@ def comparison(entry: Entry) -> RenderableType:
     return Group(*parts)
 
 
-def overview_table(entries: Sequence[Entry], errors: Sequence[tuple[str, str]] = ()) -> Table:
-    """One line a problem and size."""
-    table = Table(box=box.SIMPLE_HEAD, pad_edge=False)
-    for column in ("problem", "steps", "accuracy", "certified", "agreement", "rate", "known", "conclusion"):
-        table.add_column(column, justify="right" if column in ("steps", "accuracy", "certified") else "left")
-    for entry in entries:
-        table.add_row(*overview_row(entry))
-    for name, message in errors:
-        table.add_row(Text(name), *[""] * 6, Text(f"not run: {message}", style=STYLES[FAILS]))
-    return table
+class Methods:
+    """The methods as rows, or as columns where the window is too narrow for that: no figure is cut."""
+
+    def __init__(self, assessment: Assessment) -> None:
+        self.rows = [[Text(cell) for cell in method_row(method)] for method in assessment.methods]
+        for cells, method in zip(self.rows, assessment.methods, strict=True):
+            cells[1].stylize(STYLES[HOLDS] if method.converged else STYLES[UNDECIDED])
+
+    def __rich_console__(self, console: Console, options: ConsoleOptions) -> RenderResult:
+        """Render one way or the other."""
+        wide = figure_table(METHOD_COLUMNS, figures=METHOD_COLUMNS[2:])
+        for cells in self.rows:
+            wide.add_row(*cells)
+        if fits(wide, console, options):
+            yield wide
+            return
+        names = [cells[0].plain for cells in self.rows]
+        tall = figure_table(["", *names], figures=names)
+        for index, column in enumerate(METHOD_COLUMNS[1:], 1):
+            tall.add_row(Text(column, style="bold"), *(cells[index] for cells in self.rows))
+        yield tall
+
+
+class Overview:
+    """One line a problem and size; some columns are left out where the window is too narrow.
+
+    Parameters
+    ----------
+    entries : sequence of Entry
+    errors : sequence of (str, str)
+        Problem and message of what could not be run.
+    """
+
+    def __init__(self, entries: Sequence[Entry], errors: Sequence[tuple[str, str]] = ()) -> None:
+        self.rows = [overview_row(entry) for entry in entries]
+        blank = [Text()] * (len(OVERVIEW_COLUMNS) - 2)
+        self.rows += [[Text(name), *blank, Text("not run to the end", STYLES[FAILS])] for name, _ in errors]
+
+    def __rich_console__(self, console: Console, options: ConsoleOptions) -> RenderResult:
+        """Render with the columns that fit."""
+        everything = self._table(OVERVIEW_COLUMNS)
+        yield everything if fits(everything, console, options) else self._table(NARROW_OVERVIEW)
+
+    def _table(self, columns: Sequence[str]) -> Table:
+        table = figure_table(columns, figures=OVERVIEW_COLUMNS[1:4])
+        chosen = [OVERVIEW_COLUMNS.index(column) for column in columns]
+        for row in self.rows:
+            table.add_row(*(row[index] for index in chosen))
+        return table
 
 
 def overview_row(entry: Entry) -> list[Text]:
     """The figures of one problem that fit in a line."""
     a = entry.assessment
     held = sum(k.holds for k in a.known)
-    rate = a.rate.verdict + (f" {a.rate.order:.2f}" if a.rate.order is not None else "")
+    rate = a.rate.verdict + (
+        f" {a.rate.order:.2f}" if a.rate.verdict == "superlinear" and a.rate.order else ""
+    )
     certificate = a.solution.certificate
     return [
         Text(entry.heading),
@@ -63,16 +105,14 @@ def overview_row(entry: Entry) -> list[Text]:
         Text(a.agreement, style=STYLES.get(a.agreement, "")),
         Text(rate),
         Text(f"{held} of {len(a.known)}" if a.known else "-"),
-        Text("holds", style=STYLES[HOLDS]) if a.holds else Text("; ".join(a.failures()), style=STYLES[FAILS]),
+        Text("holds", STYLES[HOLDS]) if a.holds else Text(f"not: {weak_points(a)}", STYLES[FAILS]),
     ]
 
 
 def history_table(solution: Solution) -> Table:
     """The steps of a solve, one line each."""
-    table = Table(box=box.SIMPLE_HEAD, pad_edge=False)
-    for column in ("step", "residual", "accuracy", "contraction", "length", "inner", "changed"):
-        table.add_column(column, justify="right")
-    table.add_column("what was done")
+    figures = ("step", "residual", "accuracy", "contraction", "length", "inner", "changed")
+    table = figure_table([*figures, "what was done"], figures)
     table.add_row("0", small(solution.start_norm))
     for s in solution.steps:
         done = ", ".join(filter(None, (s.stage, s.action, s.reason)))
@@ -83,20 +123,19 @@ def history_table(solution: Solution) -> Table:
     return table
 
 
-def solution_summary(heading: str, setting: str, solution: Solution) -> RenderableType:
+def solution_summary(heading: str, setting: str, solution: Solution, caution: str = "") -> RenderableType:
     """A solve: its steps, and what they achieved in words."""
     sentences = solution_sentences(solution)
     if solution.choices:
         chosen = "; ".join(f"{what}: {why}" for what, why in solution.choices.items())
-        sentences.append(Sentence("Method", chosen + "."))
-    return Group(_title(heading, setting), history_table(solution), _verdict(sentences))
+        sentences.append(Sentence("Method", f"{chosen}."))
+    steps, verdict = history_table(solution), _verdict(sentences, caution)
+    return Group(_title(heading, setting), Text(), steps, Text(), verdict)
 
 
 def pairs_table(pairs: Iterable[tuple[str, str]]) -> Table:
     """What a problem file says about its solution."""
-    table = Table(box=None, show_header=False, pad_edge=False, padding=(0, 2, 0, 0))
-    table.add_column(style="bold")
-    table.add_column()
+    table = label_table()
     for what, value in pairs:
         table.add_row(Text(str(what)), Text(str(value)))
     return table
@@ -104,16 +143,23 @@ def pairs_table(pairs: Iterable[tuple[str, str]]) -> Table:
 
 def catalogue_table(rows: Iterable[tuple[str, str, str, str]]) -> Table:
     """Problem files: path, what, parameters, meshes."""
-    table = Table(box=box.SIMPLE_HEAD, pad_edge=False)
-    for column in ("file", "what", "parameters", "meshes"):
-        table.add_column(column, overflow="fold")
+    table = figure_table(("file", "what", "parameters", "meshes"), unbroken=("file", "meshes"))
     for row in rows:
         table.add_row(*map(Text, row))
     return table
 
 
-def _title(heading: str, setting: str) -> Text:
-    return Text.assemble((heading, "bold"), "  ", (setting, "dim"))
+def conclusion(entries: Sequence[Entry], errors: Sequence[tuple[str, str]]) -> Text:
+    """The last line of a comparison."""
+    weak = [entry.heading for entry in entries if not entry.assessment.holds]
+    parts = []
+    if entries and not weak:
+        parts.append(Text(f"All evidence holds ({counted(len(entries), 'problem')}).", STYLES[HOLDS]))
+    elif weak:
+        parts.append(Text(f"Evidence does not hold for {'; '.join(weak)}.", STYLES[FAILS]))
+    if errors:
+        parts.append(Text(f"Not run to the end: {'; '.join(name for name, _ in errors)}.", STYLES[FAILS]))
+    return Text(" ").join(parts)
 
 
 def method_row(method: Any) -> list[str]:
@@ -126,50 +172,34 @@ def method_row(method: Any) -> list[str]:
     ]  # fmt: skip
 
 
-def _methods(assessment: Assessment) -> Table:
-    table = Table(box=box.SIMPLE_HEAD, pad_edge=False)
-    for index, column in enumerate(METHOD_COLUMNS):
-        table.add_column(column, justify="left" if index < 2 else "right")
-    for method in assessment.methods:
-        cells = [Text(cell) for cell in method_row(method)]
-        cells[1].style = STYLES[HOLDS] if method.converged else STYLES[UNDECIDED]
-        table.add_row(*cells)
-    return table
+def method_notes(assessment: Assessment) -> list[str]:
+    """What the other methods say, but for what the checks say already."""
+    return [f"{m.name}: {m.note}" for m in assessment.methods[1:] if m.note and m.x is not None]
 
 
-def _verdict(sentences: Sequence[Sentence]) -> Table:
-    table = Table(box=None, show_header=False, pad_edge=False, padding=(0, 2, 0, 0))
-    table.add_column(no_wrap=True, style="bold")
-    table.add_column(ratio=1)
-    for sentence in sentences:
-        style = STYLES.get(sentence.status, "")
-        table.add_row(
-            Text(sentence.topic), Text(sentence.text, style="" if sentence.status == HOLDS else style)
-        )
+def known_row(known: Any) -> list[str]:
+    """The cells of one known value, as text: what, expected, computed, tolerance, source."""
+    figures = [plainly(known.expected), plainly(known.computed), small(known.tolerance)]
+    return [known.what, *figures, known.source]
+
+
+def _title(heading: str, setting: str) -> Text:
+    return Text.assemble((heading, "bold"), "  ", (setting, "dim"))
+
+
+def _verdict(sentences: Sequence[Sentence], caution: str = "") -> Table:
+    table = label_table()
+    for sentence in [*sentences, *([Sentence("Caution", caution)] if caution else [])]:
+        style = "" if sentence.status == HOLDS else STYLES.get(sentence.status, "")
+        table.add_row(Text(sentence.topic), Text(sentence.text, style))
     return table
 
 
 def _known(assessment: Assessment) -> Table:
-    table = Table(box=box.SIMPLE_HEAD, pad_edge=False)
-    for column in ("known value", "expected", "computed", "tolerance", "holds", "source"):
-        table.add_column(
-            column, justify="right" if column in ("expected", "computed", "tolerance") else "left"
-        )
+    figures = ("expected", "computed", "tolerance")
+    table = figure_table(("known value", *figures, "holds", "source"), figures)
     for k in assessment.known:
-        holds = Text("yes", style=STYLES[HOLDS]) if k.holds else Text("no", style=STYLES[FAILS])
-        row = [plainly(k.expected), plainly(k.computed), plainly(k.tolerance)]
-        table.add_row(Text(k.what), *map(Text, row), holds, Text(k.source))
+        holds = Text("yes", STYLES[HOLDS]) if k.holds else Text("no", STYLES[FAILS])
+        *values, source = map(Text, known_row(k))
+        table.add_row(*values, holds, source)
     return table
-
-
-def conclusion(entries: Sequence[Entry], errors: Sequence[tuple[str, str]]) -> Text:
-    """The last line of a comparison."""
-    weak = [entry.heading for entry in entries if not entry.assessment.holds]
-    parts = []
-    if entries and not weak:
-        parts.append((f"All evidence holds ({counted(len(entries), 'problem')}).", STYLES[HOLDS]))
-    elif weak:
-        parts.append((f"Evidence does not hold for {', '.join(weak)}.", STYLES[FAILS]))
-    if errors:
-        parts.append((f" {counted(len(errors), 'problem')} not run.", STYLES[FAILS]))
-    return Text.assemble(*parts)

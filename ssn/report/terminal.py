@@ -5,8 +5,8 @@ from __future__ import annotations
 import contextlib
 import os
 import sys
-from collections.abc import Callable, Iterator
-from typing import Any
+from collections.abc import Iterator
+from typing import Any, Protocol
 
 from rich.console import Console
 from rich.progress import BarColumn, Progress, SpinnerColumn, TextColumn, TimeElapsedColumn
@@ -15,7 +15,13 @@ from rich.text import Text
 # Wide enough for the table of methods where nobody's window sets the width.
 WIDTH_WITHOUT_WINDOW = 132
 
-Report = Callable[[str, float | None], None]
+
+class Report(Protocol):
+    """Takes a word about what is being done, and how much of it is."""
+
+    def __call__(self, text: str, fraction: float | None = None) -> None:
+        """Show it."""
+        ...
 
 
 class Terminal:
@@ -52,7 +58,7 @@ class Terminal:
     def progress(self, what: str) -> Iterator[Report]:
         """Show what is going on, on standard error and only if that is a terminal."""
         if not self.err.is_terminal:
-            yield lambda text, fraction=None: None
+            yield _silent
             return
         columns = (
             SpinnerColumn(),
@@ -85,6 +91,10 @@ class Terminal:
             if self._stdout is sys.__stdout__:
                 stack.enter_context(_descriptor_redirected())
             yield
+
+
+def _silent(text: str, fraction: float | None = None) -> None:
+    """Take a progress report and say nothing."""
 
 
 @contextlib.contextmanager

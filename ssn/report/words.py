@@ -31,37 +31,51 @@ class Sentence:
     status: str = NOTE
 
 
+# checks that have a topic of their own
+TOLD_ELSEWHERE = ("solved", "agreement", "rate", "known values")
+
+
 def assessment_sentences(assessment: Assessment) -> list[Sentence]:
     """Return the verdict on an assessed problem, topic by topic; the last sentence is the conclusion."""
-    solution = assessment.solution
-    found = [*solution_sentences(solution, changes=False)]
-    found += [_reference(assessment), _rate(assessment)]
-    if assessment.known:
-        found.append(
-            _counted_evidence(
-                "Known values", [k.what for k in assessment.known if not k.holds], len(assessment.known)
-            )
+    found = [*solution_sentences(assessment.solution), _reference(assessment), _rate(assessment)]
+    known = assessment.known
+    if known:
+        wrong = [k.what for k in known if not k.holds]
+        text = f"{len(known) - len(wrong)} of {len(known)} hold" + (
+            f"; not: {'; '.join(wrong)}." if wrong else "."
         )
-    if assessment.checks:
-        failing = [f"{c.name} ({c.detail})" if c.detail else c.name for c in assessment.checks if not c.holds]
-        found.append(_counted_evidence("Checks", failing, len(assessment.checks)))
+        found.append(Sentence("Known values", text, FAILS if wrong else HOLDS))
+    failing = [check for check in assessment.checks if not check.holds]
+    if failing:
+        passed = len(assessment.checks) - len(failing)
+        found.append(Sentence("Checks", f"{passed} of {len(assessment.checks)} hold.", FAILS))
+        told = TOLD_ELSEWHERE if known else TOLD_ELSEWHERE[:3]
+        found += [Sentence("", f"{c.name}: {c.detail}", FAILS) for c in failing if c.name not in told]
+    elif assessment.checks:
+        names = ", ".join(check.name for check in assessment.checks)
+        found.append(Sentence("Checks", f"All {len(assessment.checks)} hold: {names}.", HOLDS))
+    return [*found, _conclusion(assessment)]
+
+
+def weak_points(assessment: Assessment) -> str:
+    """The names of the checks that do not hold."""
+    return ", ".join(check.name for check in assessment.checks if not check.holds)
+
+
+def _conclusion(assessment: Assessment) -> Sentence:
     if assessment.holds:
-        found.append(Sentence("Conclusion", "All evidence holds.", HOLDS))
-    else:
-        found.append(
-            Sentence("Conclusion", "Does not hold: " + "; ".join(assessment.failures()) + ".", FAILS)
-        )
-    return found
+        return Sentence("Conclusion", "All evidence holds.", HOLDS)
+    return Sentence("Conclusion", f"Does not hold: {weak_points(assessment)}.", FAILS)
 
 
-def solution_sentences(solution: Solution, *, changes: bool = True) -> list[Sentence]:
+def solution_sentences(solution: Solution) -> list[Sentence]:
     """Return what a solve achieved: convergence, certainty, active sets."""
     found = [_convergence(solution), _certainty(solution)]
     sizes = _sizes(solution.pieces.sizes())
     if sizes:
         text = sizes + "."
         moves = [s.piece_changes for s in solution.steps if s.piece_changes is not None]
-        if changes and moves:
+        if moves:
             text += f" Changes by step: {_series(moves)}."
         margin = _smallest(solution.margins)
         if margin is not None:
@@ -96,54 +110,47 @@ def _certainty(solution: Solution) -> Sentence:
 
 
 def _reference(assessment: Assessment) -> Sentence:
-    others = assessment.methods[1:]
-    names = ", ".join(m.name for m in others) or "no independent method"
-    note = f" {assessment.agreement_note}" if assessment.agreement_note else ""
-    distances = [(m.distance, m.name) for m in others if m.distance is not None and math.isfinite(m.distance)]
-    closest = f": distance {small(min(distances)[0])} ({min(distances)[1]})" if distances else ""
-    asked = f", asked for {small(assessment.agreement_tolerance)}" if assessment.agreement_tolerance else ""
-    start = {
-        HOLDS: f"Agrees with {names}{closest}{asked}.",
-        FAILS: f"Does not agree with {names}{closest}{asked}.",
-        UNDECIDED: f"Undecided ({names}){closest}{asked}.",
-    }.get(assessment.agreement, f"{assessment.agreement} ({names}){closest}{asked}.")
-    return Sentence("Reference", start + note, assessment.agreement)
+    start = {HOLDS: "Agrees with ", FAILS: "Contradicted by ", UNDECIDED: "Undecided: "}
+    text = start.get(assessment.agreement, "") + assessment.agreement_note
+    return Sentence(
+        "Reference", f"{text}; asked for {small(assessment.agreement_tolerance)}.", assessment.agreement
+    )
 
 
 def _rate(assessment: Assessment) -> Sentence:
     rate = assessment.rate
-    seen = [(float(d), float(q)) for d, q in rate.contractions]
+    meaning = {
+        "exact": f"Exact: {_near(rate.exact_below)} one step lands on the solution, to rounding",
+        "superlinear": "Superlinear",
+        "linear": "Only linear: the contraction of a step does not fall with the distance",
+        "none": "No contraction near the solution",
+        "undecided": "Undecided: rounding leaves too little to see",
+    }.get(rate.verdict, rate.verdict)
+    if rate.verdict == "superlinear" and rate.order is not None:
+        meaning += f", observed order {rate.order:.2f}"
+    seen = sorted((float(d), float(q)) for d, q in rate.contractions)
     measured = ""
     if seen:
-        (widest, q_widest), (closest, q_closest) = max(seen), min(seen)
+        (closest, q_closest), (widest, q_widest) = seen[0], seen[-1]
         measured = (
-            f" One step from relative distance {widest:.0e} leaves {small(q_widest)} of it, "
-            f"from {closest:.0e} {small(q_closest)}."
+            f" One step multiplies the relative distance {widest:.0e} by {small(q_widest)}, "
+            f"{closest:.0e} by {small(q_closest)}."
         )
-    meaning = {
-        "exact": "Exact: near the solution one step lands on it, to rounding.",
-        "superlinear": "Superlinear"
-        + (f", observed order {rate.order:.2f}." if rate.order is not None else "."),
-        "linear": "Only linear: the contraction does not fall with the distance.",
-        "none": "No contraction near the solution.",
-        "undecided": "Undecided: rounding leaves too little to see.",
-    }.get(rate.verdict, f"{rate.verdict}.")
-    status = {"exact": HOLDS, "superlinear": HOLDS, "undecided": UNDECIDED}.get(rate.verdict, FAILS)
-    return Sentence("Rate", meaning + measured, status)
+    status = HOLDS if rate.holds else UNDECIDED if rate.verdict == "undecided" else FAILS
+    return Sentence("Rate", f"{meaning}.{measured}", status)
 
 
-def _counted_evidence(topic: str, failing: list[str], total: int) -> Sentence:
-    text = f"{total - len(failing)} of {total} hold"
-    return Sentence(
-        topic, f"{text}; not: {'; '.join(failing)}." if failing else f"{text}.", FAILS if failing else HOLDS
-    )
+def _near(distance: float | None) -> str:
+    return "near enough" if distance is None else f"within relative distance {distance:.0e}"
+
+
+def piece_sizes(sizes: Mapping[str, int]) -> str:
+    """Return how many components are on each piece; empty pieces are left out."""
+    return ", ".join(f"{count} {piece}" for piece, count in sizes.items() if count) or "none"
 
 
 def _sizes(sizes: Mapping[str, Mapping[str, int]]) -> str:
-    return "; ".join(
-        f"{name}: " + ", ".join(f"{count} {piece}" for piece, count in of.items())
-        for name, of in sizes.items()
-    )
+    return "; ".join(f"{name}: {piece_sizes(of)}" for name, of in sizes.items())
 
 
 def _series(values: list[int], most: int = 12) -> str:

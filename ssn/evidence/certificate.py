@@ -1,0 +1,76 @@
+"""Whether certificates are true: at the returned point against a tighter solve, and at points further away."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+
+from ..composite import CompositeProblem
+from ..control import ControlProblem
+from ..protocols import FloatArray
+from ..solution import Solution
+from ..solve import solve
+from .check import Check
+
+AWAY = (1e-1, 1e-2, 1e-3, 1e-5)
+
+
+def certificate(problem: Any, solution: Solution, *, seed: int = 0) -> Check | None:
+    """Check the distance bound; None where there is none.
+
+    The tighter solve starts from the solution and has a hundredth of its tolerance. The same inequality is then
+    evaluated at seeded points further away, where a wrong constant shows, against the solution.
+    """
+    own = solution.certificate
+    if own is None:
+        return None
+    norm = problem.controls.norm
+    rounding = 1e-13 * norm(solution.x)
+    tighter = solve(problem, solution.x, tolerance=max(1e-2 * solution.tolerance, 1e-14))
+    if tighter.certificate is not None:
+        gap = norm(solution.x - tighter.x)
+        if gap > own.bound + tighter.certificate.bound + rounding:
+            detail = f"a tighter solve moved the point by {gap:.1e}, the certificate allows {own.bound:.1e}"
+            return Check("certificate", False, detail)
+        best, left = min(
+            ((s.x, s.certificate.bound) for s in (solution, tighter) if s.certificate), key=lambda p: p[1]
+        )
+    else:
+        best, left = solution.x, own.bound
+    rng = np.random.default_rng(seed)
+    tried, tightest = 0, float("inf")
+    for size in AWAY:
+        h = rng.standard_normal(problem.unknowns)
+        u = best + size * (norm(best) or 1.0) * h / norm(h)
+        certified = _certify(problem, u)
+        if certified is None:
+            continue
+        z, bound = certified
+        gap = norm(z - best)
+        tried += 1
+        if gap > 1.001 * bound + left + rounding:
+            detail = (
+                f"at a perturbation of {size:.0e} the distance is {gap:.1e} and the certificate {bound:.1e}"
+            )
+            return Check("certificate", False, detail + ": the bound is too small")
+        if gap > 100.0 * (left + rounding):
+            tightest = min(tightest, bound / gap)
+    sharp = f", at best {tightest:.1f} times the distance" if np.isfinite(tightest) else ""
+    detail = f"bound {own.relative:.1e} relative; true against a tighter solve and at {tried} points{sharp}"
+    return Check("certificate", True, detail)
+
+
+def _certify(problem: Any, u: FloatArray) -> tuple[FloatArray, float] | None:
+    """The certified point that belongs to u and its bound, by the problem's own inequality."""
+    if isinstance(problem, ControlProblem):
+        observed = problem.forward(u)
+        v = problem.adjoint(problem.reduced_target() - observed) / problem.alpha
+        z = problem.cost.prox(v, 1.0 / problem.alpha)
+        difference = problem.forward(z) - observed
+        bound = problem.certify(difference, problem.controls.norm(z), 0.0)
+        return None if bound is None else (z, bound.bound)
+    if isinstance(problem, CompositeProblem):
+        z, found = problem.certify(problem.cost.prox(u, 1e-300))
+        return None if found is None else (z, found.bound)
+    return None

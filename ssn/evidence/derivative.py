@@ -1,0 +1,109 @@
+"""The derivative check: everything a problem claims about its own derivatives, adjoints and proximal map."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+
+from ..complementarity import ComplementarityProblem
+from ..composite import CompositeProblem
+from ..control import ControlProblem
+from ..protocols import FloatArray
+from ..smooth import LeastSquares
+from ..validate import float_array
+from . import adjoints, proximal, quotient, taylor
+from .check import Check
+from .local import Local
+
+
+def check_derivative(problem: Any, at: Any = None, *, seed: int = 0) -> tuple[Check, ...]:
+    """Check derivatives, adjoints and proximal map of a problem or an equation, without solving it.
+
+    Parameters
+    ----------
+    problem : ControlProblem, CompositeProblem, ComplementarityProblem, or object with the Equation protocol
+    at : array, optional
+        Where; a control for control problems. By default the problem's own start; a second point is drawn near it,
+        and a third on the nearest kink.
+    seed : int
+        Of all random directions.
+
+    Returns
+    -------
+    tuple of Check
+        "newton derivative": ||F(x+h) - F(x) - G(x+h) h|| / ||h|| -> 0 along random, smooth and kink-crossing
+        directions; "newton step": the linear solver solves the system of that G; "pieces": the labels agree with
+        the derivative; "proximal map": it minimises what it should; "gradient", "hessian", "hessian symmetry",
+        "map derivative": Taylor tests; "adjoint" and, for control problems, "state operator", "state solve",
+        "adjoint solve", "control operator adjoint", "observation adjoint". Those that apply.
+
+    Raises
+    ------
+    InputError
+        For a point of the wrong shape, or an Equation without ``start`` and without `at`.
+    """
+    point = None if at is None else float_array(at, "at", ndim=1)
+    rng = np.random.default_rng(seed)
+    local = Local(problem, point)
+    checks = [quotient.newton_derivative(local, rng)]
+    step = quotient.newton_step(local)
+    if step is not None:
+        checks.append(step)
+    labels = proximal.piece_labels(local)
+    if labels is not None:
+        checks.append(labels)
+    if hasattr(problem, "cost"):
+        checks.append(_proximal(local, rng))
+    if isinstance(problem, ControlProblem | CompositeProblem | ComplementarityProblem):
+        u = local.x if not local.dual else np.zeros(problem.unknowns) if point is None else point
+        checks += _smooth(problem, u, _size(local, u), rng)
+    if isinstance(problem, ControlProblem):
+        checks += adjoints.control(problem, rng)
+    elif isinstance(problem, CompositeProblem) and isinstance(problem.part, LeastSquares):
+        checks.append(adjoints.least_squares(problem, rng))
+    return tuple(checks)
+
+
+def _size(local: Local, u: FloatArray) -> float:
+    """Size of the perturbations of the user's unknown."""
+    controls = local.problem.controls
+    size = float(controls.norm(u))
+    if size == 0.0 and local.dual:
+        point = local.evaluate(local.x).data
+        size = float(controls.norm(point.control)) if point is not None else 0.0
+    if size == 0.0 and not local.dual:
+        size = local.reference
+    return size if size > 0.0 and np.isfinite(size) else float(controls.norm(np.ones(u.size)))
+
+
+def _proximal(local: Local, rng: np.random.Generator) -> Check:
+    at = local.evaluate(local.x)
+    if at.data is None:
+        return Check("proximal map", False, "the residual is not finite at the point")
+    equation = local.equation
+    if local.dual:
+        step, weights = 1.0 / equation.alpha, equation.tracking.controls.vector
+    else:
+        step, weights = (float(at.data.step) if np.ndim(at.data.step) == 0 else 1.0), equation.weights
+    return proximal.proximal_map(equation.cost, at.data.v, step, weights, rng)
+
+
+def _smooth(problem: Any, u: FloatArray, size: float, rng: np.random.Generator) -> list[Check]:
+    checks = []
+
+    def step(h: FloatArray) -> FloatArray:
+        return h * (size / max(float(problem.controls.norm(h)), 1e-300))
+
+    if not isinstance(problem, ComplementarityProblem) or problem.symmetric:
+        checks.append(taylor.gradient(problem, u, size, rng))
+    if isinstance(problem, CompositeProblem):
+        complaint = "hessian() is not the derivative of gradient()"
+        checks.append(taylor.jacobian("hessian", problem.value, problem.derivative, u, step, rng, complaint))
+        checks.append(taylor.symmetry(problem.derivative(u), u.size, rng))
+    if isinstance(problem, ComplementarityProblem):
+        complaint = "derivative() is not the derivative of value()"
+        checks.append(
+            taylor.jacobian("map derivative", problem.value, problem.derivative, u, step, rng, complaint)
+        )
+    return checks

@@ -1,0 +1,72 @@
+"""One yardstick for all methods: accuracy, objective and distance of a point, evaluated afresh."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+
+from ..complementarity import ComplementarityProblem
+from ..equations.general import GeneralEquation
+from ..inner import relative
+from ..protocols import FloatArray
+
+# a point this near the domain of the cost, relative to its norm, is judged at its projection
+INSIDE = 1e-7
+
+
+def is_statement(problem: Any) -> bool:
+    """Whether the problem is one of ours with an accuracy of its own, not a user's equation."""
+    return hasattr(problem, "accuracy") and hasattr(problem, "controls")
+
+
+def accuracy(problem: Any, x: FloatArray) -> float:
+    """The problem's accuracy figure at x; for an equation the root mean square of F / scale."""
+    if is_statement(problem):
+        return float(problem.accuracy(x))
+    return float(GeneralEquation(problem, x.size).evaluate(x).accuracy)
+
+
+def norm(problem: Any, x: FloatArray) -> float:
+    """Norm of the unknown in the problem's inner product."""
+    return float(problem.controls.norm(x)) if is_statement(problem) else float(np.linalg.norm(x))
+
+
+def distance(problem: Any, x: FloatArray, ours: FloatArray) -> float:
+    """||x - ours|| / ||ours||; where our solution is zero, relative to the problem's magnitude or to x."""
+    gap = norm(problem, x - ours)
+    size = norm(problem, ours)
+    if size == 0.0 and isinstance(problem, ComplementarityProblem):
+        size = problem.magnitude(ours, problem.row_step(ours))
+    return relative(gap, size if size > 0.0 else norm(problem, x))
+
+
+def has_objective(problem: Any) -> bool:
+    """Whether the problem minimises something."""
+    return is_statement(problem) and (not isinstance(problem, ComplementarityProblem) or problem.symmetric)
+
+
+def objective(problem: Any, x: FloatArray) -> float:
+    """The objective at x, projected where x is outside the domain by rounding only; nan without an objective."""
+    if not has_objective(problem) or not np.isfinite(x).all():
+        return float("nan")
+    inside = project(problem, x)
+    near = norm(problem, inside - x) <= INSIDE * norm(problem, inside)
+    return float(problem.objective(inside if near else x))
+
+
+def start(problem: Any, size: int) -> FloatArray:
+    """Where a method begins that knows nothing of our solution: an equation's own start, else zero in the domain."""
+    own = getattr(problem, "start", None)
+    if callable(own):
+        own = own()
+    if own is not None:
+        return np.array(own, dtype=np.float64)
+    zero = np.zeros(size)
+    return project(problem, zero) if is_statement(problem) else zero
+
+
+def project(problem: Any, x: FloatArray) -> FloatArray:
+    """The nearest point of the cost's domain."""
+    projected: FloatArray = problem.cost.prox(x, 1e-300)
+    return projected

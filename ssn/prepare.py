@@ -1,0 +1,186 @@
+"""What "auto" decides: from a problem statement to an equation, a linear solver and a globalisation, and why."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+
+from .complementarity import ComplementarityProblem
+from .composite import CompositeProblem, LeastSquaresMap
+from .control import ControlProblem
+from .equations.complementarity import MidEquation
+from .equations.dual import DualEquation
+from .equations.general import GeneralEquation
+from .equations.natural import NaturalEquation
+from .errors import InputError
+from .globalization import CATALOGUE, DualSearch, EnvelopeSearch, ResidualSearch
+from .linear import CATALOGUE as LINEAR
+from .linear import GeneralSolver, ReducedSolver, SubspaceSolver
+from .protocols import FloatArray, Globalization, LinearSolver
+from .proximal_point import ProximalPointPath
+from .smooth import LeastSquares
+from .smoothing_path import SmoothingPath
+from .validate import float_array
+
+LINEAR_CHOICES = ("auto", *LINEAR)
+
+
+@dataclass
+class Plan:
+    """A problem made ready for the loop: equation, linear solver, globalisation, start, and why."""
+
+    problem: Any
+    equation: Any
+    solver: LinearSolver
+    globalization: Globalization
+    start: FloatArray
+    choices: dict[str, str]
+    path: ProximalPointPath | None = None
+    polish: NaturalEquation | None = None
+    smoothing: SmoothingPath | None = None
+
+
+def prepare(
+    problem: Any, start: Any = None, *, globalization: str | Globalization = "auto", linear: str = "auto"
+) -> Plan:
+    """Choose equation, linear solver and globalisation for a problem, and check that the choices fit."""
+    if linear not in LINEAR_CHOICES:
+        raise InputError(f"linear must be one of {', '.join(LINEAR_CHOICES)}, got {linear!r}")
+    if isinstance(globalization, str) and globalization not in ("auto", "smoothing", *CATALOGUE):
+        names = ", ".join(map(repr, CATALOGUE))
+        raise InputError(f"globalization must be 'auto', {names} or 'smoothing', got {globalization!r}")
+    if isinstance(problem, ControlProblem):
+        plan = _prepare_control(problem, start)
+    elif isinstance(problem, CompositeProblem):
+        plan = _prepare_composite(problem, start, globalization)
+    elif isinstance(problem, ComplementarityProblem):
+        plan = _prepare_complementarity(problem, start)
+    elif hasattr(problem, "residual") and hasattr(problem, "linearize"):
+        plan = _prepare_equation(problem, start)
+    elif callable(problem):
+        raise InputError(
+            "a plain function brings no derivative: give an object with residual(x) and "
+            "linearize(x) -> ssn.Linearization"
+        )
+    else:
+        raise InputError(
+            f"cannot solve a {type(problem).__name__}: give a ControlProblem, CompositeProblem, "
+            "ComplementarityProblem, "
+            "or an object with residual(x) and linearize(x)"
+        )
+    if linear not in ("auto", plan.solver.name):
+        raise InputError(f"linear={linear!r} does not fit this problem; it is solved by {plan.solver.name!r}")
+    if isinstance(globalization, str) and globalization == "smoothing":
+        if not hasattr(plan.equation, "smoothed"):
+            raise InputError(
+                "globalization='smoothing' needs complementarity or a composite problem without a dual"
+            )
+        plan.smoothing = SmoothingPath()
+        plan.choices["globalization"] = "smoothing: asked for"
+    elif globalization != "auto":
+        plan.smoothing = None
+        plan.globalization = _forced(globalization, plan.equation)
+        plan.choices["globalization"] = f"{plan.globalization.name}: asked for"
+    return plan
+
+
+def _forced(choice: str | Globalization, equation: Any) -> Globalization:
+    made: Any = CATALOGUE[choice]() if isinstance(choice, str) else choice
+    if not hasattr(made, "advance"):
+        raise InputError(f"globalization must have an advance method, got {type(made).__name__}")
+    if isinstance(made, DualSearch) and not isinstance(equation, DualEquation):
+        raise InputError("globalization='dual' needs a control problem or least squares with a convex cost")
+    if isinstance(made, EnvelopeSearch) and getattr(equation, "potential", None) is None:
+        raise InputError(
+            "globalization='envelope' needs an objective: a composite problem or symmetric complementarity"
+        )
+    return made.fresh() if isinstance(made, ResidualSearch) else made
+
+
+def _start_array(start: Any, size: int, name: str = "start") -> FloatArray | None:
+    return None if start is None else float_array(start, name, shape=(size,))
+
+
+def _prepare_control(problem: ControlProblem, start: Any) -> Plan:
+    if not problem.convex:
+        raise InputError(f"{type(problem.cost).__name__} is not convex: control problems need a convex cost")
+    control = _start_array(start, problem.unknowns)
+    path = None if problem.alpha > 0 else ProximalPointPath()
+    alpha = problem.alpha if problem.alpha > 0 else 1.0
+    equation = DualEquation(problem, problem.reduced_target(), alpha, problem.cost)
+    choices = {
+        "equation": "dual equation: quadratic tracking, convex cost",
+        "globalization": "dual: the dual function is convex, exact search costs no solve",
+        "linear": "subspace: one factorisation of the state operator, basis kept between steps",
+    }
+    if path is not None:
+        choices["path"] = "proximal point: control_weight is 0"
+        x = np.zeros(problem.unknowns) if control is None else control
+    else:
+        x = equation.start(control)
+    return Plan(problem, equation, SubspaceSolver(equation), DualSearch(), x, choices, path)
+
+
+def _prepare_composite(problem: CompositeProblem, start: Any, globalization: Any) -> Plan:
+    u = _start_array(start, problem.unknowns)
+    wants_dual = globalization in ("auto", "dual") or isinstance(globalization, DualSearch)
+    if isinstance(problem.part, LeastSquares) and problem.cost.convex and wants_dual:
+        tracking = LeastSquaresMap(problem.part, problem.weights, problem.work)
+        equation: Any = DualEquation(tracking, problem.part.b, 1.0, problem.cost)
+        choices = {
+            "equation": "dual equation: least squares, convex cost",
+            "globalization": "dual: the dual function is convex, exact search costs no product",
+            "path": "proximal point: no strong convexity is assumed",
+        }
+        x = np.zeros(problem.unknowns) if u is None else u
+        return Plan(
+            problem, equation, SubspaceSolver(equation), DualSearch(), x, choices, ProximalPointPath(),
+            _natural_equation(problem),
+        )  # fmt: skip
+    equation = _natural_equation(problem)
+    x = problem.cost.prox(np.zeros(problem.unknowns) if u is None else u, 1e-300)
+    choices = {
+        "equation": "natural residual",
+        "globalization": "envelope: the forward-backward envelope falls at every step",
+    }
+    return Plan(problem, equation, ReducedSolver(equation), EnvelopeSearch(), x if u is None else u, choices)
+
+
+def _natural_equation(problem: CompositeProblem) -> NaturalEquation:
+    return NaturalEquation(
+        problem,
+        problem.cost,
+        problem.natural_step(),
+        problem.weights,
+        potential=problem.potential,
+        work=problem.work,
+    )
+
+
+def _prepare_complementarity(problem: ComplementarityProblem, start: Any) -> Plan:
+    given = _start_array(start, problem.unknowns)
+    x = problem.start() if given is None else given
+    step = problem.row_step(x)
+    equation = MidEquation(problem, step, problem.magnitude(x, step))
+    choices = {
+        "equation": "mid(x - upper, x - lower, F / |diagonal of F'|)",
+        "globalization": "smoothing path, which tries plain steps first and at every point, then residual search: "
+        "plain steps may cycle, or take one step an unknown or a layer of the contact set",
+    }
+    search = ResidualSearch().fresh()
+    return Plan(problem, equation, ReducedSolver(equation), search, x, choices, smoothing=SmoothingPath())
+
+
+def _prepare_equation(problem: Any, start: Any) -> Plan:
+    given = start if start is not None else getattr(problem, "start", None)
+    if given is None:
+        raise InputError("give start: an Equation does not tell its number of unknowns")
+    x = float_array(given, "start", ndim=1)
+    equation = GeneralEquation(problem, x.size)
+    choices = {
+        "equation": "given by the caller",
+        "globalization": "residual: nonmonotone, least squares behind it",
+    }
+    return Plan(problem, equation, GeneralSolver(equation), ResidualSearch().fresh(), x, choices)
