@@ -23,8 +23,8 @@ Source: own scenario. Values marked (c) are common practice or textbook orders o
                     outside temperature -8 degC and 1.5 W/(m K)
     T_set           10 degC, bench temperature wanted under hardy seedlings and cuttings in winter (c)
     u_max           150 W/m^2, usual for horticultural heating mats (c)
-    beta            0.05 K^2/(W/m^2), price of the power: 1 W for a lasting K^2 m^2 / 20 of misfit; where heaters are
-                    below their limit, the plants stay about h (beta + alpha u) below the set point, 0.3 K and more
+    beta            0.05 K^2/(W/m^2): a watt costs as much as 0.05 K^2 m^2 of misfit; in the middle of wide heater
+                    places the plants stay h (beta + alpha u) below the set point, 0.3 K and more
     alpha           2e-4 K^2/(W/m^2)^2: 0.03 K^2/(W/m^2) at u_max, of the order of the price; smooths the power
 
 Linear elements for T, one power value a triangle for u, on an unstructured Delaunay mesh that resolves bench, bays and
@@ -451,10 +451,11 @@ def picture(problem: ssn.ControlProblem, solution: ssn.Solution) -> Any:
         largest = limit if np.isfinite(limit) else float(power.max())
         watts = bottom.tripcolor(*mesh.p, mesh.t.T[on], power[on], cmap="YlOrRd", vmin=0.0, vmax=largest)
         figure.colorbar(watts, ax=bottom, label="heater power (W/m²)", shrink=0.95)
+    outside = f"{data.parameters['outside']:g}".replace("-", "\N{MINUS SIGN}")
     for axes in (top, bottom):
         _outline(axes, mesh, np.ones_like(on), colors="black", linewidths=1.2)
         axes.plot([0.0, LENGTH], [-0.04, -0.04], color="#3a8fd8", lw=5, solid_capstyle="butt")
-        words = f"window side, outside {data.parameters['outside']:g} °C"
+        words = f"window side, outside {outside} °C"
         axes.text(LENGTH / 2, -0.09, words, color="#1f6fb0", ha="center", va="top")
         axes.set(aspect="equal", xlim=(-0.04, LENGTH + 0.04), ylim=(-0.26, DEPTH + 0.04), ylabel="y (m)")
         axes.set_yticks([0.0, 0.5, 1.0, 1.5])
@@ -516,4 +517,5 @@ def _name_places(axes: Any, problem: ssn.ControlProblem, solution: ssn.Solution)
         corners = data.mesh.p[:, data.mesh.t[:, place == k]].reshape(2, -1)
         x, y = (corners[0].min() + corners[0].max()) / 2, corners[1].max() + 0.05
         words = f"{watts[place == k].sum():.0f} W"
-        axes.text(x, y, words, ha="center", va="bottom", fontweight="bold", fontsize=9)
+        box = {"facecolor": "white", "edgecolor": "none", "pad": 1.0}
+        axes.text(x, y, words, ha="center", va="bottom", fontweight="bold", fontsize=9, bbox=box)

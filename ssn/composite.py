@@ -120,6 +120,8 @@ class CompositeProblem:
         explicit = not isinstance(hessian, LinearOperator)
         if explicit and self.unknowns <= 500:
             dense = hessian.toarray() if hasattr(hessian, "toarray") else np.asarray(hessian)
+            if not np.isfinite(dense).all():
+                return 1.0
             root = np.sqrt(self.weights)
             bound = float(np.abs(sla.eigvalsh(dense / np.outer(root, root))).max())
         else:
@@ -132,7 +134,7 @@ class CompositeProblem:
                 x = product(hessian, x / size) / self.weights
                 bound = self.controls.norm(x)
             bound *= 1.05
-        self._lipschitz = bound if bound > 0.0 else 1.0
+        self._lipschitz = bound if bound > 0.0 and np.isfinite(bound) else 1.0
         return self._lipschitz
 
     @property
@@ -144,6 +146,8 @@ class CompositeProblem:
                 hessian = self.derivative(np.zeros(self.unknowns))
                 if not isinstance(hessian, LinearOperator):
                     dense = hessian.toarray() if hasattr(hessian, "toarray") else np.asarray(hessian)
+                    if not np.isfinite(dense).all():
+                        return 0.0
                     root = np.sqrt(self.weights)
                     values = sla.eigvalsh(dense / np.outer(root, root))
                     rounding = (

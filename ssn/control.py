@@ -222,12 +222,14 @@ class ControlProblem:
         dual = self.state.adjoint_solve(self.state.adjoint_residual(p, rhs))
         return 2.0 * self.controls.norm(self.pull_back(dual))
 
-    def certify(self, difference: FloatArray, reference: float, gradient_error: float) -> Certificate | None:
-        """Distance bound for z = prox(u - grad f(u)/alpha, 1/alpha) from S (z - u)."""
+    def certify(
+        self, difference: FloatArray, reference: float, gradient_error: float, moved: float = 0.0
+    ) -> Certificate | None:
+        """Distance bound for z = prox(u - grad f(u)/alpha, 1/alpha) from S (z - u), or for a point `moved` from z."""
         if self.alpha == 0.0 or not self.convex:
             return None
         solve_error = gradient_error / self.alpha
-        bound = self.observations.norm(difference) / (2.0 * np.sqrt(self.alpha)) + solve_error
+        bound = self.observations.norm(difference) / (2.0 * np.sqrt(self.alpha)) + solve_error + moved
         return Certificate(bound, relative(bound, reference), "||S (z - u)|| / (2 sqrt(alpha))", solve_error)
 
 

@@ -85,44 +85,48 @@ def extragradient(
     t = unit
     outcome, bound, converged, iteration = "iteration limit", None, False, 0
     force = force_at(x)
-    for iteration in range(1, max_iterations + 1):
-        while True:
-            y = np.clip(x - t * force, low, high)
-            force_y = force_at(y)
-            gap = float(np.linalg.norm(x - y))
-            change = float(np.linalg.norm(force - force_y))
-            noise = NOISE * max(float(np.linalg.norm(x)), magnitude)
-            if gap <= noise or (np.isfinite(change) and t * change <= 0.9 * gap) or t < 1e-300:
+    with np.errstate(over="ignore", invalid="ignore"):
+        for iteration in range(1, max_iterations + 1):
+            while True:  # shorten t
+                y = np.clip(x - t * force, low, high)
+                force_y = force_at(y)
+                gap = float(np.linalg.norm(x - y))
+                change = float(np.linalg.norm(force - force_y))
+                noise = NOISE * max(float(np.linalg.norm(x)), magnitude)
+                if gap <= noise or (np.isfinite(change) and t * change <= 0.9 * gap) or t < 1e-300:
+                    break
+                t = max(0.1 * t, min(0.7 * t, 0.8 * gap / change if np.isfinite(change) else 0.0))
+            if not (np.isfinite(gap) and np.isfinite(force_y).all()):
+                outcome = "not finite"
                 break
-            t = max(0.1 * t, min(0.7 * t, 0.8 * gap / change if np.isfinite(change) else 0.0))
-        if not np.isfinite(gap):
-            outcome = "not finite"
-            break
-        size = max(float(np.linalg.norm(x)), magnitude)
-        if mu > 0.0:
-            bound = (1.0 + t * lipschitz) / (t * mu) * gap
-            figure = relative(bound, size)
-            converged = figure <= tolerance
-        else:
-            figure = relative(gap * max(1.0, unit / t), size)
-            converged = figure <= tolerance**1.5 or gap <= NOISE * size
-        if callback is not None:
-            callback(iteration, figure)
-        if converged:
-            outcome = "converged"
-            break
-        if budget is not None and time.monotonic() - began > budget:
-            outcome = "budget used up"
-            break
-        generous = t * change <= 0.4 * gap
-        x = np.clip(x - t * force_y, low, high)
-        force = force_at(x)
-        if not np.isfinite(force).all():
-            outcome = "not finite"
-            break
-        if generous:
-            t *= 1.5
-    objective = problem.objective(x) if problem.symmetric else float("nan")
+            size = max(float(np.linalg.norm(x)), magnitude)
+            if mu > 0.0:
+                bound = (1.0 + t * lipschitz) / (t * mu) * gap
+                figure = relative(bound, size)
+                converged = figure <= tolerance
+            else:
+                figure = relative(gap * max(1.0, unit / t), size)
+                converged = figure <= tolerance**1.5 or (gap <= NOISE * size and t >= unit)
+            if callback is not None:
+                callback(iteration, figure)
+            if converged:
+                outcome = "converged"
+                break
+            if budget is not None and time.monotonic() - began > budget:
+                outcome = "budget used up"
+                break
+            generous = t * change <= 0.4 * gap
+            x = np.clip(x - t * force_y, low, high)
+            force = force_at(x)
+            if not np.isfinite(force).all():
+                outcome = "not finite"
+                break
+            if generous:
+                t *= 1.5
+    objective = float("nan")
+    if problem.symmetric and outcome != "not finite":
+        with np.errstate(over="ignore", invalid="ignore"):
+            objective = problem.objective(x)
     return ReferenceResult(x, converged, outcome, iteration, objective, bound, problem.work.since(before))
 
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
@@ -17,13 +18,18 @@ from .protocols import FloatArray
 from .solution import Solution
 from .status import Outcome
 
+# relative disagreement of two evaluations of one inner product that no rounding explains
+ADJOINT_ERROR = 1e-7
+# error left by the linear solves, relative to the control, from which on a solution counts as inaccurate
+SOLVE_ERROR = 1e-7
+
 
 def finish(plan: Plan, result: LoopResult, limits: Limits, before: Any) -> Solution:
     """Recompute the accuracy at the returned point, certify it, and collect what belongs to it."""
     best = result.best
     fields: dict[str, Any] = {}
     if isinstance(plan.equation, DualEquation):
-        x, accuracy, fields = _finish_dual(plan, result)
+        x, accuracy, fields = _finish_dual(plan, result, limits.tolerance)
     elif isinstance(plan.problem, CompositeProblem):
         x, accuracy, fields = _finish_composite(plan, result)
     elif isinstance(plan.problem, ComplementarityProblem):
@@ -36,6 +42,9 @@ def finish(plan: Plan, result: LoopResult, limits: Limits, before: Any) -> Solut
     if outcome is Outcome.CONVERGED and not accuracy <= limits.tolerance:
         outcome = Outcome.INACCURATE
         message = f"accuracy {accuracy:.1e} when computed afresh, {best.accuracy:.1e} in the iteration"
+    doubt = fields.pop("doubt", None)
+    if outcome is Outcome.CONVERGED and doubt is not None:
+        outcome, message = doubt
     work = plan.equation.work
     return Solution(
         x=x,
@@ -56,7 +65,50 @@ def finish(plan: Plan, result: LoopResult, limits: Limits, before: Any) -> Solut
     )
 
 
-def _finish_dual(plan: Plan, result: LoopResult) -> tuple[FloatArray, float, dict[str, Any]]:
+@dataclass(frozen=True)
+class _ControlPoint:
+    """A control with its state, adjoint and accuracy, all evaluated afresh."""
+
+    x: FloatArray
+    observed: FloatArray
+    misfit: FloatArray
+    gradient: FloatArray
+    v: FloatArray
+    accuracy: float
+    state: FloatArray | None
+    adjoint: FloatArray | None
+
+
+def _evaluated(plan: Plan, x: FloatArray) -> _ControlPoint:
+    equation: DualEquation = plan.equation
+    problem, tracking = plan.problem, equation.tracking
+    state = adjoint = None
+    if isinstance(problem, ControlProblem):
+        response = problem.response(x)
+        observed = problem.observe(response)
+        misfit = equation.target - observed
+        adjoint = problem.adjoint_of(misfit)
+        gradient = -problem.pull_back(adjoint)
+        state = response + problem.offset()
+    else:
+        observed = tracking.forward(x)
+        misfit = equation.target - observed
+        gradient = -tracking.adjoint(misfit)
+    step = 1.0 / equation.alpha
+    # the normal map of the problem itself; on a path the natural residual with its last step
+    v = -step * gradient if _own_weight(problem) > 0 else x - step * gradient
+    moved = equation.prox(v)
+    accuracy = relative(tracking.controls.norm(x - moved), tracking.controls.norm(moved))
+    return _ControlPoint(x, observed, misfit, gradient, v, accuracy, state, adjoint)
+
+
+def _own_weight(problem: Any) -> float:
+    return float(problem.alpha) if isinstance(problem, ControlProblem) else 0.0
+
+
+def _finish_dual(
+    plan: Plan, result: LoopResult, tolerance: float
+) -> tuple[FloatArray, float, dict[str, Any]]:
     equation: DualEquation = plan.equation
     problem, best = plan.problem, result.best
     if plan.path is not None and result.last.data is not None:
@@ -65,41 +117,43 @@ def _finish_dual(plan: Plan, result: LoopResult) -> tuple[FloatArray, float, dic
         return np.zeros(problem.unknowns), float("inf"), {"pieces": best.pieces}
     tracking, alpha = equation.tracking, equation.alpha
     controls = tracking.controls
-    z = best.data.corrected
-    control = isinstance(problem, ControlProblem)
-    if control:
-        response = problem.response(z)
-        observed = problem.observe(response)
-        misfit = equation.target - observed
-        p = problem.adjoint_of(misfit)
-        gradient = -problem.pull_back(p)
-        state = response + problem.offset()
-    else:
-        observed = tracking.forward(z)
-        misfit = equation.target - observed
-        gradient = -tracking.adjoint(misfit)
+    certified = at = _evaluated(plan, best.data.corrected)
+    if at.accuracy > tolerance >= best.accuracy:
+        # the proximal map of the normal map amplifies rounding by ||S||^2/alpha: the iterate itself may be better
+        other = _evaluated(plan, best.data.control)
+        at = other if other.accuracy < at.accuracy else at
+    own_weight = _own_weight(problem)
+    reference = controls.norm(at.x)
     step = 1.0 / alpha
-    own_weight = problem.alpha if control else 0.0
-    # the normal map of the problem itself; on a path the natural residual with its last step
-    v = -step * gradient if own_weight > 0 else z - step * gradient
-    moved = equation.prox(v)
-    reference = controls.norm(z)
-    accuracy = relative(controls.norm(z - moved), controls.norm(moved))
-    subgradient = -gradient - own_weight * z
-    smooth_value = 0.5 * tracking.observations.dot(misfit, misfit) + 0.5 * own_weight * controls.dot(z, z)
+    smooth_value = 0.5 * tracking.observations.dot(at.misfit, at.misfit) + 0.5 * own_weight * controls.dot(
+        at.x, at.x
+    )
     fields: dict[str, Any] = {
-        "pieces": equation.cost.pieces(v, step),
-        "margins": equation.cost.margins(v, step),
-        "multipliers": equation.cost.multipliers(z, subgradient),
-        "objective": smooth_value + equation.cost.value(z, controls.vector),
+        "pieces": equation.cost.pieces(at.v, step),
+        "margins": equation.cost.margins(at.v, step),
+        "multipliers": equation.cost.multipliers(at.x, -at.gradient - own_weight * at.x),
+        "objective": smooth_value + equation.cost.value(at.x, controls.vector),
     }
-    if control:
-        error = problem.gradient_error(z, state, p)
-        fields["certificate"] = problem.certify(observed - best.data.observed, reference, error)
-        fields["state"], fields["adjoint"] = state, p
+    image = tracking.observations.dot(at.misfit, at.observed)
+    fields["doubt"] = _adjoint_doubt(
+        image, -controls.dot(at.gradient, at.x), controls.norm(at.gradient) * reference
+    )
+    if isinstance(problem, ControlProblem):
+        assert at.state is not None and at.adjoint is not None
+        error = problem.gradient_error(at.x, at.state, at.adjoint)
+        difference = certified.observed - best.data.observed
+        moved = controls.norm(at.x - certified.x)
+        fields["certificate"] = problem.certify(difference, reference, error, moved)
+        fields["state"], fields["adjoint"] = at.state, at.adjoint
+        if own_weight > 0 and error / own_weight > SOLVE_ERROR * reference > 0:
+            fields["doubt"] = (
+                Outcome.INACCURATE,
+                f"the state and adjoint solves leave an error of {error / own_weight / reference:.1e} in the control",
+            )
     elif problem.strong_convexity > 0:
-        z, fields["certificate"] = problem.certify(z)
-    return z, accuracy, fields
+        x, fields["certificate"] = problem.certify(at.x)
+        return x, at.accuracy, fields
+    return at.x, at.accuracy, fields
 
 
 def _finish_composite(plan: Plan, result: LoopResult) -> tuple[FloatArray, float, dict[str, Any]]:
@@ -112,12 +166,58 @@ def _finish_composite(plan: Plan, result: LoopResult) -> tuple[FloatArray, float
     _, gradient = problem.smooth(z)
     v = z - step * gradient
     return z, accuracy, {
+        "doubt": _composite_doubt(problem, z, v, step),
         "pieces": problem.cost.pieces(v, step),
         "margins": problem.cost.margins(v, step),
         "multipliers": problem.cost.multipliers(z, -gradient),
         "objective": problem.objective(z),
         "certificate": certificate,
     }  # fmt: skip
+
+
+def _adjoint_doubt(one: float, other: float, scale: float) -> tuple[Outcome, str] | None:
+    """Compare <r, S u> with <S* r, u>, which costs nothing where both images are known."""
+    if abs(one - other) <= ADJOINT_ERROR * max(scale, abs(one)):
+        return None
+    return Outcome.INACCURATE, f"S* is not the adjoint of S: <r, S u> = {one:.10g}, <S* r, u> = {other:.10g}"
+
+
+def _composite_doubt(
+    problem: CompositeProblem, z: FloatArray, v: FloatArray, step: float
+) -> tuple[Outcome, str] | None:
+    """Whether value and gradient of a quadratic part disagree, or the point is no minimum."""
+    if not problem.affine:
+        return None
+    zero = np.zeros(problem.unknowns)
+    there, gradient = problem.smooth(z)
+    here, first = problem.smooth(zero)
+    change = 0.5 * problem.controls.dot(gradient + first, z)
+    if abs(there - here - change) > ADJOINT_ERROR * (abs(there) + abs(here) + abs(change)):
+        return Outcome.INACCURATE, (
+            f"the gradient is not that of the value: f(u) - f(0) = {there - here:.10g}, the gradients say {change:.10g}"
+        )
+    if problem.convex:
+        twice = problem.objective(2.0 * z)
+        if np.isfinite(twice) and twice < there + problem.cost.value(z, problem.weights) - 1e-6 * abs(twice):
+            return Outcome.UNBOUNDED, f"the objective is lower still at twice the point: {twice:.3g}"
+        return None
+    free = problem.cost.prox_derivative(v, step).diagonal
+    if free is None or not free.any():
+        return None
+    rows = np.flatnonzero(free > 0)
+    hessian = problem.derivative(z)
+    dense = hessian.toarray() if hasattr(hessian, "toarray") else np.asarray(hessian)
+    values, vectors = np.linalg.eigh(dense[np.ix_(rows, rows)])
+    if values[0] >= -1e-10 * np.abs(values).max():
+        return None
+    far = z.copy()
+    far[rows] += 1e8 * (1.0 + problem.controls.norm(z)) * vectors[:, 0]
+    if problem.objective(far) < problem.objective(z):
+        return (
+            Outcome.UNBOUNDED,
+            f"the objective falls without bound along negative curvature {values[0]:.1e}",
+        )
+    return Outcome.SADDLE_POINT, f"negative curvature {values[0]:.1e} among the free components"
 
 
 def _finish_complementarity(plan: Plan, result: LoopResult) -> tuple[FloatArray, float, dict[str, Any]]:

@@ -79,6 +79,7 @@ def run(
     seen: dict[bytes, list[tuple[int, float]]] = {}
     top_norm = at.norm
     index = first_index
+    complete = getattr(equation, "complete", None)  # evaluations that bring no pieces by themselves
     try:
         while True:
             if at.accuracy <= limits.tolerance:
@@ -105,6 +106,8 @@ def run(
                 if stricter is not None:
                     globalization = stricter
                     seen.clear()
+            if index == first_index and complete is not None:
+                at = complete(at)
             forcing = _forcing(at, top_norm, limits)
             before = equation.work.copy()
             direction: Direction = solver.solve(at, forcing)
@@ -112,7 +115,7 @@ def run(
             if step.at is None:
                 result.outcome, result.message = _why_no_step(at, direction, step.reason, equation)
                 return result
-            new = step.at
+            new = step.at if complete is None else complete(step.at)
             top_norm = max(top_norm, new.norm)
             reason = step.reason
             if repeated is not None:

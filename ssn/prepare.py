@@ -24,6 +24,9 @@ from .smooth import LeastSquares
 from .smoothing_path import SmoothingPath
 from .validate import float_array
 
+# full steps tried first on a general equation: piecewise smooth ones settle within them or cycle
+PLAIN_STEPS = 12
+
 LINEAR_CHOICES = ("auto", *LINEAR)
 
 
@@ -40,6 +43,7 @@ class Plan:
     path: ProximalPointPath | None = None
     polish: NaturalEquation | None = None
     smoothing: SmoothingPath | None = None
+    plain_steps: int = 0
 
 
 def prepare(
@@ -80,7 +84,7 @@ def prepare(
         plan.smoothing = SmoothingPath()
         plan.choices["globalization"] = "smoothing: asked for"
     elif globalization != "auto":
-        plan.smoothing = None
+        plan.smoothing, plan.plain_steps = None, 0
         plan.globalization = _forced(globalization, plan.equation)
         plan.choices["globalization"] = f"{plan.globalization.name}: asked for"
     return plan
@@ -181,6 +185,7 @@ def _prepare_equation(problem: Any, start: Any) -> Plan:
     equation = GeneralEquation(problem, x.size)
     choices = {
         "equation": "given by the caller",
-        "globalization": "residual: nonmonotone, least squares behind it",
+        "globalization": "a few full steps, then residual search (nonmonotone, least squares behind it)",
     }
-    return Plan(problem, equation, GeneralSolver(equation), ResidualSearch().fresh(), x, choices)
+    search = ResidualSearch().fresh()
+    return Plan(problem, equation, GeneralSolver(equation), search, x, choices, plain_steps=PLAIN_STEPS)

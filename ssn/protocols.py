@@ -168,8 +168,8 @@ class NewtonEquation(Protocol):
 
     def merit_line(
         self, at: Evaluation, direction: FloatArray
-    ) -> Callable[[float], tuple[float, float]] | None:
-        """A function t -> (merit slope, its derivative) along x + t d where that is cheap, else None."""
+    ) -> Callable[[float], tuple[float, float, float]] | None:
+        """A function t -> (merit slope, its derivative, rounding error) along x + t d where cheap, else None."""
         ...
 
     def fallback(self, at: Evaluation) -> FallbackStep | None:

@@ -82,7 +82,12 @@ class Solution:
 
     def __repr__(self) -> str:
         size = "x".join(map(str, self.x.shape))
-        certified = "" if self.certificate is None else f", certified to {self.certificate.relative:.1e}"
+        certified = ""
+        if self.certificate is not None:
+            bound = self.certificate
+            certified = f", certified to {bound.relative:.1e}"
+            if not np.isfinite(bound.relative):
+                certified = f", zero within {bound.bound:.1e}"
         return (
             f"Solution({self.outcome.value}, {len(self.steps)} steps, accuracy {self.accuracy:.1e}{certified}, "
             f"x of shape {size})"

@@ -109,8 +109,22 @@ def _run_until_confirmed(plan: Plan, limits: Limits, callback: Callback | None, 
     """Iterate; go on with a tighter inner tolerance while the accuracy at the returned point is not confirmed."""
     if plan.smoothing is not None:
         result = _run_smoothing(plan, limits, callback)
+    elif plan.plain_steps:
+        result = _run_plain_first(plan, limits, callback)
     else:
         result = run(plan.equation, plan.solver, plan.globalization, plan.start, limits, callback=callback)
+    if (
+        result.outcome is Outcome.STALLED
+        and isinstance(plan.equation, DualEquation)
+        and result.best.data is not None
+    ):
+        # the pair [q, S* q] has drifted apart by rounding: bring it together at the best control and go on
+        again = run(
+            plan.equation, plan.solver, plan.globalization, plan.equation.start(result.best.data.corrected),
+            replace(limits, max_steps=limits.max_steps - len(result.steps)),
+            callback=callback, first_index=len(result.steps) + 1, stage="dual pair recomputed",
+        )  # fmt: skip
+        result = _joined(result, again)
     solution = finish(plan, result, limits, before)
     inner = limits
     for _ in range(CONFIRMATIONS):
@@ -144,6 +158,27 @@ def _run_smoothing(plan: Plan, limits: Limits, callback: Callback | None) -> Loo
     ended = run(
         plan.equation, plan.solver, plan.globalization, result.best.x, replace(limits, max_steps=left),
         callback=callback, first_index=len(result.steps) + 1,
+    )  # fmt: skip
+    return _joined(result, ended)
+
+
+def _run_plain_first(plan: Plan, limits: Limits, callback: Callback | None) -> LoopResult:
+    """A few full steps, which settle most piecewise smooth equations; if they do not, a search follows."""
+    first = min(plan.plain_steps, max(1, limits.max_steps // 2))
+    result = run(
+        plan.equation, plan.solver, FullStep(), plan.start, replace(limits, max_steps=first),
+        callback=callback, stage="plain steps",
+    )  # fmt: skip
+    left = limits.max_steps - len(result.steps)
+    if (
+        result.outcome in (Outcome.CONVERGED, Outcome.STOPPED, Outcome.INTERRUPTED)
+        or left <= 0
+        or not result.best.finite
+    ):
+        return result
+    ended = run(
+        plan.equation, plan.solver, plan.globalization, result.best.x, replace(limits, max_steps=left),
+        callback=callback, first_index=len(result.steps) + 1, stage="search from the best point",
     )  # fmt: skip
     return _joined(result, ended)
 

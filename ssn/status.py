@@ -17,6 +17,7 @@ class Outcome(Enum):
     NO_ROOT_NEARBY = "no root nearby"
     INFEASIBLE = "infeasible"
     UNBOUNDED = "unbounded"
+    SADDLE_POINT = "saddle point"
     INACCURATE = "inaccurate"
     STOPPED = "stopped"
     INTERRUPTED = "interrupted"
@@ -69,6 +70,11 @@ _TEXTS: dict[Outcome, tuple[str, str]] = {
     Outcome.UNBOUNDED: (
         "The objective falls without bound along the iterates.",
         "Add a bound, or a positive quadratic weight.",
+    ),
+    Outcome.SADDLE_POINT: (
+        "The first-order conditions hold at the returned point, but the objective falls from it along a direction of "
+        "negative curvature.",
+        "Start from another point; the problem is not convex.",
     ),
     Outcome.INACCURATE: (
         "The iteration met its tolerance, but an independent evaluation at the returned point did not.",

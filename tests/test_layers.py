@@ -38,6 +38,7 @@ LEVELS: dict[str, float] = {
     "smooth": 1.5,
     "solution": 1.5,
     "states": 1.5,
+    "environment": 1.5,
     # statements, and the loop
     "complementarity": 2,
     "composite": 2,
@@ -50,7 +51,7 @@ LEVELS: dict[str, float] = {
     "proximal_point": 2.25,
     "smoothing_path": 2.25,
     # what "auto" decides, and the end of a solve
-    "extragradient": 2,
+    "extragradient": 2.1,
     "prepare": 2.3,
     "finish": 2.4,
     # front doors

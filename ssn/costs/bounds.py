@@ -35,6 +35,8 @@ class Bounds(SparseCost):
 
     def prox(self, v: FloatArray, step: float) -> FloatArray:
         """Return clip(v, lower, upper)."""
+        if hasattr(v, "through_prox"):  # a traced array: with derivative, pieces and smoothed form
+            return v.through_prox(self, step)
         return np.clip(v, self.lower, self.upper)
 
     def pieces(self, v: FloatArray, step: float) -> Pieces:
@@ -42,6 +44,7 @@ class Bounds(SparseCost):
         labels = np.ones(v.shape, dtype=np.int8)
         labels[v <= self.lower] = 0
         labels[v >= self.upper] = 2
+        labels[np.broadcast_to(self.lower == self.upper, labels.shape)] = 0
         return Pieces({"control": labels}, {"control": ("lower", "free", "upper")})
 
     def multipliers(self, u: FloatArray, subgradient: FloatArray) -> dict[str, FloatArray]:

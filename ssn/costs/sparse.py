@@ -86,6 +86,8 @@ class SparseCost:
 
     def prox(self, v: FloatArray, step: float) -> FloatArray:
         """Return clip(soft(v, step * beta), lower, upper)."""
+        if hasattr(v, "through_prox"):  # a traced array: with derivative, pieces and smoothed form
+            return v.through_prox(self, step)
         result = self._shrink(v, step)
         return np.clip(result, self.lower, self.upper, out=result)
 
@@ -106,6 +108,7 @@ class SparseCost:
             labels[np.broadcast_to(self.beta == 0, labels.shape)] = FREE
         labels[shrunk <= self.lower] = LOWER
         labels[shrunk >= self.upper] = UPPER
+        labels[np.broadcast_to(self.lower == self.upper, labels.shape)] = LOWER  # one piece, one label
         return Pieces({"control": labels}, {"control": LEGEND})
 
     def margins(self, v: FloatArray, step: float) -> FloatArray:
@@ -123,7 +126,7 @@ class SparseCost:
             nonzero = np.isfinite(bound) & ((bound != 0) | (t == 0))
             kink = np.where(nonzero, bound + np.sign(bound) * t, 0.0)
             np.minimum(distance, np.where(nonzero, np.abs(v - kink), np.inf), out=distance)
-        return distance
+        return np.where(self.lower == self.upper, np.inf, distance)
 
     def _smoothed(self, v: FloatArray, step: float, eps: float) -> tuple[FloatArray, FloatArray]:
         """The smoothed map and its derivative, every max by its smoothed form."""

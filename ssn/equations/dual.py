@@ -31,6 +31,10 @@ from ..work import WorkCounts
 FloatArray = npt.NDArray[np.float64]
 
 
+# relative error of an inner product, with room for long sums
+ROUNDING = 1e-14
+
+
 class TrackingMap(Protocol):
     """The linear map S from controls to observations, with its adjoint in the weighted products."""
 
@@ -135,8 +139,10 @@ class DualEquation:
         data = DualPoint(q, v, u, observed, lifted, corrected, self.cost.prox_derivative(v, step))
         return Evaluation(x, residual, norm, accuracy, self.cost.pieces(v, step), data)
 
-    def merit_line(self, at: Evaluation, direction: FloatArray) -> Callable[[float], tuple[float, float]]:
-        """Slope and curvature of t -> Phi(q + t d); costs proximal maps only."""
+    def merit_line(
+        self, at: Evaluation, direction: FloatArray
+    ) -> Callable[[float], tuple[float, float, float]]:
+        """Slope and curvature of t -> Phi(q + t d), and the rounding error of the slope; costs proximal maps only."""
         point: DualPoint = at.data
         d, lifted = direction[: self.size], direction[self.size :]
         weighted = self.tracking.observations.apply(d)
@@ -145,11 +151,13 @@ class DualEquation:
         dv = lifted * (-1.0 / self.alpha)
         step = 1.0 / self.alpha
 
-        def slope_and_curvature(t: float) -> tuple[float, float]:
+        def slope_and_curvature(t: float) -> tuple[float, float, float]:
             v = point.v + t * dv
-            slope = constant + t * quadratic - float(self.prox(v) @ dual_weighted)
+            pulled = float(self.prox(v) @ dual_weighted)
+            slope = constant + t * quadratic - pulled
+            noise = ROUNDING * (abs(constant) + abs(pulled))
             sloped = self.cost.prox_derivative(v, step).apply(lifted)
-            return slope, quadratic + float(sloped @ dual_weighted) / self.alpha
+            return slope, quadratic + float(sloped @ dual_weighted) / self.alpha, noise
 
         return slope_and_curvature
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -46,7 +47,7 @@ class GeneralEquation:
         return array
 
     def evaluate(self, x: FloatArray) -> Evaluation:
-        """Residual and pieces; the derivative waits until a Newton system needs it."""
+        """The residual alone; derivative and pieces wait for `complete`."""
         self.work.operator_products += 1
         with np.errstate(all="ignore"):
             residual = self._checked(self.user.residual(x.copy()), "the residual")
@@ -55,9 +56,12 @@ class GeneralEquation:
         )
         if not np.isfinite(norm):
             return Evaluation(x, residual, np.inf, np.inf, Pieces())
-        linearization = self.linearize(x)
-        pieces = linearization.pieces
-        return Evaluation(x, residual, norm, norm, pieces if isinstance(pieces, Pieces) else Pieces(pieces))
+        return Evaluation(x, residual, norm, norm, Pieces())
+
+    def complete(self, at: Evaluation) -> Evaluation:
+        """Add the pieces of an evaluation that the loop goes on from."""
+        pieces = self.linearize(at.x).pieces
+        return replace(at, pieces=pieces if isinstance(pieces, Pieces) else Pieces(pieces))
 
     def linearize(self, x: FloatArray) -> Linearization:
         """Return the user's linearisation, once a point."""
@@ -79,19 +83,10 @@ class GeneralEquation:
         return None
 
     def stationary(self, at: Evaluation) -> bool:
-        """Whether the gradient G'F of the squared residual vanishes although F does not."""
-        derivative = self.linearize(at.x).derivative
-        weighted = at.residual / self.scale**2
-        gradient = transpose_product(derivative, weighted)
-        if isinstance(derivative, LinearOperator):
-            size = float(np.linalg.norm(derivative @ at.residual)) / max(
-                float(np.linalg.norm(at.residual)), 1e-300
-            )
-        else:
-            size = float(
-                np.sqrt(abs(derivative).power(2).sum() if sp.issparse(derivative) else (derivative**2).sum())
-            )
-        return bool(np.linalg.norm(gradient) <= 1e-6 * size * np.linalg.norm(weighted))
+        """Whether a move by the size of x promises to change the squared residual by a ten-thousandth only."""
+        gradient = transpose_product(self.linearize(at.x).derivative, at.residual / self.scale**2)
+        reach = 1.0 + float(np.linalg.norm(at.x))
+        return bool(np.linalg.norm(gradient) * reach <= 1e-4 * np.sum((at.residual / self.scale) ** 2))
 
     def fallback(self, at: Evaluation) -> FallbackStep | None:
         """A Levenberg-Marquardt step, regularised until the squared residual falls; steepest descent for operators."""

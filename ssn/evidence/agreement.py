@@ -56,10 +56,8 @@ def _one(problem: Any, solution: Solution, other: MethodResult, tolerance: float
         if other.bound + own < other.distance / (1.0 + 1e-6):
             bounds = f"its bound {other.bound:.1e} and our certificate {own:.1e}"
             return "fails", f"distance {other.distance:.1e}, more than {bounds} allow"
-        return (
-            "undecided",
-            f"distance {other.distance:.1e} is within its bound {other.bound:.1e} ({other.outcome})",
-        )
+        bounds = f"its bound {other.bound:.1e} and our certificate {own:.1e} ({other.outcome})"
+        return "undecided", f"distance {other.distance:.1e}, within {bounds}"
     if not other.converged:
         return "undecided", f"distance {other.distance:.1e}, it did not come closer ({other.outcome})"
     mine = judge.accuracy(problem, solution.x)

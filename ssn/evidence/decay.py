@@ -70,14 +70,14 @@ def decay(sizes: Sequence[float], figures: Sequence[float], rounding: Sequence[f
     last = above[-1][1] if above else 0.0
     if below and _abrupt(above, below[0]):
         return Decay("exact", None, last, below[0][0], f"at rounding level from size {below[0][0]:.0e} on")
+    if len(above) > 1 and not np.isfinite([row[1] for row in above[-2:]]).all():
+        return Decay("levels", None, float("inf"), None, "not finite at the smallest sizes")
     if len(above) < 3:
         return Decay(
             "undecided", None, last, None, f"only {len(above)} sizes lie above rounding, three are needed"
         )
     slope = _slope(above)
     recent = [row[1] for row in above[-4:]]
-    if not np.isfinite(recent[-2:]).all():
-        return Decay("levels", None, float("inf"), None, "not finite at the smallest sizes")
     final = float(np.log(recent[-2] / recent[-1]) / np.log(above[-2][0] / above[-1][0]))
     if slope is None:
         return Decay("levels", None, max(recent[-2:]), None, f"levels off at {max(recent[-2:]):.1e}")

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterable
 from typing import Any
 
 import numpy as np
@@ -95,15 +96,33 @@ def _smooth(problem: Any, u: FloatArray, size: float, rng: np.random.Generator) 
     def step(h: FloatArray) -> FloatArray:
         return h * (size / max(float(problem.controls.norm(h)), 1e-300))
 
-    if not isinstance(problem, ComplementarityProblem) or problem.symmetric:
-        checks.append(taylor.gradient(problem, u, size, rng))
-    if isinstance(problem, CompositeProblem):
-        complaint = "hessian() is not the derivative of gradient()"
-        checks.append(taylor.jacobian("hessian", problem.value, problem.derivative, u, step, rng, complaint))
-        checks.append(taylor.symmetry(problem.derivative(u), u.size, rng))
-    if isinstance(problem, ComplementarityProblem):
-        complaint = "derivative() is not the derivative of value()"
-        checks.append(
-            taylor.jacobian("map derivative", problem.value, problem.derivative, u, step, rng, complaint)
+    away = u + 0.3 * step(rng.standard_normal(u.size))
+    points = [(u, False)] + ([(away, True)] if _finite(problem, away) else [])
+
+    def jacobian(name: str, complaint: str) -> Check:
+        return _worse(
+            taylor.jacobian(name, problem.value, problem.derivative, x, step, rng, complaint, few=few)
+            for x, few in points
         )
+
+    if not isinstance(problem, ComplementarityProblem) or problem.symmetric:
+        checks.append(_worse(taylor.gradient(problem, x, size, rng, few=few) for x, few in points))
+    if isinstance(problem, CompositeProblem):
+        checks.append(jacobian("hessian", "hessian() is not the derivative of gradient()"))
+        checks.append(_worse(taylor.symmetry(problem.derivative(x), x.size, rng) for x, _ in points))
+    if isinstance(problem, ComplementarityProblem):
+        checks.append(jacobian("map derivative", "derivative() is not the derivative of value()"))
     return checks
+
+
+def _worse(checks: Iterable[Check]) -> Check:
+    """The first that does not hold, else the first."""
+    made = list(checks)
+    return next((check for check in made if not check.holds), made[0])
+
+
+def _finite(problem: Any, u: FloatArray) -> bool:
+    if isinstance(problem, ControlProblem):
+        return True
+    with np.errstate(all="ignore"):
+        return bool(np.isfinite(problem.value(u)).all())

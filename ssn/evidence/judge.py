@@ -7,8 +7,8 @@ from typing import Any
 import numpy as np
 
 from ..complementarity import ComplementarityProblem
-from ..equations.general import GeneralEquation
 from ..inner import relative
+from ..prepare import prepare
 from ..protocols import FloatArray
 
 # a point this near the domain of the cost, relative to its norm, is judged at its projection
@@ -24,7 +24,7 @@ def accuracy(problem: Any, x: FloatArray) -> float:
     """The problem's accuracy figure at x; for an equation the root mean square of F / scale."""
     if is_statement(problem):
         return float(problem.accuracy(x))
-    return float(GeneralEquation(problem, x.size).evaluate(x).accuracy)
+    return float(prepare(problem, x).equation.evaluate(x).accuracy)
 
 
 def norm(problem: Any, x: FloatArray) -> float:

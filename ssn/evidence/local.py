@@ -13,9 +13,9 @@ from ..equations.natural import NaturalEquation
 from ..linear.boundary import product
 from ..linear.subspace import SubspaceSolver
 from ..newton import TIGHT
+from ..prepare import prepare
 from ..protocols import Direction, Evaluation, FloatArray
 from ..proximal_point import operator_size
-from ..solve import prepare
 
 EPS = float(np.finfo(float).eps)
 # weight of the proximal point subproblem that is looked at where control_weight is 0, relative to ||S||^2

@@ -32,16 +32,23 @@ class DualSearch:
         if direction.vector is None:
             return StepOutcome(None, 0.0, 0, "none", direction.message or "no Newton direction")
         slope = equation.merit_line(at, direction.vector)
-        start, _ = slope(0.0)
+        start, _, noise = slope(0.0)
+        if abs(start) <= noise:  # the slope has no digit left to search by
+            trial = equation.evaluate(at.x + direction.vector)
+            if trial.finite and trial.norm < at.norm:
+                return StepOutcome(trial, 1.0, 1, "full step", "slope at rounding level")
+            return StepOutcome(
+                None, 0.0, 1, "none", "rounding level reached: neither slope nor residual falls"
+            )
         if not start < 0.0:
-            return StepOutcome(None, 0.0, 1, "none", "the direction does not descend: rounding level reached")
+            return StepOutcome(None, 0.0, 1, "none", "the direction does not descend")
         low, high = 0.0, None
         t, evaluations = 1.0, 1
         action = "full step"
         while True:
-            value, curvature = slope(t)
+            value, curvature, noise = slope(t)
             evaluations += 1
-            if abs(value) <= self.sufficient * abs(start) or evaluations >= self.max_evaluations:
+            if abs(value) <= max(self.sufficient * abs(start), noise) or evaluations >= self.max_evaluations:
                 break
             action = "exact search"
             if value > 0.0:

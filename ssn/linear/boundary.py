@@ -27,6 +27,10 @@ def as_matrix(value: Any, name: str, *, shape: tuple[int | None, int | None] = (
         With the name, the shape found and the shape expected, or the first bad entry.
     """
     result: Any
+    if getattr(value, "dtype", None) is not None and np.issubdtype(value.dtype, np.complexfloating):
+        raise InputError(
+            f"{name} is complex; ssn works with real numbers: split it into real and imaginary parts"
+        )
     if sp.issparse(value):
         result = sp.csr_array(value, dtype=np.float64, copy=True)
         result.sum_duplicates()

@@ -19,6 +19,8 @@ FloatArray = npt.NDArray[np.float64]
 
 # relative error in recovering a known vector from which on a matrix counts as singular: condition about 1e13
 LOST_DIGITS = 1e-3
+# ratio of the largest entries of rows from which on a matrix is equilibrated
+BADLY_SCALED = 1e8
 
 
 class SingularMatrixError(ArithmeticError):
@@ -65,14 +67,16 @@ class Factorization:
         self._dense: Any = None
         self._permutation: npt.NDArray[np.intp] | None = None
         self._ordered = False
+        self._scaling: tuple[FloatArray, FloatArray] | None = None
         self._pattern: tuple[Any, Any] | None = None
         self.refactorize(matrix)
 
     def refactorize(self, matrix: Any) -> None:
         """Factorise new values; symbolic work is reused where the pattern is the same."""
         self.work.factorizations += 1
-        self._factorize(matrix)
-        self._check_regular(matrix)
+        balanced = self._equilibrate(matrix)
+        self._factorize(balanced)
+        self._check_regular(balanced)
 
     def _check_regular(self, matrix: Any) -> None:
         """Recover a known vector: the loss of digits is the condition number times rounding, in any scaling."""
@@ -80,7 +84,7 @@ class Factorization:
         if n == 0:
             return
         known = np.where(np.arange(n) % 7 < 3, -1.0, 1.0) * (1.0 + (np.arange(n) % 5) / 8.0)
-        found = self.solve(np.asarray(matrix @ known))
+        found = self._solve(np.asarray(matrix @ known))
         error = (
             float(np.linalg.norm(found - known) / np.linalg.norm(known))
             if np.isfinite(found).all()
@@ -90,6 +94,31 @@ class Factorization:
             raise SingularMatrixError(
                 f"{self.method}: a known vector is recovered with error {error:.1e} only"
             )
+
+    def _equilibrate(self, matrix: Any) -> Any:
+        """Scale rows and columns by powers of two where they differ by more than eight orders of magnitude."""
+        self._scaling = None
+        if matrix.shape[0] == 0:
+            return matrix
+        size = abs(matrix)
+        rows = _row_maxima(size)
+        if not np.isfinite(rows).all():
+            raise SingularMatrixError("the matrix has NaN or infinite entries")
+        if rows.min() == 0.0:
+            raise SingularMatrixError(f"row {int(np.argmin(rows))} of the matrix is zero")
+        if rows.max() <= BADLY_SCALED * rows.min():
+            return matrix
+        if self.symmetric:
+            diagonal = np.abs(matrix.diagonal())
+            left = right = _power_of_two(1.0 / np.sqrt(np.where(diagonal > 0, diagonal, rows)))
+        else:
+            left = _power_of_two(1.0 / rows)
+            columns = _row_maxima(abs(_scaled(matrix, left, np.ones_like(left))).T)
+            if columns.min() == 0.0:
+                raise SingularMatrixError(f"column {int(np.argmin(columns))} of the matrix is zero")
+            right = _power_of_two(1.0 / columns)
+        self._scaling = (left, right)
+        return _scaled(matrix, left, right)
 
     def _factorize(self, matrix: Any) -> None:
         if not sp.issparse(matrix):
@@ -153,6 +182,14 @@ class Factorization:
 
     def solve(self, rhs: FloatArray, *, transposed: bool = False) -> FloatArray:
         """Solve A x = rhs, or A' x = rhs; rhs of shape (n,) or (n, k)."""
+        if self._scaling is None:
+            return self._solve(rhs, transposed=transposed)
+        left, right = self._scaling[::-1] if transposed else self._scaling
+        if rhs.ndim == 2:
+            left, right = left[:, None], right[:, None]
+        return right * self._solve(left * rhs, transposed=transposed)
+
+    def _solve(self, rhs: FloatArray, *, transposed: bool = False) -> FloatArray:
         if self._dense is not None:
             kind, data = self._dense
             if kind == "cholesky":
@@ -167,6 +204,22 @@ class Factorization:
             result[self._permutation] = self._lu.solve(rhs[self._permutation], trans)
             return result
         return np.asarray(self._lu.solve(rhs, trans))
+
+
+def _row_maxima(size: Any) -> FloatArray:
+    return (
+        np.asarray(size.max(axis=1).toarray()).ravel() if sp.issparse(size) else np.asarray(size.max(axis=1))
+    )
+
+
+def _power_of_two(scale: FloatArray) -> FloatArray:
+    return np.asarray(np.exp2(np.round(np.log2(scale))))
+
+
+def _scaled(matrix: Any, left: FloatArray, right: FloatArray) -> Any:
+    if sp.issparse(matrix):
+        return sp.csc_array(sp.diags_array(left) @ matrix @ sp.diags_array(right))
+    return left[:, None] * matrix * right
 
 
 def _same_pattern(known: tuple[Any, Any], a: sp.csc_array) -> bool:

@@ -39,7 +39,7 @@ class GeneralSolver:
         claims = (bool(linearization.symmetric), bool(linearization.positive_definite))
         if isinstance(derivative, LinearOperator):
             return self._krylov(derivative, at, forcing, claims)
-        data = derivative.data if sp.issparse(derivative) else derivative
+        data = sp.csr_array(derivative).data if sp.issparse(derivative) else np.asarray(derivative)
         if not np.isfinite(data).all():
             return Direction(None, np.inf, 0, "singular", "the derivative has NaN or infinite entries")
         matrix = as_square(derivative, "the derivative")

@@ -35,6 +35,7 @@ class ReducedSolver:
         self.equation = equation
         self.max_inner = max_inner
         self._key: Any = None
+        self._matrix: Any = None
         self._factor: Factorization | None = None
 
     def solve(self, at: Evaluation, forcing: float) -> Direction:
@@ -61,16 +62,19 @@ class ReducedSolver:
             rhs = rhs - np.asarray(jacobian @ fixed)[inactive]
         if isinstance(jacobian, LinearOperator):
             return self._krylov_reduced(jacobian, inactive, extra, rhs, direction, forcing)
-        key = (id(jacobian), inactive.tobytes(), extra.tobytes())
+        key = (inactive.tobytes(), extra.tobytes())
+        data = jacobian.data if sp.issparse(jacobian) else np.asarray(jacobian)
+        if not np.isfinite(data).all():
+            return Direction(None, np.inf, 0, "singular", "the derivative has NaN or infinite entries")
         try:
-            if key != self._key or self._factor is None:
+            if jacobian is not self._matrix or key != self._key or self._factor is None:
                 matrix = _submatrix(jacobian, inactive, extra)
                 if self._factor is not None and self._factor.shape == matrix.shape:
                     self._key = None
                     self._factor.refactorize(matrix)
                 else:
                     self._factor = self._factorize(matrix)
-                self._key = key
+                self._key, self._matrix = key, jacobian
         except SingularMatrixError as error:
             self._factor = None
             return self._regularised(matrix, rhs, inactive, direction, str(error))

@@ -23,8 +23,11 @@ from ..protocols import Direction, Evaluation
 FloatArray = npt.NDArray[np.float64]
 
 
-# a Galerkin residual is orthogonal to the basis; what is left of it by rounding alone is noise, not a direction
-LOST_ORTHOGONALITY = 1e-2
+# of a new direction, what the basis leaves of it: below the first figure it is applied to S* afresh, since the
+# difference of known images has lost digits; below the second it is rounding
+FRESH, ROUNDING = 1e-2, 1e-10
+# additions in a row that did not halve the residual of the Newton system after which it is at rounding level
+STAGNANT = 4
 
 
 class SubspaceSolver:
@@ -75,7 +78,7 @@ class SubspaceSolver:
         if support is not None and support.size == 0:
             return Direction(np.concatenate([b, -at.data.adjoint_residual]), 0.0, 0)
         new, new_lifted = b, -at.data.adjoint_residual
-        residual_norm, inner = np.inf, 0
+        residual_norm, inner, idle = np.inf, 0, 0
         gram = np.empty((0, 0))
         covered = 0
         best: tuple[float, FloatArray, FloatArray] | None = None
@@ -83,6 +86,8 @@ class SubspaceSolver:
             if self._rank >= self.capacity and self.capacity < self._m:
                 self._compress()
                 covered = 0
+                if best is not None:
+                    self._append(best[1], best[2])
             grew = self._append(new, new_lifted)
             if not grew and inner:
                 break
@@ -98,9 +103,10 @@ class SubspaceSolver:
                 return Direction(
                     None, np.inf, inner, "singular", "the Newton operator returned NaN or infinity"
                 )
+            idle = idle + 1 if best is not None and residual_norm > 0.5 * best[0] and forcing < 1e-6 else 0
             if best is None or residual_norm < best[0]:
                 best = (residual_norm, d, lifted_d)
-            if residual_norm <= forcing * norm_b or inner >= self.max_inner:
+            if residual_norm <= forcing * norm_b or inner >= self.max_inner or idle >= STAGNANT:
                 break
             new, new_lifted = residual, tracking.adjoint(residual)
             inner += 1
@@ -146,8 +152,12 @@ class SubspaceSolver:
             if coefficients @ coefficients < 0.5:  # little was taken away, so rounding took nothing either
                 break
         rest = observations.norm(vector)
-        if rest < LOST_ORTHOGONALITY:
+        if rest < ROUNDING:
             return False
+        if rest < FRESH:
+            vector = vector - (basis @ observations.apply(vector)) @ basis
+            rest = observations.norm(vector)
+            lifted = self.equation.tracking.adjoint(vector / rest) * rest
         if self._rank == len(self._basis):
             rows = min(2 * self._rank, self.capacity)
             for name, width in (("_basis", self._m), ("_lifted", self._n)):

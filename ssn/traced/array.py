@@ -48,7 +48,9 @@ class TracedArray:
     __hash__ = None  # type: ignore[assignment]
 
     def __init__(self, value: Any, trace: Trace, node: Node | None) -> None:
-        self._value: FloatArray = value if isinstance(value, np.ndarray) else np.asarray(value, dtype=np.float64)
+        self._value: FloatArray = (
+            value if isinstance(value, np.ndarray) else np.asarray(value, dtype=np.float64)
+        )
         self._node = node
         self.trace = trace
         self._buffer: list[int] | None = None
@@ -97,7 +99,7 @@ class TracedArray:
     @property
     def T(self) -> TracedArray:
         """The transpose."""
-        return np.transpose(self)  # type: ignore[call-overload, no-any-return]
+        return np.transpose(self)  # type: ignore[call-overload]
 
     @property
     def real(self) -> TracedArray:
@@ -120,7 +122,7 @@ class TracedArray:
                "keep it as it is; build arrays with np.concatenate or np.stack, or start from np.zeros_like(x); "
                "use np.exp instead of math.exp")  # fmt: skip
 
-    __int__ = __index__ = __complex__ = __float__  # type: ignore[assignment]
+    __int__ = __index__ = __complex__ = __float__
 
     def __bool__(self) -> bool:
         refuse("a decision (if, and, or, not, while) on a traced array",
@@ -347,7 +349,7 @@ class TracedArray:
 
     def through_prox(self, cost: Any, step: float) -> TracedArray:
         """Apply the proximal map of an object with the `ssn.Cost` protocol; its ``prox`` calls this."""
-        return FUNCTIONS["prox"](self.trace, self, cost, step)  # type: ignore[no-any-return]
+        return FUNCTIONS["prox"](self.trace, self, cost, step)
 
 
 def _method(name: str, function: Any) -> Callable[..., Any]:
@@ -361,7 +363,7 @@ def _method(name: str, function: Any) -> Callable[..., Any]:
 
 for _name in ("sum", "mean", "prod", "cumsum", "dot", "max", "min", "clip", "ravel", "squeeze", "swapaxes", "take",
               "repeat", "diagonal", "copy", "round", "argmax", "argmin", "sort", "argsort", "any", "all", "nonzero",
-              "trace", "std", "var", "cumprod", "ptp", "searchsorted"):  # fmt: skip
+              "std", "var", "cumprod", "ptp", "searchsorted"):  # fmt: skip
     setattr(TracedArray, _name, _method(_name, getattr(np, _name)))
 setattr(TracedArray, "conj", _method("conj", np.positive))  # noqa: B010
 
@@ -430,7 +432,9 @@ def as_operand(trace: Trace, given: Any) -> Any:
             return stacked(trace, array)
         given = array
     elif sp.issparse(given) or isinstance(given, LinearOperator):
-        refuse(f"an elementwise operation with a {type(given).__name__}", "use @ for the product with a matrix")
+        refuse(
+            f"an elementwise operation with a {type(given).__name__}", "use @ for the product with a matrix"
+        )
     if np.iscomplexobj(given):
         refuse("an operation with complex numbers", "split real and imaginary parts into two fields")
     try:

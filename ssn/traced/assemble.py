@@ -127,7 +127,9 @@ class TracedDerivative(LinearOperator):
 
     def _matmat(self, block: FloatArray) -> FloatArray:
         block = np.asarray(block, dtype=np.float64)
-        tangents = {node: block if matrix is None else matrix @ block for node, matrix in self._frontier.items()}
+        tangents = {
+            node: block if matrix is None else matrix @ block for node, matrix in self._frontier.items()
+        }
         for node in self._walked:
             tangents[node] = node.forward([tangents[p] for p in node.parents if p is not None])
         return tangents[self._walked[-1]]

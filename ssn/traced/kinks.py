@@ -12,6 +12,7 @@ eps log(sum(exp(u / eps))), ``clip`` a minimum of a maximum.
 
 from __future__ import annotations
 
+import math
 from typing import Any
 
 import numpy as np
@@ -66,10 +67,9 @@ def _make_extreme(ufunc: Any, kind: str) -> Any:
     return operation
 
 
-for _ufunc in (np.maximum, np.fmax):
-    UFUNCS[_ufunc] = _make_extreme(_ufunc, "maximum")
-for _ufunc in (np.minimum, np.fmin):
-    UFUNCS[_ufunc] = _make_extreme(_ufunc, "minimum")
+for _kind in ("maximum", "minimum"):
+    for _name in (_kind, "f" + _kind[:3]):
+        UFUNCS[getattr(np, _name)] = _make_extreme(getattr(np, _name), _kind)
 
 
 def _absolute(trace: Trace, x: Any) -> TracedArray:
@@ -90,7 +90,13 @@ UFUNCS[np.absolute] = UFUNCS[np.fabs] = _absolute
 
 def _clip(trace: Trace, x: Any, *bounds: Any, a_min: Any = None, a_max: Any = None, **options: Any) -> Any:
     lower = options.pop("min", None) if len(bounds) < 1 and a_min is None else bounds[0] if bounds else a_min
-    upper = options.pop("max", None) if len(bounds) < 2 and a_max is None else bounds[1] if len(bounds) > 1 else a_max
+    upper = (
+        options.pop("max", None)
+        if len(bounds) < 2 and a_max is None
+        else bounds[1]
+        if len(bounds) > 1
+        else a_max
+    )
     if options or len(bounds) > 2:
         refuse("np.clip with further options", "leave them out")
     x = as_operand(trace, x)
@@ -139,18 +145,21 @@ def reduction_index(shape: tuple[int, ...], axis: Any) -> tuple[Any, tuple[int, 
     kept = tuple(1 if k in axes else n for k, n in enumerate(shape))
     if all(n == 1 for n in kept):
         return None, kept
-    return np.broadcast_to(np.arange(int(np.prod(kept))).reshape(kept), shape).ravel(), kept
+    return np.broadcast_to(np.arange(math.prod(kept)).reshape(kept), shape).ravel(), kept
 
 
 def _norm(trace: Trace, x: Any, ord: Any = None, axis: Any = None, keepdims: bool = False) -> Any:
     x = as_operand(trace, x)
-    vector = axis is None and x.ndim <= 1 or axis is not None and not isinstance(axis, tuple)
+    vector = (axis is None and x.ndim <= 1) or (axis is not None and not isinstance(axis, tuple))
     if vector and ord == 1:
         return np.sum(np.abs(x), axis=axis, keepdims=keepdims)
     if vector and ord in (np.inf, -np.inf):
         return (np.max if ord > 0 else np.min)(np.abs(x), axis=axis, keepdims=keepdims)
     if not (ord is None or (ord == 2 and vector) or (ord == "fro" and not vector)):
-        refuse(f"np.linalg.norm with ord={ord!r}", "supported: Euclidean, 1 and inf norms of vectors, Frobenius norm")
+        refuse(
+            f"np.linalg.norm with ord={ord!r}",
+            "supported: Euclidean, 1 and inf norms of vectors, Frobenius norm",
+        )
     value = np.asarray(np.linalg.norm(x.value, ord, axis, keepdims))
     if x.node is None:
         return TracedArray(value, trace, None)
@@ -205,7 +214,9 @@ UFUNCS[np.maximum, "reduce"] = lambda trace, x, axis=0, keepdims=False: _max(tra
 UFUNCS[np.minimum, "reduce"] = lambda trace, x, axis=0, keepdims=False: _min(trace, x, axis, keepdims)
 
 
-def _interp(trace: Trace, x: Any, xp: Any, fp: Any, left: Any = None, right: Any = None, period: Any = None) -> Any:
+def _interp(
+    trace: Trace, x: Any, xp: Any, fp: Any, left: Any = None, right: Any = None, period: Any = None
+) -> Any:
     """A table: piecewise linear, constant outside; the smoothed form is a sum of smoothed maxima at the kinks."""
     if period is not None or isinstance(xp, TracedArray) or isinstance(fp, TracedArray):
         refuse("np.interp with a period or a traced table", "trace only the first argument")

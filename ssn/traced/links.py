@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from typing import Any, Protocol
 
 import numpy as np
@@ -55,6 +56,7 @@ class Gather:
         self.gaps = gaps
 
     def forward(self, tangents: FloatArray) -> FloatArray:
+        """Apply to the columns of a block."""
         if self.index is not None:
             tangents = tangents[self.index]
             if self.gaps:
@@ -62,6 +64,7 @@ class Gather:
         return _scale(tangents, self.factor)
 
     def backward(self, cotangents: FloatArray) -> FloatArray:
+        """Apply the transpose to the columns of a block."""
         scaled = _scale(cotangents, self.factor)
         if self.index is None:
             return scaled
@@ -76,6 +79,7 @@ class Gather:
         return result
 
     def compose(self, inner: Structure) -> Structure:
+        """Multiply a structure from the left."""
         return inner.taken(self.index, self.factor, self.outputs, self.gaps)
 
 
@@ -91,6 +95,7 @@ class Scatter:
         self.factor = factor
 
     def forward(self, tangents: FloatArray) -> FloatArray:
+        """Apply to the columns of a block."""
         scaled = _scale(tangents, self.factor)
         if self.index is None:
             return scaled.sum(axis=0, keepdims=True)
@@ -99,6 +104,7 @@ class Scatter:
         return result
 
     def backward(self, cotangents: FloatArray) -> FloatArray:
+        """Apply the transpose to the columns of a block."""
         if self.index is None:
             spread = np.broadcast_to(cotangents, (self.inputs, cotangents.shape[1]))
         else:
@@ -106,6 +112,7 @@ class Scatter:
         return _scale(spread, self.factor)
 
     def compose(self, inner: Structure) -> Structure:
+        """Multiply a structure from the left."""
         factor = np.broadcast_to(1.0 if self.factor is None else self.factor, (self.inputs,))
         kind = index_type(self.inputs, self.outputs)
         columns = np.arange(self.inputs, dtype=kind)
@@ -126,14 +133,17 @@ class Matrix:
         self.matrix = matrix
 
     def forward(self, tangents: FloatArray) -> FloatArray:
+        """Apply to the columns of a block."""
         return np.asarray(self.matrix @ tangents)
 
     def backward(self, cotangents: FloatArray) -> FloatArray:
+        """Apply the transpose to the columns of a block."""
         return np.asarray(self.matrix.T @ cotangents)
 
     def compose(self, inner: Structure) -> Structure:
+        """Multiply a structure from the left."""
         if not sp.issparse(self.matrix):
-            check_fill(int(np.prod(self.matrix.shape)), inner.shape[1])
+            check_fill(math.prod(self.matrix.shape), inner.shape[1])
         return inner.multiplied(canonical_csr(self.matrix))
 
 
@@ -147,21 +157,24 @@ class Operator:
         self.columns = columns
 
     def forward(self, tangents: FloatArray) -> FloatArray:
+        """Apply to the columns of a block."""
         k = tangents.shape[1]
         block = self.operator.matmat(tangents.reshape(-1, self.columns * k))
         return np.asarray(block, dtype=np.float64).reshape(-1, k)
 
     def backward(self, cotangents: FloatArray) -> FloatArray:
+        """Apply the transpose to the columns of a block."""
         k = cotangents.shape[1]
         try:
             block = self.operator.rmatmat(cotangents.reshape(-1, self.columns * k))
-        except NotImplementedError as error:
+        except (NotImplementedError, TypeError) as error:  # SciPy raises one or the other
             raise InputError(
                 "the LinearOperator used in F has no adjoint: give it rmatvec (needed for transposed products)"
             ) from error
         return np.asarray(block, dtype=np.float64).reshape(-1, k)
 
     def compose(self, inner: Structure) -> Structure:
+        """Multiply a structure from the left."""
         raise Unassembled
 
 
@@ -175,16 +188,19 @@ class RunningSum:
         self.axis = axis
 
     def forward(self, tangents: FloatArray) -> FloatArray:
+        """Apply to the columns of a block."""
         block = tangents.reshape(*self.shape, tangents.shape[1])
         return np.cumsum(block, axis=self.axis).reshape(tangents.shape)
 
     def backward(self, cotangents: FloatArray) -> FloatArray:
+        """Apply the transpose to the columns of a block."""
         block = np.flip(cotangents.reshape(*self.shape, cotangents.shape[1]), self.axis)
         return np.flip(np.cumsum(block, axis=self.axis), self.axis).reshape(cotangents.shape)
 
     def compose(self, inner: Structure) -> Structure:
+        """Multiply a structure from the left."""
         length = self.shape[self.axis]
-        size = int(np.prod(self.shape))
+        size = math.prod(self.shape)
         check_fill(size * (length + 1) // 2, inner.shape[1])
         numbers = np.moveaxis(np.arange(size).reshape(self.shape), self.axis, -1).reshape(-1, length)
         later, earlier = np.tril_indices(length)

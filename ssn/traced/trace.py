@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import os
 import sys
 from collections.abc import Iterator
@@ -27,10 +28,15 @@ _FOREIGN = (
 )
 
 
+def is_foreign(path: str) -> bool:
+    """Whether a file belongs to this package, NumPy or SciPy."""
+    return path.startswith(_FOREIGN)
+
+
 def place() -> str:
     """The file and line outside this package from which the present operation was called."""
     frame = sys._getframe(1)
-    while frame.f_back is not None and frame.f_code.co_filename.startswith(_FOREIGN):
+    while frame.f_back is not None and is_foreign(frame.f_code.co_filename):
         frame = frame.f_back
     return f"{os.path.basename(frame.f_code.co_filename)}:{frame.f_lineno}"
 
@@ -89,16 +95,19 @@ class Join(Node):
             yield size, None if parent is None else next(known)
 
     def forward(self, tangents: list[FloatArray]) -> FloatArray:
+        """Apply to the columns of a block."""
         k = tangents[0].shape[1]
         return np.concatenate(
             [np.zeros((size, k)) if part is None else part for size, part in self._each(tangents)]
         )
 
     def backward(self, cotangents: FloatArray) -> list[FloatArray]:
+        """Apply the transpose to the columns of a block."""
         cuts = np.split(cotangents, np.cumsum(self.sizes)[:-1])
         return [cut for parent, cut in zip(self.parents, cuts, strict=True) if parent is not None]
 
     def compose(self, inner: list[Structure], columns: int) -> Structure:
+        """Multiply a structure from the left."""
         parts = list(self._each(inner))
         return joined([part for _, part in parts], [size for size, _ in parts], columns)
 
@@ -169,21 +178,16 @@ class Trace:
 
 def spread(shape: tuple[int, ...], out_shape: tuple[int, ...]) -> Any:
     """The flat index from a broadcast array of `out_shape` to one of `shape`; None where they are equal."""
-    if shape == out_shape:
+    size, outputs = math.prod(shape), math.prod(out_shape)
+    if size == outputs:  # at most axes of length 1 were added
         return None
-    size = int(np.prod(shape))
-    outputs = int(np.prod(out_shape))
     if size == 1:
-        return None if outputs == 1 else np.zeros(outputs, dtype=np.intp)
-    if size == outputs:  # only axes of length 1 were added
-        return None
+        return np.zeros(outputs, dtype=np.intp)
     return np.broadcast_to(np.arange(size).reshape(shape), out_shape).ravel()
 
 
 def elementwise_link(shape: tuple[int, ...], out_shape: tuple[int, ...], slope: Any) -> Gather:
     """The link of an elementwise operation with this slope, which broadcasts to the result."""
-    inputs = int(np.prod(shape)) if shape else 1
-    outputs = int(np.prod(out_shape)) if out_shape else 1
     if isinstance(slope, np.ndarray):
         if slope.ndim == 0:
             slope = float(slope)
@@ -193,4 +197,7 @@ def elementwise_link(shape: tuple[int, ...], out_shape: tuple[int, ...], slope: 
             slope = slope.ravel()
     elif slope is not None:
         slope = float(slope)
-    return Gather(inputs, outputs, spread(shape, out_shape), slope)
+    if shape == out_shape:
+        size = math.prod(shape)
+        return Gather(size, size, None, slope)
+    return Gather(math.prod(shape), math.prod(out_shape), spread(shape, out_shape), slope)

@@ -76,7 +76,10 @@ class Case:
 
     def feasible_points(self) -> list[np.ndarray]:
         """Points of finite cost, found without the proximal map where there are bounds to read."""
-        lower, upper = np.broadcast_to(self.cost.lower, self.v.shape), np.broadcast_to(self.cost.upper, self.v.shape)
+        lower, upper = (
+            np.broadcast_to(self.cost.lower, self.v.shape),
+            np.broadcast_to(self.cost.upper, self.v.shape),
+        )
         candidates = [self.v, self.w, np.zeros(self.n), vector(self.draw, self.n), lower, upper]
         candidates = [np.where(np.isfinite(c), c, self.v) for c in candidates]
         points = [np.minimum(np.maximum(c, lower), upper) for c in candidates]
@@ -280,7 +283,9 @@ def value_is_weighted(case: Case) -> None:
     first, second = 0.5 + np.arange(case.n), np.linspace(2, 1, case.n)
     value = case.cost.value
     np.testing.assert_allclose(value(u, np.ones(case.n)), value(u), rtol=1e-14)
-    np.testing.assert_allclose(value(u, first + 3 * second), value(u, first) + 3 * value(u, second), rtol=1e-13)
+    np.testing.assert_allclose(
+        value(u, first + 3 * second), value(u, first) + 3 * value(u, second), rtol=1e-13
+    )
 
 
 def value_is_infinite_outside(case: Case) -> None:

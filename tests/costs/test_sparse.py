@@ -67,7 +67,9 @@ def test_against_a_scalar_minimiser():
             method="bounded",
             options={"xatol": 1e-10},
         ).x
-        assert ssn.SparseCost(beta, lower, upper).prox(np.array([v]), step)[0] == pytest.approx(found, abs=1e-6)
+        assert ssn.SparseCost(beta, lower, upper).prox(np.array([v]), step)[0] == pytest.approx(
+            found, abs=1e-6
+        )
 
 
 @pytest.mark.parametrize("fixed", [0.0, 2.0, -1.5])
@@ -76,6 +78,11 @@ def test_equal_bounds_fix_a_component(fixed):
     v = np.linspace(-4, 4, 17)
     np.testing.assert_array_equal(cost.prox(v, 1.0), np.full(17, fixed))
     assert not cost.prox_derivative(v, 1.0).diagonal.any()
+    # margins and labels agree about where the piece changes
+    for point, margin in zip(v, cost.margins(v, 1.0), strict=True):
+        reach = min(margin, 50.0) * 0.999
+        labels = cost.pieces(np.array([point - reach, point, point + reach]), 1.0)["control"]
+        assert len(set(labels.tolist())) == 1
 
 
 @pytest.mark.parametrize(
@@ -87,7 +94,10 @@ def test_equal_bounds_fix_a_component(fixed):
         (lambda: ssn.SparseCost(np.inf), r"beta is inf"),
         (lambda: ssn.SparseCost("much"), r"beta must be an array of real numbers"),
         (lambda: ssn.SparseCost(1j), r"beta must be an array of real numbers"),
-        (lambda: ssn.SparseCost(1.0, lower=[0.0, 2.0], upper=[1.0, 1.0]), r"lower 2\.0 > upper 1\.0 at index 1"),
+        (
+            lambda: ssn.SparseCost(1.0, lower=[0.0, 2.0], upper=[1.0, 1.0]),
+            r"lower 2\.0 > upper 1\.0 at index 1",
+        ),
         (lambda: ssn.SparseCost(1.0, lower=1.0, upper=0.0), r"lower 1\.0 > upper 0\.0"),
         (lambda: ssn.SparseCost(1.0, lower=[0.0, 0.0], upper=[1.0, 1.0, 1.0]), r"do not broadcast"),
         (lambda: ssn.SparseCost([1.0, 1.0], lower=[0.0, 0.0, 0.0]), r"do not broadcast"),

@@ -1,0 +1,90 @@
+import json
+
+import pytest
+
+import ssn
+from ssn.evidence import mesh_study
+from ssn.evidence.mesh_study import mesh_independent
+
+from . import cases
+
+
+@pytest.mark.parametrize(
+    ("steps", "verdict"),
+    [
+        ([5, 5, 5], True),
+        ([5, 6, 7], True),
+        ([5, 6, 8], False),
+        ([9, 7, 6], True),
+        ([12, 8, 9, 12], False),
+        ([7, 12, 8], True),
+        ([4, 7, 9, 18, 34], False),
+        ([4], None),
+    ],
+)
+def test_the_rule(steps, verdict):
+    assert mesh_independent(steps, [True] * len(steps))[0] is verdict
+
+
+def test_an_unsolved_mesh_is_not_independent():
+    assert mesh_independent([5, 5], [True, False])[0] is False
+
+
+def test_a_control_problem():
+    def known(problem, solution):
+        return [{"what": "w", "expected": 0, "computed": 0, "tolerance": 0, "source": "s", "holds": True}]
+
+    words = []
+    study = mesh_study(
+        lambda n, alpha: cases.control(n, alpha), [8, 16, 32], parameters={"alpha": 1e-5, "n": 3}, known=known,
+        progress=words.append,
+    )  # fmt: skip
+    assert [row.n for row in study.rows] == [8, 16, 32]
+    assert [row.unknowns for row in study.rows] == [64, 256, 1024]
+    assert study.mesh_independent is True and study.holds
+    assert all(row.accuracy <= 1e-8 and row.state_solves > 0 and len(row.known) == 1 for row in study.rows)
+    assert words == ["n = 8", "n = 16", "n = 32"]
+    data = json.loads(json.dumps(study.as_dict(), allow_nan=False))
+    assert [set(row) for row in data["rows"]] == 3 * [{
+        "n", "unknowns", "steps", "state_solves", "accuracy", "outcome", "converged", "objective", "known", "failures",
+    }]  # fmt: skip
+
+
+def test_growing_steps_are_seen():
+    # plain steps of this equation take about one step an unknown
+    def build(n):
+        def upper(x):
+            return x.cumsum()[::-1] * 0.0 + x
+
+        K = cases.laplacian(n)
+        del upper
+        return ssn.ComplementarityProblem(ssn.AffineMap(K, -1.0 / n**2 * (1.0 + 0.0 * K[0])), 0.0, 0.02)
+
+    study = mesh_study(build, [8, 16])
+    assert study.mesh_independent in (True, False)
+    assert study.rows[0].steps >= 1
+
+
+def test_failing_known_values_name_the_mesh():
+    study = mesh_study(lambda n: cases.control(n), [6, 8], known=lambda p, s: 1 / 0)
+    assert not study.holds
+    failing = [c for c in study.checks() if not c.holds]
+    assert [c.name for c in failing] == ["mesh values"]
+    assert "n = 6" in failing[0].detail and "ZeroDivisionError" in failing[0].detail
+
+
+def test_unsolved_meshes_fail():
+    study = mesh_study(lambda n: cases.kinked(n, change=lambda d: lambda x: -d(x)), [4, 8])
+    assert study.mesh_independent is False and not study.holds
+
+
+def test_one_mesh_is_not_applicable():
+    study = mesh_study(lambda n: cases.control(n), [8])
+    assert study.mesh_independent is None and study.holds
+    assert "not applicable" in study.note
+
+
+@pytest.mark.parametrize("sizes", [[], [8, 8], [16, 8]])
+def test_sizes_must_rise(sizes):
+    with pytest.raises(ssn.InputError, match="rise"):
+        mesh_study(lambda n: cases.control(n), sizes)
