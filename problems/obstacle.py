@@ -8,9 +8,9 @@ continued by its tangent line beyond; boundary values of the exact solution
 Linear finite elements on a uniform mesh of right triangles with n interior points a side (five-point matrix), mesh
 width h = 4 / (n + 1). F(x) is the force at each node, positive where the obstacle pushes up. Dimensionless.
 
-Source: E. Bueler, PETSc for Partial Differential Equations (SIAM, 2020), chapter on the obstacle problem.
+Source: E. Bueler, book on the solution of partial differential equations (SIAM, 2020), chapter on the obstacle problem.
 
-Caution: active-set steps from below move the edge of the contact set by a layer of nodes a step, so their number
+Caution: plain active-set steps from below move the edge of the contact set by a layer of nodes a step, so their number
 doubles with n; starting from the solution on a coarser mesh (`transfer`) keeps it small.
 """
 

@@ -7,6 +7,7 @@ from pathlib import Path
 from typing import Any
 
 import click
+from rich.text import Text
 
 from ..problem_file import discover, load, shown
 from ..report import Terminal, catalogue_table
@@ -24,12 +25,14 @@ def list_problems(context: click.Context, folder: str | None) -> int:
         raise click.UsageError("there is no folder 'problems' here: name one")
     run = Run(Terminal(), context.obj)
     rows = []
-    for path in discover(folder or str(DEFAULT_FOLDER)):
+    where = folder or str(DEFAULT_FOLDER)
+    for path in discover(where):
         with run.forgiving(path.stem):
             file = load(path)
             parameters = ", ".join(_parameter_text(name, value) for name, value in file.defaults.items())
             meshes = ", ".join(map(str, file.sizes)) or ("any n" if file.has_mesh else "-")
-            rows.append((shown(path.absolute()), file.title, parameters, meshes))
+            rows.append((path.name, file.title, parameters, meshes))
+    run.terminal.show(Text(f"Problem files in {shown(Path(where).absolute())}"))
     run.terminal.show(catalogue_table(rows))
     return run.exit_code(holds=True)
 

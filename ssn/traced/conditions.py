@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
+from itertools import pairwise
 from typing import Any
 
 import numpy as np
@@ -24,9 +25,12 @@ REMEDIES.update(
     {"equal": "two reals are equal by accident only", "not_equal": "two reals are equal by accident only"}
 )
 
-# Bisection stops at this share of the segment; a change of the result beyond this share of its range is a jump.
+# What the check of continuity bisects, to which share of a segment, and what it calls a jump (relative to the change
+# of the result over the segment). Up to SMALL entries it looks more closely.
+SWITCHES = ("condition", "sign")
 BISECTIONS = 44
-JUMP = 1e-6
+JUMP = 1e-8
+SMALL = 10_000
 
 
 class TracedCondition:
@@ -163,69 +167,76 @@ class ContinuousFunction:
         with traced[0].trace.continuity():
             return self.function(*arguments)
 
-    def _evaluate(
-        self, arguments: tuple[Any, ...], values: list[FloatArray]
-    ) -> tuple[FloatArray, FloatArray]:
-        """The result, and all labels one after the other."""
+    def _evaluate(self, arguments: tuple[Any, ...], values: list[FloatArray]) -> tuple[FloatArray, list[Any]]:
+        """The result, and the labels of the comparisons."""
         trace = Trace(record=False)
         given = iter(values)
         replaced = [
-            TracedArray(next(given), trace, trace.node(argument.size))
-            if isinstance(argument, TracedArray)
-            else argument
-            for argument in arguments
+            TracedArray(next(given), trace, trace.node(a.size)) if isinstance(a, TracedArray) else a
+            for a in arguments
         ]
         with trace.continuity(), np.errstate(all="ignore"):
             result = as_operand(trace, self.function(*replaced))
-        labels = [labels.ravel() for labels in trace.pieces.values()]
-        return parts(result)[0], np.concatenate(labels) if labels else np.zeros(0)
+        labels = [labels for name, labels in trace.pieces.items() if name.startswith(SWITCHES)]
+        return parts(result)[0], labels
 
     def _check(self, arguments: tuple[Any, ...]) -> None:
-        """Look for a jump on segments through the present arguments, by bisection to where labels change."""
+        """Look for a jump on a path around the present arguments, by bisection to where labels change."""
         centre = [argument.value for argument in arguments if isinstance(argument, TracedArray)]
         generator = np.random.default_rng(0)
-        large = sum(value.size for value in centre) > 100_000
-        for radius in (1.0,) if large else (1.0, 0.03, 10.0, 1.0):
-            ends = []
-            steps = [radius * max(1.0, float(np.abs(v).max(initial=0.0))) * generator.standard_normal(v.shape)
-                     for v in centre]  # fmt: skip
-            for sign in (-1.0, 1.0):
-                ends.append([v + sign * step for v, step in zip(centre, steps, strict=True)])
-            self._search(arguments, ends[0], ends[1], each=True)
-            self._search(arguments, ends[0], ends[1], each=False)
+        small = sum(value.size for value in centre) <= SMALL
+        size = max(1.0, *(float(np.abs(value).max(initial=0.0)) for value in centre))
 
-    def _search(self, arguments: tuple[Any, ...], low: Any, high: Any, *, each: bool) -> None:
+        def point(share: float, spread: float) -> list[FloatArray]:
+            return [share * v + spread * size * generator.standard_normal(v.shape) for v in centre]
+
+        corners = [point(1.0, 10.0), point(1.0, 0.0), point(0.0, 0.0), point(1.0, 1.0), point(1.0, 0.03)]
+        corners += [point(-1.0, 1.0), point(-1.0, 0.0), point(0.0, 0.1), point(0.0, 10.0)]
+        budget = 60 if small else 4
+        for start, end in pairwise(corners):
+            cuts = np.linspace(0.0, 1.0, 9 if small else 3)
+            stops = [[(1.0 - t) * a + t * b for a, b in zip(start, end, strict=True)] for t in cuts]
+            for low, high in pairwise(stops):
+                if budget > 0:
+                    budget -= self._search(arguments, low, high)
+
+    def _search(self, arguments: tuple[Any, ...], low: list[FloatArray], high: list[FloatArray]) -> int:
+        """Bisect one segment; return how many bisections that took."""
         result, labels = self._evaluate(arguments, low)
         other, other_labels = self._evaluate(arguments, high)
-        if labels.shape != other_labels.shape:
+        if [a.shape for a in labels] != [a.shape for a in other_labels]:
             raise InputError(f"{self.__name__} was declared continuous, but takes other operations elsewhere")
-        shape = low[0].shape
-        together = each and labels.size == low[0].size and result.shape == shape
-        if each and not (together and all(value.shape == shape for value in low)):
-            return
+        if all(np.array_equal(a, b) for a, b in zip(labels, other_labels, strict=True)):
+            return 0
         span = float(np.abs(other - result).max(initial=0.0))
         size = float(max(np.abs(result).max(initial=0.0), np.abs(other).max(initial=0.0)))
-        if not (labels != other_labels).any() or not np.isfinite(size):
-            return
-        for _ in range(BISECTIONS):
-            middle = [0.5 * (a + b) for a, b in zip(low, high, strict=True)]
-            _, found = self._evaluate(arguments, middle)
-            if together:  # each component has its own segment
-                stay = (found == labels).reshape(shape)
-                low = [np.where(stay, m, a) for m, a in zip(middle, low, strict=True)]
-                high = [np.where(stay, b, m) for m, b in zip(middle, high, strict=True)]
-            elif (found == labels).all():
-                low = middle
-            else:
-                high = middle
-        jump = np.abs(self._evaluate(arguments, high)[0] - self._evaluate(arguments, low)[0])
-        if float(jump.max(initial=0.0)) > JUMP * span + 1e-10 * size:
-            worst = np.unravel_index(int(np.argmax(jump)), jump.shape)
-            near = ", ".join(f"{value[worst]:.6g}" if value.shape == jump.shape else "..." for value in low)
-            raise InputError(
-                f"{self.__name__} was declared continuous, but component {tuple(map(int, worst))} jumps by "
-                f"{jump[worst]:.3g} near the argument {near}: an equation with a jump has no Newton derivative there"
-            )
+        if not np.isfinite(size):
+            return 0
+        shape = low[0].shape
+        alike = shape != () and all(array.shape == shape for array in (*labels, *low, result))
+        for each in (True, False) if alike else (False,):
+            a, b = low, high
+            for _ in range(BISECTIONS):
+                middle = [0.5 * (p + q) for p, q in zip(a, b, strict=True)]
+                found = self._evaluate(arguments, middle)[1]
+                same = [p == q for p, q in zip(found, labels, strict=True)]
+                # each component on a segment of its own, or all on one
+                stay: Any = np.all(same, axis=0) if each else all(part.all() for part in same)
+                a = [np.where(stay, m, p) for m, p in zip(middle, a, strict=True)]
+                b = [np.where(stay, q, m) for m, q in zip(middle, b, strict=True)]
+            jump = np.abs(self._evaluate(arguments, b)[0] - self._evaluate(arguments, a)[0])
+            if float(jump.max(initial=0.0)) > JUMP * span + 1e-11 * size:
+                self._complain(jump, a)
+        return 2 if alike else 1
+
+    def _complain(self, jump: FloatArray, arguments: list[FloatArray]) -> None:
+        worst = np.unravel_index(int(np.argmax(jump)), jump.shape)
+        near = ", ".join(f"{value[worst]:.6g}" if value.shape == jump.shape else "..." for value in arguments)
+        component = f"component {', '.join(str(int(k)) for k in worst)}" if worst else "the result"
+        raise InputError(
+            f"{self.__name__} was declared continuous, but {component} jumps by {jump[worst]:.3g} near the argument "
+            f"{near}: an equation with a jump has no Newton derivative there"
+        )
 
 
 def declare_continuous(function: Callable[..., Any]) -> ContinuousFunction:

@@ -105,6 +105,8 @@ class TracedEquation:
         arrays = []
         for array in self.fields.listed(given, what):
             try:
+                if np.iscomplexobj(array):
+                    raise TypeError("complex values")
                 arrays.append(np.asarray(array, dtype=np.float64))
             except (TypeError, ValueError) as error:
                 raise InputError(f"{what} must hold real numbers: {error}") from error

@@ -91,7 +91,7 @@ class Fields:
 
     def spread(self, given: Any, what: str) -> FloatArray:
         """Numbers, one a field or one an entry, as a flat vector; one number for all passes too."""
-        if self.keys is None or (np.ndim(given) == 0 and not isinstance(given, (dict, tuple))):
+        if self.keys is None or (not isinstance(given, (dict, tuple, list)) and np.ndim(given) == 0):
             values = [given] * len(self.shapes)
         else:
             values = self.listed(given, what)

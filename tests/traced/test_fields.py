@@ -84,7 +84,7 @@ BAD = [
     (lambda: TracedEquation(np.sum, np.ones(2)).residual(np.ones(2)), r"F\(x\) has shape \(\), expected \(2,\)"),
     (lambda: TracedEquation(np.sum, np.ones(2)).linearize(np.ones(2)), r"F\(x\) has shape \(\), expected \(2,\)"),
     (lambda: TracedEquation(lambda f: f[0], (np.ones(2), 1.0)).residual(np.ones(3)), "must be a tuple of 2"),
-    (lambda: TracedEquation(lambda f: {"b": 1.0}, {"a": 1.0}).linearize(np.ones(1)), r"F\(x\) must be a dict .*\['b'\]"),
+    (lambda: TracedEquation(lambda f: {"b": 1.0}, {"a": 1.0}).linearize(np.ones(1)), r"must be a dict .*\['b'\]"),
     (lambda: TracedEquation(lambda f: (f[0], f[0]), (np.ones(2), 1.0)).linearize(np.ones(3)), r"F\(x\)\[1\] has shape"),
     (lambda: TracedEquation(lambda u: None, np.ones(2)).residual(np.ones(2)), r"F\(x\)"),
     (lambda: TracedEquation(lambda u: None, np.ones(2)).linearize(np.ones(2)), r"F\(x\)"),
