@@ -182,7 +182,13 @@ def test_unbounded_objectives():
     ):
         solution = ssn.solve(problem)
         assert not solution.converged, problem.part.H
-        assert solution.outcome in (Outcome.UNBOUNDED, Outcome.SADDLE_POINT, Outcome.SINGULAR, Outcome.STEP_LIMIT, Outcome.STALLED)
+        assert solution.outcome in (
+            Outcome.UNBOUNDED,
+            Outcome.SADDLE_POINT,
+            Outcome.SINGULAR,
+            Outcome.STEP_LIMIT,
+            Outcome.STALLED,
+        )
 
 
 def test_a_negative_curvature_within_bounds_ends_at_a_stationary_point():
