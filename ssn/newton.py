@@ -55,6 +55,118 @@ class LoopResult:
     start_accuracy: float = float("nan")
 
 
+class NewtonLoop:
+    """The loop, one step at a time: evaluate, check, solve, globalise, record.
+
+    Parameters
+    ----------
+    equation, solver, globalization
+        See protocols.
+    x : array
+        Start.
+    limits : Limits
+    first_index : int
+        Number of the first step, where the loop continues another.
+    stage : str
+        Name of the part of a path, for the records.
+    """
+
+    def __init__(
+        self,
+        equation: Any,
+        solver: LinearSolver,
+        globalization: Globalization,
+        x: FloatArray,
+        limits: Limits,
+        *,
+        first_index: int = 1,
+        stage: str = "",
+    ) -> None:
+        self.equation, self.solver, self.globalization = equation, solver, globalization
+        self.limits, self.stage = limits, stage
+        self.first_index = self.index = first_index
+        self.at: Evaluation = equation.evaluate(x)
+        at = self.at
+        self.result = LoopResult(
+            at, at, Outcome.STEP_LIMIT, "", start_norm=at.norm, start_accuracy=at.accuracy
+        )
+        self._seen: dict[bytes, list[tuple[int, float]]] = {}
+        self._top_norm = at.norm
+        self._repeated: int | None = None
+        self._complete = getattr(
+            equation, "complete", None
+        )  # for evaluations that bring no pieces by themselves
+
+    def finished(self) -> bool:
+        """Whether a stop rule holds at the current point; outcome and message then stand in `result`."""
+        at, result = self.at, self.result
+        if not at.finite:
+            return self._end(Outcome.NOT_FINITE, "the residual at the start is NaN or infinite")
+        if at.accuracy <= self.limits.tolerance:
+            return self._end(Outcome.CONVERGED, "")
+        if self.index - self.first_index >= self.limits.max_steps:
+            return self._end(Outcome.STEP_LIMIT, f"{self.limits.max_steps} steps taken")
+        if _stagnant(result, self._top_norm):
+            return self._end(Outcome.STALLED, "no more progress: the residual is at rounding level")
+        self._repeated = _recurrence(self._seen, at, self.index)
+        if self._repeated is not None:
+            stricter = self.globalization.tightened()
+            if stricter is None and self.globalization.name == "full":
+                return self._end(
+                    Outcome.CYCLING,
+                    f"the active sets and residual of step {self._repeated} came back at step {self.index - 1}",
+                )
+            if stricter is not None:
+                self.globalization = stricter
+                self._seen.clear()
+        return False
+
+    def _end(self, outcome: Outcome, message: str) -> bool:
+        self.result.outcome, self.result.message = outcome, message
+        return True
+
+    def step(self) -> StepRecord | None:
+        """Take one Newton step; None where nothing makes progress, with the outcome in `result`."""
+        if self.index == self.first_index and self._complete is not None:
+            self.at = self._complete(self.at)
+        at, result = self.at, self.result
+        forcing = _forcing(at, self._top_norm, self.limits)
+        before = self.equation.work.copy()
+        direction: Direction = self.solver.solve(at, forcing)
+        step = self.globalization.advance(self.equation, at, direction)
+        if step.at is None:
+            self._end(*_why_no_step(at, direction, step.reason, self.equation))
+            return None
+        new = step.at if self._complete is None else self._complete(step.at)
+        self._top_norm = max(self._top_norm, new.norm)
+        reasons = [step.reason] if step.reason else []
+        if self._repeated is not None:
+            reasons.append(f"active sets of step {self._repeated} recurred: stricter search")
+        record = StepRecord(
+            index=self.index,
+            residual_norm=new.norm,
+            accuracy=new.accuracy,
+            contraction=new.norm / at.norm if at.norm > 0 else 0.0,
+            action=step.action,
+            reason="; ".join(reasons),
+            length=step.length,
+            evaluations=step.evaluations,
+            forcing=forcing,
+            linear_residual=direction.relative_residual,
+            inner_iterations=direction.inner_iterations,
+            piece_changes=new.pieces.changes(at.pieces),
+            pieces=new.pieces.sizes(),
+            work=self.equation.work.since(before),
+            stage=self.stage,
+        )
+        result.steps.append(record)
+        self.at = result.last = new
+        if new.accuracy < result.best.accuracy or not result.best.finite:
+            result.best = new
+        self.index += 1
+        return record
+
+
 def run(
     equation: Any,
     solver: LinearSolver,
@@ -71,87 +183,19 @@ def run(
     The callback gets each `StepRecord` and may raise `StopSolve`. Ctrl-C ends with `Outcome.INTERRUPTED` and the
     best iterate; the caller turns that into an exception.
     """
-    at = equation.evaluate(x)
-    result = LoopResult(at, at, Outcome.STEP_LIMIT, "", start_norm=at.norm, start_accuracy=at.accuracy)
-    if not at.finite:
-        result.outcome, result.message = Outcome.NOT_FINITE, "the residual at the start is NaN or infinite"
-        return result
-    seen: dict[bytes, list[tuple[int, float]]] = {}
-    top_norm = at.norm
-    index = first_index
-    complete = getattr(equation, "complete", None)  # evaluations that bring no pieces by themselves
+    loop = NewtonLoop(equation, solver, globalization, x, limits, first_index=first_index, stage=stage)
     try:
-        while True:
-            if at.accuracy <= limits.tolerance:
-                result.outcome = Outcome.CONVERGED
-                return result
-            if index - first_index >= limits.max_steps:
-                result.message = f"{limits.max_steps} steps taken"
-                return result
-            if _stagnant(result, top_norm):
-                result.outcome, result.message = (
-                    Outcome.STALLED,
-                    "no more progress: the residual is at rounding level",
-                )
-                return result
-            repeated = _recurrence(seen, at, index)
-            if repeated is not None:
-                stricter = globalization.tightened()
-                if stricter is None and globalization.name == "full":
-                    result.outcome = Outcome.CYCLING
-                    result.message = (
-                        f"the active sets and residual of step {repeated} came back at step {index - 1}"
-                    )
-                    return result
-                if stricter is not None:
-                    globalization = stricter
-                    seen.clear()
-            if index == first_index and complete is not None:
-                at = complete(at)
-            forcing = _forcing(at, top_norm, limits)
-            before = equation.work.copy()
-            direction: Direction = solver.solve(at, forcing)
-            step = globalization.advance(equation, at, direction)
-            if step.at is None:
-                result.outcome, result.message = _why_no_step(at, direction, step.reason, equation)
-                return result
-            new = step.at if complete is None else complete(step.at)
-            top_norm = max(top_norm, new.norm)
-            reason = step.reason
-            if repeated is not None:
-                reason = (
-                    reason + "; " if reason else ""
-                ) + f"active sets of step {repeated} recurred: stricter search"
-            record = StepRecord(
-                index=index,
-                residual_norm=new.norm,
-                accuracy=new.accuracy,
-                contraction=new.norm / at.norm if at.norm > 0 else 0.0,
-                action=step.action,
-                reason=reason,
-                length=step.length,
-                evaluations=step.evaluations,
-                forcing=forcing,
-                linear_residual=direction.relative_residual,
-                inner_iterations=direction.inner_iterations,
-                piece_changes=new.pieces.changes(at.pieces),
-                pieces=new.pieces.sizes(),
-                work=equation.work.since(before),
-                stage=stage,
-            )
-            result.steps.append(record)
-            at = new
-            result.last = at
-            if at.accuracy < result.best.accuracy or not result.best.finite:
-                result.best = at
-            index += 1
+        while not loop.finished():
+            record = loop.step()
+            if record is None:
+                break
             if callback is not None:
                 callback(record)
     except StopSolve as stop:
-        result.outcome, result.message = Outcome.STOPPED, str(stop)
+        loop.result.outcome, loop.result.message = Outcome.STOPPED, str(stop)
     except KeyboardInterrupt:
-        result.outcome = Outcome.INTERRUPTED
-    return result
+        loop.result.outcome = Outcome.INTERRUPTED
+    return loop.result
 
 
 def _stagnant(result: LoopResult, top_norm: float) -> bool:
