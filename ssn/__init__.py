@@ -7,6 +7,7 @@ from .control import ControlProblem
 from .costs import Bounds, SparseCost
 from .errors import InputError, MissingExtraError, NotConverged, ProblemFileError, SolveInterrupted, StopSolve
 from .globalization import DualSearch, EnvelopeSearch, FullStep, ResidualSearch
+from .iteration import Iteration
 from .pieces import Pieces
 from .protocols import Cost, Equation, Linearization, SmoothPart
 from .records import Certificate, StepRecord
@@ -33,6 +34,7 @@ __all__ = [
     "Equation",
     "FullStep",
     "InputError",
+    "Iteration",
     "LeastSquares",
     "Linearization",
     "Logistic",

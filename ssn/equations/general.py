@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import replace
 from typing import Any
 
@@ -38,6 +39,7 @@ class GeneralEquation:
         if scale.shape not in ((), (size,)) or (scale <= 0).any():
             raise InputError(f"scale must be positive, a number or shape ({size},); got shape {scale.shape}")
         self.scale = scale
+        self.own_norm: Callable[[FloatArray], float] | None = None
         self._linearized: tuple[Any, Linearization | None] = (None, None)
 
     def _checked(self, value: Any, what: str) -> FloatArray:
@@ -51,9 +53,12 @@ class GeneralEquation:
         self.work.operator_products += 1
         with np.errstate(all="ignore"):
             residual = self._checked(self.user.residual(x.copy()), "the residual")
-        norm = (
-            float(np.sqrt(np.mean((residual / self.scale) ** 2))) if np.isfinite(residual).all() else np.inf
-        )
+        norm = np.inf
+        if np.isfinite(residual).all():
+            own = self.own_norm
+            norm = float(
+                np.sqrt(np.mean((residual / self.scale) ** 2)) if own is None else own(residual.copy())
+            )
         if not np.isfinite(norm):
             return Evaluation(x, residual, np.inf, np.inf, Pieces())
         return Evaluation(x, residual, norm, norm, Pieces())

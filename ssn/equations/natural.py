@@ -19,6 +19,7 @@ from typing import Any, Protocol
 import numpy as np
 import numpy.typing as npt
 
+from ..errors import InputError
 from ..inner import InnerProduct, relative
 from ..pieces import Pieces
 from ..protocols import Cost, Evaluation, FallbackStep, ProxDerivative
@@ -52,6 +53,18 @@ class NaturalPoint:
     moved: FloatArray
     derivative: ProxDerivative
     step: Any
+
+
+class DiagonalSelection:
+    """A diagonal derivative that comes from given pieces."""
+
+    def __init__(self, diagonal: FloatArray) -> None:
+        self.diagonal: FloatArray | None = diagonal
+
+    def apply(self, directions: FloatArray) -> FloatArray:
+        """Multiply a vector (n,) or the columns of (n, k)."""
+        assert self.diagonal is not None
+        return (self.diagonal * directions.T).T
 
 
 class NaturalEquation:
@@ -99,6 +112,7 @@ class NaturalEquation:
         self._best_norm = np.inf
         self._derivative_at: tuple[Any, Any] = (None, None)
         self._first_value: float | None = None
+        self.first_pieces: Pieces | None = None
 
     def evaluate(self, x: FloatArray) -> Evaluation:
         """One evaluation of F and one proximal map."""
@@ -114,8 +128,27 @@ class NaturalEquation:
         residual = x - moved
         norm = self.inner.norm(residual)
         accuracy = relative(norm, max(self.inner.norm(moved), self.magnitude))
+        if self.first_pieces is not None:
+            return self._on_pieces(x, force, v, norm, accuracy)
         data = NaturalPoint(force, v, moved, self.cost.prox_derivative(v, self._cost_step()), self.step)
         return Evaluation(x, residual, norm, accuracy, self.cost.pieces(v, self._cost_step()), data)
+
+    def _on_pieces(
+        self, x: FloatArray, force: FloatArray, v: FloatArray, norm: float, accuracy: float
+    ) -> Evaluation:
+        """Residual and derivative of the given bound pieces (once), with norm and accuracy of the true residual."""
+        assert self.first_pieces is not None
+        pieces, self.first_pieces = self.first_pieces, None
+        labels = pieces["control"]
+        if labels.shape != x.shape:
+            raise InputError(f"pieces have shape {labels.shape}, expected {x.shape}")
+        bounds: Any = self.cost
+        moved = np.where(labels == 0, bounds.lower, np.where(labels == 2, bounds.upper, v))
+        if not np.isfinite(moved).all():
+            index = int(np.argmin(np.isfinite(moved)))
+            raise InputError(f"pieces put component {index} on a bound that is infinite")
+        data = NaturalPoint(force, v, moved, DiagonalSelection((labels == 1).astype(np.float64)), self.step)
+        return Evaluation(x, x - moved, norm, accuracy, pieces, data)
 
     def _smoothed_evaluation(self, x: FloatArray, force: FloatArray, v: FloatArray) -> Evaluation:
         moved = self.cost.smoothed_prox(v, self._cost_step(), self.eps)

@@ -15,8 +15,8 @@ from .trace import Node
 
 FloatArray = npt.NDArray[np.float64]
 
-# Below this many entries a dense array is quicker than any sparse form.
-DENSE_ENTRIES = 4096
+# Up to this many entries in all derivatives together dense arrays are quicker than any sparse form.
+DENSE_ENTRIES = 100_000
 
 
 def derivative(node: Node | None, root: Node, rows: int) -> Any:
@@ -30,7 +30,7 @@ def derivative(node: Node | None, root: Node, rows: int) -> Any:
     order = _needed(node)
     if node.size == 0 or columns == 0 or root not in order:
         return sp.csr_array((rows, columns))
-    small = columns * max(part.size for part in order) <= DENSE_ENTRIES
+    small = columns * sum(part.size for part in order) <= DENSE_ENTRIES
     if small and not any(isinstance(link, Operator) for part in order for link in part.links):
         return _from_dense(_dense(order, root))
     return _sparse(order, root)

@@ -91,7 +91,7 @@ class Rows:
         else:
             columns = index + columns
         if gaps:
-            pass
+            columns = np.where(index < 0, -1, columns)
         data = self.data[index] if isinstance(self.data, np.ndarray) else self.data
         return Rows(size, columns, data, self.gaps or gaps)
 

@@ -7,6 +7,7 @@ from contextlib import contextmanager
 import numpy as np
 import scipy.sparse as sp
 from hypothesis import strategies as st
+from scipy.sparse.linalg import aslinearoperator
 
 import ssn.traced.assemble
 import ssn.traced.structure
@@ -45,11 +46,17 @@ def as_dense(derivative):
 
 
 def derivatives(function, x, eps=0.0):
-    """The traced derivative at x, dense, from all three forms, which must agree."""
+    """The traced derivative at x, dense, from all three forms, which must agree.
+
+    A fourth walks through all operations, as behind an operator.
+    """
     results = []
     for name in FORMS:
         with form(name):
             results.append(as_dense(TracedEquation(function, x).smoothed(eps).linearize(x).derivative))
+    identity = aslinearoperator(np.eye(x.size))
+    behind = TracedEquation(lambda u: function(identity @ u), x).smoothed(eps).linearize(x).derivative
+    results.append(as_dense(behind))
     for other in results[1:]:
         np.testing.assert_allclose(
             other, results[0], rtol=1e-12, atol=1e-13 * max(1.0, np.abs(results[0]).max())

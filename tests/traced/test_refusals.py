@@ -75,7 +75,7 @@ BAD = [
     (lambda u: (1j * np.eye(3)) @ u, "complex"),
     (lambda u: sp.csr_array(1j * np.eye(3)) @ u, "complex"),
     (lambda u: aslinearoperator(1j * np.eye(3)) @ u, "complex"),
-    (lambda u: sp.csr_array(np.eye(3)) * u, "the elementwise product with a sparse array .*use @"),
+    (lambda u: sp.csr_array(np.eye(3)) * u, "with a sparse array .*use @|F works on plain arrays, but"),
     (lambda u: np.multiply(u, sp.csr_array(np.eye(3))), "use @"),
     (lambda u: sp.diags_array(u) @ np.ones(3), r"cannot be traced at test_refusals.py:\d+"),
     (lambda u: spsolve(sp.csc_array(np.eye(3)), u), "cannot be traced"),
