@@ -1,11 +1,13 @@
 """ssn: semismooth Newton solver kernel with a benchmark harness."""
 
 from . import costs
+from .batch import solve_many
 from .complementarity import ComplementarityProblem
 from .composite import CompositeProblem
 from .control import ControlProblem
 from .costs import Bounds, SparseCost
 from .errors import InputError, MissingExtraError, NotConverged, ProblemFileError, SolveInterrupted, StopSolve
+from .follow import follow
 from .globalization import DualSearch, EnvelopeSearch, FullStep, ResidualSearch
 from .iteration import Iteration
 from .pieces import Pieces
@@ -17,6 +19,7 @@ from .solution import Solution
 from .solve import solve
 from .states import StateModel, SteadyState
 from .status import Outcome
+from .traced import TracedEquation, custom_operation, declare_continuous
 from .work import WorkCounts
 
 __version__ = "0.1.0"
@@ -54,8 +57,13 @@ __all__ = [
     "SteadyState",
     "StepRecord",
     "StopSolve",
+    "TracedEquation",
     "WorkCounts",
     "costs",
+    "custom_operation",
+    "declare_continuous",
+    "follow",
     "proximal_gradient",
     "solve",
+    "solve_many",
 ]

@@ -229,9 +229,9 @@ class _Batch:
         return done
 
 
-def _directions(derivative: FloatArray, residual: FloatArray) -> tuple[FloatArray, npt.NDArray[np.bool_]]:
+def _directions(derivative: FloatArray, residual: FloatArray) -> tuple[FloatArray, Any]:
     """-G^-1 F for every system, and which of them have a regular, finite G."""
-    regular = np.isfinite(derivative).all(axis=(1, 2))
+    regular: Any = np.isfinite(derivative).all(axis=(1, 2))
     safe = (
         derivative
         if regular.all()
@@ -240,8 +240,9 @@ def _directions(derivative: FloatArray, residual: FloatArray) -> tuple[FloatArra
     try:
         direction = np.linalg.solve(safe, -residual[..., None])[..., 0]
     except np.linalg.LinAlgError:
-        singular = np.linalg.matrix_rank(safe) < derivative.shape[1]
+        singular: Any = np.asarray(np.linalg.matrix_rank(safe) < derivative.shape[1])
         safe = np.where(singular[:, None, None], np.eye(derivative.shape[1]), safe)
         regular = regular & ~singular
         direction = np.linalg.solve(safe, -residual[..., None])[..., 0]
-    return direction, regular & np.isfinite(direction).all(axis=1)
+    ok: Any = regular & np.isfinite(direction).all(axis=1)
+    return np.asarray(direction, dtype=np.float64), ok

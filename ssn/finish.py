@@ -38,6 +38,8 @@ def finish(plan: Plan, result: LoopResult, limits: Limits, before: Any) -> Solut
         x = best.x
         fresh = plan.equation.evaluate(x.copy())
         accuracy = fresh.accuracy
+        if plan.unpack is not None:
+            x = plan.unpack(x)
     outcome, message = result.outcome, result.message
     if outcome is Outcome.CONVERGED and not accuracy <= limits.tolerance:
         outcome = Outcome.INACCURATE

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Any
 
@@ -22,6 +23,7 @@ from .protocols import FloatArray, Globalization, LinearSolver
 from .proximal_point import ProximalPointPath
 from .smooth import LeastSquares
 from .smoothing_path import SmoothingPath
+from .traced import TracedEquation
 from .validate import float_array
 
 # full steps tried first on a general equation: piecewise smooth ones settle within them or cycle
@@ -44,6 +46,7 @@ class Plan:
     polish: NaturalEquation | None = None
     smoothing: SmoothingPath | None = None
     plain_steps: int = 0
+    unpack: Callable[[FloatArray], Any] | None = None
 
 
 def prepare(
@@ -64,22 +67,24 @@ def prepare(
     elif hasattr(problem, "residual") and hasattr(problem, "linearize"):
         plan = _prepare_equation(problem, start)
     elif callable(problem):
-        raise InputError(
-            "a plain function brings no derivative: give an object with residual(x) and "
-            "linearize(x) -> ssn.Linearization"
-        )
+        if start is None:
+            raise InputError("give start: a function does not tell its number of unknowns")
+        traced = TracedEquation(problem, start)
+        plan = _prepare_equation(traced, None)
+        plan.unpack = traced.unpack
     else:
         raise InputError(
             f"cannot solve a {type(problem).__name__}: give a ControlProblem, CompositeProblem, "
             "ComplementarityProblem, "
-            "or an object with residual(x) and linearize(x)"
+            "a function of NumPy arrays, or an object with residual(x) and linearize(x)"
         )
     if linear not in ("auto", plan.solver.name):
         raise InputError(f"linear={linear!r} does not fit this problem; it is solved by {plan.solver.name!r}")
     if isinstance(globalization, str) and globalization == "smoothing":
-        if not hasattr(plan.equation, "smoothed"):
+        if not getattr(plan.equation, "can_be_smoothed", hasattr(plan.equation, "smoothed")):
             raise InputError(
-                "globalization='smoothing' needs complementarity or a composite problem without a dual"
+                "globalization='smoothing' needs complementarity, a composite problem without a dual, "
+                "or a traced function"
             )
         plan.smoothing = SmoothingPath()
         plan.choices["globalization"] = "smoothing: asked for"
@@ -181,11 +186,13 @@ def _prepare_equation(problem: Any, start: Any) -> Plan:
     given = start if start is not None else getattr(problem, "start", None)
     if given is None:
         raise InputError("give start: an Equation does not tell its number of unknowns")
-    x = float_array(given, "start", ndim=1)
+    traced = isinstance(problem, TracedEquation)
+    x = problem.pack(given) if traced and given is not problem.start else float_array(given, "start", ndim=1)
     equation = GeneralEquation(problem, x.size)
+    last = ", then the smoothing path" if hasattr(problem, "smoothed") else ""
     choices = {
-        "equation": "given by the caller",
-        "globalization": "a few full steps, then residual search (nonmonotone, least squares behind it)",
+        "equation": "derived from the operations of the function" if traced else "given by the caller",
+        "globalization": f"a few full steps, then residual search (nonmonotone, least squares behind it){last}",
     }
     search = ResidualSearch().fresh()
     return Plan(problem, equation, GeneralSolver(equation), search, x, choices, plain_steps=PLAIN_STEPS)

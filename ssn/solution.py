@@ -26,7 +26,8 @@ class Solution:
     Attributes
     ----------
     x : array
-        The returned point: the solution, or the best iterate where the solve failed. Shape of the start.
+        The returned point: the solution, or the best iterate where the solve failed. In the form of the start: a tuple
+        or dict of arrays where a traced function has several fields.
     converged : bool
         True only where the residual computed afresh at `x` is within the tolerance.
     outcome : Outcome
@@ -59,7 +60,7 @@ class Solution:
         What "auto" decided and why.
     """
 
-    x: FloatArray
+    x: Any
     converged: bool
     outcome: Outcome
     message: str
@@ -81,7 +82,10 @@ class Solution:
     iterate: FloatArray | None = field(default=None, repr=False, compare=False)
 
     def __repr__(self) -> str:
-        size = "x".join(map(str, self.x.shape))
+        fields = (
+            self.x.values() if isinstance(self.x, dict) else self.x if isinstance(self.x, tuple) else [self.x]
+        )
+        size = ", ".join("x".join(map(str, np.shape(field))) for field in fields)
         certified = ""
         if self.certificate is not None:
             bound = self.certificate

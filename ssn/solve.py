@@ -20,7 +20,7 @@ from .prepare import Plan, prepare
 from .protocols import FloatArray, Globalization
 from .proximal_point import follow, operator_size
 from .records import StepRecord
-from .smoothing_path import follow_smoothing
+from .smoothing_path import SmoothingPath, follow_smoothing
 from .solution import Solution
 from .status import Outcome
 from .validate import count, scalar
@@ -53,7 +53,9 @@ def solve(
 
     Parameters
     ----------
-    problem : ControlProblem, CompositeProblem, ComplementarityProblem, or object with the Equation protocol
+    problem : ControlProblem, CompositeProblem, ComplementarityProblem, function, or object with the Equation protocol
+        A plain function of NumPy arrays (or of a tuple or dict of arrays, like `start`) is traced: its Newton
+        derivative and active sets follow from its operations.
     start : array, optional
         Start of the unknown (a control for control problems); by default zero, projected onto the bounds. It is not
         changed.
@@ -163,24 +165,32 @@ def _run_smoothing(plan: Plan, limits: Limits, callback: Callback | None) -> Loo
 
 
 def _run_plain_first(plan: Plan, limits: Limits, callback: Callback | None) -> LoopResult:
-    """A few full steps, which settle most piecewise smooth equations; if they do not, a search follows."""
+    """A few full steps, which settle most piecewise smooth equations; then the smoothing path where there is one;
+    then the search from the best point.
+    """
     first = min(plan.plain_steps, max(1, limits.max_steps // 2))
     result = run(
         plan.equation, plan.solver, FullStep(), plan.start, replace(limits, max_steps=first),
         callback=callback, stage="plain steps",
     )  # fmt: skip
+    ended = (Outcome.CONVERGED, Outcome.STOPPED, Outcome.INTERRUPTED)
     left = limits.max_steps - len(result.steps)
-    if (
-        result.outcome in (Outcome.CONVERGED, Outcome.STOPPED, Outcome.INTERRUPTED)
-        or left <= 0
-        or not result.best.finite
-    ):
+    if result.outcome in ended or left <= 0 or not result.best.finite:
         return result
-    ended = run(
+    if getattr(plan.equation, "can_be_smoothed", False) and result.last.pieces:
+        path = follow_smoothing(
+            plan.equation, type(plan.solver), plan.start, replace(limits, max_steps=max(1, left // 2)), SmoothingPath(),
+            callback, first_index=len(result.steps) + 1,
+        )  # fmt: skip
+        result = _joined(result, path)
+        left = limits.max_steps - len(result.steps)
+        if result.outcome in ended or left <= 0:
+            return result
+    search = run(
         plan.equation, plan.solver, plan.globalization, result.best.x, replace(limits, max_steps=left),
         callback=callback, first_index=len(result.steps) + 1, stage="search from the best point",
     )  # fmt: skip
-    return _joined(result, ended)
+    return _joined(result, search)
 
 
 def _joined(first: LoopResult, then: LoopResult) -> LoopResult:

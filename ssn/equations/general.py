@@ -68,6 +68,20 @@ class GeneralEquation:
         pieces = self.linearize(at.x).pieces
         return replace(at, pieces=pieces if isinstance(pieces, Pieces) else Pieces(pieces))
 
+    @property
+    def can_be_smoothed(self) -> bool:
+        """Whether the user's equation has a smoothed form (traced functions have)."""
+        return hasattr(self.user, "smoothed")
+
+    def smoothed(self, eps: float) -> GeneralEquation:
+        """The equation with its nonsmooth operations smoothed; shares the work counters."""
+        return SmoothedEquation(self, eps) if eps > 0 else self
+
+    def smoothing_scale(self, at: Evaluation) -> float:
+        """A first smoothing parameter: the root mean square of x, or 1 at zero; one number for all kinks."""
+        size = float(np.sqrt(np.mean(at.x**2)))
+        return size if size > 0 else 1.0
+
     def linearize(self, x: FloatArray) -> Linearization:
         """Return the user's linearisation, once a point."""
         known, linearization = self._linearized
@@ -97,6 +111,27 @@ class GeneralEquation:
         """A Levenberg-Marquardt step, regularised until the squared residual falls; steepest descent for operators."""
         derivative = self.linearize(at.x).derivative
         return least_squares_step(self, at, derivative, np.broadcast_to(1.0 / self.scale, (self.size,)))
+
+
+class SmoothedEquation(GeneralEquation):
+    """The smoothed form; its accuracy is the residual relative to what smoothing changes, which is all it needs."""
+
+    def __init__(self, plain: GeneralEquation, eps: float) -> None:
+        super().__init__(plain.user.smoothed(eps), plain.size, plain.work)
+        self.plain = plain
+
+    def evaluate(self, x: FloatArray) -> Evaluation:
+        """The smoothed residual."""
+        at = super().evaluate(x)
+        if not at.finite:
+            return at
+        exact = self.plain.evaluate(x)
+        change = (
+            float(np.sqrt(np.mean(((at.residual - exact.residual) / self.scale) ** 2)))
+            if exact.finite
+            else np.inf
+        )
+        return replace(at, accuracy=at.norm / change if change > 0 else 0.0)
 
 
 def least_squares_step(
