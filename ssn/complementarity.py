@@ -135,11 +135,17 @@ class ComplementarityProblem:
         return np.clip(np.zeros(self.unknowns), self.lower, self.upper)
 
     def row_step(self, x: FloatArray) -> FloatArray:
-        """1 / |diagonal of F'(x)|, by which F is brought to the unit of x; the median where a diagonal vanishes."""
-        derivative = self.derivative(x)
+        """1 / |diagonal of F'(x)|, by which F is brought to the unit of x; the row sum where a diagonal vanishes.
+
+        It differs from its median by a factor of 1000 at most.
+        """
+        with np.errstate(all="ignore"):
+            derivative = self.derivative(x)
         if isinstance(derivative, LinearOperator):
             return np.ones(self.unknowns)
         diagonal = np.abs(derivative.diagonal())
+        rows = np.asarray(abs(derivative).sum(axis=1)).ravel()
+        diagonal = np.where(diagonal > 1e-3 * rows, diagonal, rows)
         usable = np.isfinite(diagonal) & (diagonal > 0)
         if not usable.any():
             return np.ones(self.unknowns)

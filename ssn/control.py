@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import copy
 from typing import Any
 
 import numpy as np
@@ -14,14 +15,14 @@ from .linear.boundary import as_matrix, as_square, product, transpose_product
 from .protocols import Cost
 from .records import Certificate
 from .states import StateModel
-from .validate import float_array, scalar, weight_array
+from .validate import bound_arrays, float_array, scalar, weight_array
 from .work import WorkCounts
 
 FloatArray = npt.NDArray[np.float64]
 
 
 class ControlProblem:
-    """minimise 1/2 ||C y - z||^2_Wy + alpha/2 ||u||^2_Wu + g(u) subject to E y = B u + f.
+    """minimise 1/2 ||C y - z||^2_Wy + alpha/2 ||u||^2_Wu + g(u) subject to E y = B u + f, and bounds of the state.
 
     Parameters
     ----------
@@ -41,11 +42,18 @@ class ControlProblem:
         f; zero by default.
     state_mass : array (N,) or sparse array (N, N), optional
         Mass of the state space: the load of a distributed control, and the observation mass where the whole state
-        is observed and no other is given. An error where it has no effect.
+        is observed and no other is given; lumped (row sums), the mass M of state bounds. An error where it has no
+        effect.
     control_mass : array, shape (n,), optional
         Lumped mass Wu, the inner product of the control; ones by default (dimensionless).
     observation_mass : array (m,) or sparse array (m, m), optional
         Wy; `state_mass` where the whole state is observed, else ones.
+    state_lower, state_upper : float or array, shape (N,), optional
+        Pointwise bounds of the state y (not of the observation), in its unit; infinite where there is none. They need
+        alpha > 0, an explicit E, B and C, and a cost that is separable.
+    state_tolerance : float, optional
+        Largest violation of a state bound in a solution, in the unit of the state; by default 1e-6 times the largest
+        finite |bound|, or 1e-6 where the bounds are zero.
 
     Raises
     ------
@@ -57,6 +65,13 @@ class ControlProblem:
     -----
     ``Solution.state`` is y, ``Solution.adjoint`` is p with E' p = C' Wy (z - C y), so that without g
     alpha Wu u = B' p.
+
+    State bounds are solved for by a path in the penalty gamma/2 (||max(0, y - upper)||^2_M + ||max(0, lower - y)||^2_M),
+    M the lumped state mass or ones. ``Solution.multipliers["state"]`` is the density l = gamma max(0, y - upper) -
+    gamma max(0, lower - y) with respect to M: positive where the upper bound acts, negative where the lower one does;
+    M l are nodal forces, and E' p = C' Wy (z - C y) - M l. `penalised` gives the problem for one gamma, whose objective
+    is the penalised one; a problem with hard bounds has an objective (inf where they are violated by more than
+    `state_tolerance`) and no gradient.
     """
 
     def __init__(
@@ -72,6 +87,9 @@ class ControlProblem:
         state_mass: Any = None,
         control_mass: Any = None,
         observation_mass: Any = None,
+        state_lower: Any = None,
+        state_upper: Any = None,
+        state_tolerance: float | None = None,
     ) -> None:
         if not isinstance(state, StateModel):
             raise InputError(
@@ -94,7 +112,8 @@ class ControlProblem:
             None if observation is None else as_matrix(observation, "observation", shape=(None, size))
         )
         m = size if self.observation is None else int(self.observation.shape[0])
-        used = control_operator is None
+        self._bound_the_state(state_lower, state_upper, state_tolerance, mass)
+        used = control_operator is None or self.state_bounded
         weight = _mass(observation_mass, "observation_mass", m)
         if weight is None and self.observation is None and mass is not None:
             weight, used = mass, True
@@ -115,6 +134,49 @@ class ControlProblem:
         self.work = WorkCounts()
         state.attach(self.work)
         self._offset: FloatArray | None = None
+
+    def _bound_the_state(self, lower: Any, upper: Any, tolerance: float | None, mass: Any) -> None:
+        size = self.state.size
+        self.state_bounded = lower is not None or upper is not None
+        self.state_penalty: float | None = None
+        if not self.state_bounded:
+            if tolerance is not None:
+                raise InputError("state_tolerance has no effect without state_lower or state_upper")
+            return
+        low, high = bound_arrays(
+            -np.inf if lower is None else lower,
+            np.inf if upper is None else upper,
+            names=("state_lower", "state_upper"),
+        )
+        for name, array in (("state_lower", low), ("state_upper", high)):
+            if array.shape not in ((), (size,)):
+                raise InputError(f"{name} has shape {array.shape}, expected a number or ({size},)")
+        self.state_lower, self.state_upper = np.broadcast_to(low, size), np.broadcast_to(high, size)
+        both = np.concatenate([low.ravel(), high.ravel()])
+        largest = float(np.abs(both[np.isfinite(both)]).max(initial=0.0))
+        self.state_tolerance = (
+            1e-6 * (largest or 1.0)
+            if tolerance is None
+            else scalar(tolerance, "state_tolerance", positive=True)
+        )
+        if self.alpha == 0.0:
+            raise InputError("state bounds need control_weight > 0: the penalty path stands on it")
+        lumped = np.ones(size) if mass is None else mass
+        if not isinstance(lumped, np.ndarray) or lumped.ndim == 2:
+            lumped = np.asarray(lumped.sum(axis=1)).ravel()
+        if not (lumped > 0).all():
+            raise InputError(
+                f"state bounds need a state_mass with positive row sums; row {int(np.argmax(lumped <= 0))} has not"
+            )
+        self.bound_mass: FloatArray = lumped
+
+    def penalised(self, gamma: float) -> ControlProblem:
+        """The same problem with its state bounds replaced by their penalty gamma > 0; see the notes of the class."""
+        if not self.state_bounded:
+            raise InputError("penalised needs state_lower or state_upper")
+        other = copy.copy(self)
+        other.state_penalty = scalar(gamma, "gamma", positive=True)
+        return other
 
     @property
     def convex(self) -> bool:
@@ -175,12 +237,47 @@ class ControlProblem:
 
     def smooth(self, u: FloatArray) -> tuple[float, FloatArray]:
         """Value and gradient (Riesz representative in the control product) of the smooth part; two state solves."""
+        if self.state_bounded:
+            return self._penalised_smooth(u)
         misfit = self.forward(u) - self.reduced_target()
         value = 0.5 * self.observations.dot(misfit, misfit) + 0.5 * self.alpha * self.controls.dot(u, u)
         return value, self.adjoint(misfit) + self.alpha * u
 
+    def _state(self, u: FloatArray) -> FloatArray:
+        """The state that belongs to u, refined once: a penalty magnifies its rounding errors."""
+        load = product(self.control_operator, u)
+        if self.source is not None:
+            load = load + self.source
+        y = self.state.solve(load)
+        return y + self.state.solve(self.state.residual(y, load))
+
+    def _penalised_value(self, u: FloatArray, y: FloatArray, misfit: FloatArray) -> float:
+        above, below = np.maximum(y - self.state_upper, 0.0), np.maximum(self.state_lower - y, 0.0)
+        value = 0.5 * self.observations.dot(misfit, misfit) + 0.5 * self.alpha * self.controls.dot(u, u)
+        if self.state_penalty is None:
+            violation = max(above.max(), below.max())
+            return value if violation <= self.state_tolerance else float("inf")
+        return value + 0.5 * self.state_penalty * float(self.bound_mass @ (above * above + below * below))
+
+    def _penalised_smooth(self, u: FloatArray) -> tuple[float, FloatArray]:
+        if self.state_penalty is None:
+            raise InputError(
+                "state bounds are hard constraints, which a gradient does not see; take problem.penalised(gamma)"
+            )
+        y = self._state(u)
+        misfit = self.observe(y) - self.target
+        excess = np.maximum(y - self.state_upper, 0.0) - np.maximum(self.state_lower - y, 0.0)
+        load = self.observations.apply(misfit)
+        if self.observation is not None:
+            load = transpose_product(self.observation, load)
+        p = self.state.adjoint_solve(load + self.state_penalty * self.bound_mass * excess)
+        return self._penalised_value(u, y, misfit), self.pull_back(p) + self.alpha * u
+
     def smooth_value(self, u: FloatArray) -> float:
         """Value of the smooth part; one state solve."""
+        if self.state_bounded:
+            y = self._state(u)
+            return self._penalised_value(u, y, self.observe(y) - self.target)
         misfit = self.forward(u) - self.reduced_target()
         return 0.5 * self.observations.dot(misfit, misfit) + 0.5 * self.alpha * self.controls.dot(u, u)
 
@@ -226,7 +323,7 @@ class ControlProblem:
         self, difference: FloatArray, reference: float, gradient_error: float, moved: float = 0.0
     ) -> Certificate | None:
         """Distance bound for z = prox(u - grad f(u)/alpha, 1/alpha) from S (z - u), or for a point `moved` from z."""
-        if self.alpha == 0.0 or not self.convex:
+        if self.alpha == 0.0 or not self.convex or self.state_bounded:
             return None
         solve_error = gradient_error / self.alpha
         bound = self.observations.norm(difference) / (2.0 * np.sqrt(self.alpha)) + solve_error + moved

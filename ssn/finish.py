@@ -11,7 +11,9 @@ from .complementarity import ComplementarityProblem
 from .composite import CompositeProblem
 from .control import ControlProblem
 from .equations.dual import DualEquation
+from .equations.full_space import FullSpaceEquation
 from .inner import relative
+from .moreau_yosida import collect
 from .newton import Limits, LoopResult
 from .prepare import Plan
 from .protocols import FloatArray
@@ -30,6 +32,8 @@ def finish(plan: Plan, result: LoopResult, limits: Limits, before: Any) -> Solut
     fields: dict[str, Any] = {}
     if isinstance(plan.equation, DualEquation):
         x, accuracy, fields = _finish_dual(plan, result, limits.tolerance)
+    elif isinstance(plan.equation, FullSpaceEquation):
+        x, accuracy, fields = collect(plan.equation, best)
     elif isinstance(plan.problem, CompositeProblem):
         x, accuracy, fields = _finish_composite(plan, result)
     elif isinstance(plan.problem, ComplementarityProblem):
@@ -228,7 +232,7 @@ def _finish_complementarity(plan: Plan, result: LoopResult) -> tuple[FloatArray,
         return best.x, float("inf"), {}
     x = np.clip(best.x, problem.lower, problem.upper)
     force = problem.value(x)
-    step = plan.equation.step
+    step = problem.row_step(x)  # at the returned point: F' may have changed since the start
     residual = x - np.clip(x - step * force, problem.lower, problem.upper)
     accuracy = relative(
         float(np.linalg.norm(residual)), max(float(np.linalg.norm(x)), plan.equation.magnitude)

@@ -7,18 +7,21 @@ from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
+from scipy.sparse.linalg import LinearOperator
 
 from .complementarity import ComplementarityProblem
 from .composite import CompositeProblem, LeastSquaresMap
 from .control import ControlProblem
 from .equations.complementarity import MidEquation
 from .equations.dual import DualEquation
+from .equations.full_space import FullSpaceEquation
 from .equations.general import GeneralEquation
 from .equations.natural import NaturalEquation
 from .errors import InputError
 from .globalization import CATALOGUE, DualSearch, EnvelopeSearch, ResidualSearch
 from .linear import CATALOGUE as LINEAR
-from .linear import GeneralSolver, ReducedSolver, SubspaceSolver
+from .linear import FullSpaceSolver, GeneralSolver, ReducedSolver, SubspaceSolver
+from .moreau_yosida import PenaltyPath, first_penalty
 from .protocols import FloatArray, Globalization, LinearSolver
 from .proximal_point import ProximalPointPath
 from .smooth import LeastSquares
@@ -45,6 +48,7 @@ class Plan:
     path: ProximalPointPath | None = None
     polish: NaturalEquation | None = None
     smoothing: SmoothingPath | None = None
+    penalty: PenaltyPath | None = None
     plain_steps: int = 0
     unpack: Callable[[FloatArray], Any] | None = None
 
@@ -116,6 +120,8 @@ def _prepare_control(problem: ControlProblem, start: Any) -> Plan:
     if not problem.convex:
         raise InputError(f"{type(problem.cost).__name__} is not convex: control problems need a convex cost")
     control = _start_array(start, problem.unknowns)
+    if problem.state_bounded:
+        return _prepare_state_bounds(problem, control)
     path = None if problem.alpha > 0 else ProximalPointPath()
     alpha = problem.alpha if problem.alpha > 0 else 1.0
     equation = DualEquation(problem, problem.reduced_target(), alpha, problem.cost)
@@ -130,6 +136,31 @@ def _prepare_control(problem: ControlProblem, start: Any) -> Plan:
     else:
         x = equation.start(control)
     return Plan(problem, equation, SubspaceSolver(equation), DualSearch(), x, choices, path)
+
+
+def _prepare_state_bounds(problem: ControlProblem, control: FloatArray | None) -> Plan:
+    if getattr(problem.state, "matrix", None) is None:
+        raise InputError(
+            f"state bounds need the explicit matrix of the state equation, which {type(problem.state).__name__} hides"
+        )
+    for name, matrix in (("control_operator", problem.control_operator), ("observation", problem.observation)):
+        if isinstance(matrix, LinearOperator):
+            raise InputError(f"state bounds need {name} as a matrix, got a LinearOperator")
+    if problem.cost.prox_derivative(np.zeros(problem.unknowns), 1.0 / problem.alpha).diagonal is None:
+        raise InputError(f"state bounds need a separable cost; {type(problem.cost).__name__} is not")
+    gamma = problem.state_penalty if problem.state_penalty is not None else np.inf
+    equation = FullSpaceEquation(problem, min(first_penalty(problem), gamma))
+    choices = {
+        "equation": "state and adjoint, control eliminated, state bounds penalised",
+        "globalization": "residual search at each point of the path, which goes back where it fails",
+        "linear": "full space: one sparse factorisation a step, pattern kept",
+        "path": "Moreau-Yosida: the penalty rises by a model of the value function",
+    }
+    search = ResidualSearch().fresh()
+    x = equation.start(control)
+    return Plan(
+        problem, equation, FullSpaceSolver(equation), search, x, choices, penalty=PenaltyPath()
+    )
 
 
 def _prepare_composite(problem: CompositeProblem, start: Any, globalization: Any) -> Plan:

@@ -2,8 +2,11 @@
 
 At each point one plain Newton step at eps = 0 is tried; while plain steps contract they go on, and their point is
 taken when they converge. Otherwise the smoothed equation is solved roughly at eps, eps falls by a factor (a smaller
-one after a hard point), and so on. The path is guaranteed for monotone-like (P0) maps with bounded level sets; where it
-does not work it stops and says so.
+one after an easy point, a larger one after a hard point), and so on. The path is guaranteed for monotone-like (P0) maps
+with bounded level sets; where it does not work it stops and says so. Equations that have another form and an interior
+(complementarity) are then tried in other ways, in this order, each with a share of the steps left: plain steps from the
+start, the path on the Fischer-Burmeister form, and paths that begin inside the bounds with a large eps, where the start
+is forgotten. The stage of each record names the way.
 
 Source: B. Chen and P. T. Harker, SIAM J. Matrix Anal. Appl. 14 (1993) 1168-1190; C. Kanzow, SIAM J. Matrix Anal.
 Appl. 17 (1996) 851-868 (both from memory), for the smoothed minimum.
@@ -17,9 +20,14 @@ from typing import Any
 
 from .globalization import FullStep, ResidualSearch
 from .newton import Limits, LoopResult, run
-from .protocols import FloatArray
+from .protocols import Evaluation, FloatArray, Globalization
 from .records import StepRecord
 from .status import Outcome
+
+ENDS = (Outcome.CONVERGED, Outcome.STOPPED, Outcome.INTERRUPTED)
+# ways to go on where the path from the start fails: steps at most
+PLAIN_STEPS = 15
+WAY_STEPS = 40
 
 
 @dataclass(frozen=True)
@@ -36,12 +44,16 @@ class SmoothingPath:
         Plain steps go on while each cuts the residual norm to this fraction.
     least : float
         eps at which the path is given up, as a fraction of the first one.
+    interior : tuple of float
+        First eps of the paths that begin inside the bounds, where the path from the start fails; in units of the size
+        of x.
     """
 
     factor: float = 0.1
     point_steps: int = 12
     contraction: float = 0.3
     least: float = 1e-12
+    interior: tuple[float, ...] = (1.0, 10.0, 0.1)
 
 
 def follow_smoothing(
@@ -54,72 +66,143 @@ def follow_smoothing(
     first_index: int = 1,
 ) -> LoopResult:
     """Run the path for an equation with ``smoothed(eps)``; the best plain evaluation is returned."""
-    best = equation.evaluate(start)
-    result = LoopResult(best, best, Outcome.STALLED, "", start_norm=best.norm, start_accuracy=best.accuracy)
-    if not best.finite:
-        result.outcome, result.message = Outcome.NOT_FINITE, "the residual at the start is NaN or infinite"
+    follower = _Follower(equation, make_solver, start, limits, path, callback, first_index)
+    return follower.result if follower.ended else follower.all_ways()
+
+
+class _Follower:
+    """One solve: the records of all ways, the best point, and the steps left."""
+
+    def __init__(
+        self,
+        equation: Any,
+        make_solver: Callable[[Any], Any],
+        start: FloatArray,
+        limits: Limits,
+        path: SmoothingPath,
+        callback: Callable[[StepRecord], None] | None,
+        first_index: int,
+    ) -> None:
+        self.equation, self.make_solver = equation, make_solver
+        self.limits, self.path = limits, path
+        self.callback, self.first_index = callback, first_index
+        at = equation.evaluate(start)
+        self.start = at.x
+        self.result = LoopResult(at, at, Outcome.STALLED, "", start_norm=at.norm, start_accuracy=at.accuracy)
+        self.ended = not at.finite
+        if self.ended:
+            self.result.outcome = Outcome.NOT_FINITE
+            self.result.message = "the residual at the start is NaN or infinite"
+
+    def all_ways(self) -> LoopResult:
+        """The path from the start, then the other ways while steps are left."""
+        equation, result = self.equation, self.result
+        self._follow(equation, self.start, equation.smoothing_scale(result.best), self.limits.max_steps, "")
+        if self.ended or not hasattr(equation, "other_form"):
+            return result
+        way = "plain steps from the start"
+        at = self._plain(equation, self.start, PLAIN_STEPS, way)
+        if self.ended:
+            return result
+        other = equation.other_form()
+        self._follow(other, self.start, other.smoothing_scale(at), WAY_STEPS, f"{other.form}, ")
+        for size in self.path.interior:
+            if self.ended:
+                break
+            distance = size * max(1.0, equation.typical(self.start))
+            inside = equation.interior(self.start, distance)
+            self._follow(other, inside, distance, WAY_STEPS, f"{other.form} from inside the bounds, ")
         return result
-    plain_solver = make_solver(equation)
-    smoothed_solver: Any = None
-    x = start
-    first = eps = equation.smoothing_scale(best)
-    hard = 0
 
-    def left() -> int:
-        return limits.max_steps - len(result.steps)
+    def _left(self) -> int:
+        return self.limits.max_steps - len(self.result.steps)
 
-    def stage(
-        eq: Any, solver: Any, globalization: Any, at: FloatArray, stage_limits: Limits, name: str
+    def _stage(
+        self, equation: Any, solver: Any, globalization: Globalization, at: FloatArray, limits: Limits, name: str
     ) -> LoopResult:
         part = run(
-            eq, solver, globalization, at, stage_limits,
-            callback=callback, first_index=first_index + len(result.steps), stage=name,
+            equation, solver, globalization, at, replace(limits, max_steps=max(0, min(limits.max_steps, self._left()))),
+            callback=self.callback, first_index=self.first_index + len(self.result.steps), stage=name,
         )  # fmt: skip
-        result.steps.extend(part.steps)
+        self.result.steps.extend(part.steps)
         return part
 
-    while True:
-        at, previous = x, equation.evaluate(x).norm
-        while True:  # plain steps, as long as they contract
-            part = stage(
-                equation, plain_solver, FullStep(), at, replace(limits, max_steps=min(1, left())), "eps = 0"
-            )
-            if part.best.accuracy < result.best.accuracy:
-                result.best = part.best
-            if _ended(part, result, left()):
-                return result
-            contracted = bool(part.steps) and part.last.norm <= path.contraction * previous
-            if not contracted:
-                break
-            at, previous = part.last.x, part.last.norm
-        smoothed = equation.smoothed(eps)
-        if smoothed_solver is None:
-            smoothed_solver = make_solver(smoothed)
-        smoothed_solver.equation = smoothed  # the pattern stays, and with it the symbolic factorisation
-        search = ResidualSearch(memory=1).fresh()
-        point = Limits(tolerance=0.5, max_steps=min(path.point_steps, left()))
-        part = stage(smoothed, smoothed_solver, search, x, point, f"eps = {eps:.1e}")
-        if part.outcome in (Outcome.STOPPED, Outcome.INTERRUPTED, Outcome.NOT_FINITE, Outcome.SINGULAR):
-            result.outcome, result.message = part.outcome, part.message
-            return result
-        if left() <= 0:
-            result.outcome, result.message = Outcome.STEP_LIMIT, f"{limits.max_steps} steps taken"
-            return result
-        x = part.last.x
-        hard = 0 if part.outcome is Outcome.CONVERGED else hard + 1
-        if hard >= 3 or eps < path.least * first:
+    def _plain(self, equation: Any, x: FloatArray, steps: int, name: str) -> Evaluation:
+        """Plain steps at eps = 0; ends the solve where they converge."""
+        solver = self.make_solver(equation)
+        part = self._stage(equation, solver, FullStep(), x, replace(self.limits, max_steps=steps), name)
+        self._keep(equation, part)
+        return part.best
+
+    def _keep(self, equation: Any, part: LoopResult) -> None:
+        """Remember the best point; end where the part settled the solve or no steps are left."""
+        result = self.result
+        if part.outcome is Outcome.CONVERGED and _rescaled(equation, part.best.x):
+            at = equation.evaluate(part.best.x)
+            part.best = part.last = at
+            if at.accuracy > self.limits.tolerance:
+                part.outcome = Outcome.STEP_LIMIT
+        if part.best.accuracy < result.best.accuracy or part.outcome is Outcome.CONVERGED:
+            result.best = part.best
+        if part.outcome in ENDS:
+            result.outcome, result.message, result.last = part.outcome, part.message, part.last
+            self.ended = True
+        elif self._left() <= 0:
+            result.outcome, result.message = Outcome.STEP_LIMIT, f"{self.limits.max_steps} steps taken"
+            self.ended = True
+
+    def _follow(self, equation: Any, x: FloatArray, eps: float, steps: int, way: str) -> None:
+        """One path from x with the first eps."""
+        path, result = self.path, self.result
+        last_step = min(self.limits.max_steps, len(result.steps) + steps)
+        solver = self.make_solver(equation)
+        smoothed_solver: Any = None
+        first, hard = eps, 0
+        while not self.ended:
+            at = x
+            while True:  # plain steps, as long as they contract
+                _rescaled(equation, at)
+                previous = equation.evaluate(at).norm
+                one = replace(self.limits, max_steps=1)
+                part = self._stage(equation, solver, FullStep(), at, one, f"{way}eps = 0")
+                self._keep(equation, part)
+                if self.ended:
+                    return
+                contracted = bool(part.steps) and part.last.norm <= path.contraction * previous
+                if not contracted:
+                    break
+                at = part.last.x
+            _rescaled(equation, x)
+            smoothed = equation.smoothed(eps)
+            if smoothed_solver is None:
+                smoothed_solver = self.make_solver(smoothed)
+            smoothed_solver.equation = smoothed  # the pattern stays, and with it the symbolic factorisation
+            search = ResidualSearch(memory=1).fresh()
+            point = Limits(tolerance=0.5, max_steps=min(path.point_steps, last_step - len(result.steps)))
+            part = self._stage(smoothed, smoothed_solver, search, x, point, f"{way}eps = {eps:.1e}")
+            if part.outcome in (Outcome.STOPPED, Outcome.INTERRUPTED):
+                result.outcome, result.message = part.outcome, part.message
+                self.ended = True
+                return
             result.outcome = Outcome.STALLED
-            result.message = f"the smoothing path makes no progress at eps = {eps:.1e}"
-            return result
-        if hard == 0:
-            eps *= path.factor
+            result.message = f"{way}the smoothing path makes no progress at eps = {eps:.1e}"
+            if part.outcome in (Outcome.NOT_FINITE, Outcome.SINGULAR):
+                result.outcome, result.message = part.outcome, part.message
+                return
+            if self._left() <= 0:
+                result.outcome = Outcome.STEP_LIMIT
+                result.message = f"{self.limits.max_steps} steps taken"
+                self.ended = True
+                return
+            x = part.last.x
+            hard = 0 if part.outcome is Outcome.CONVERGED else hard + 1
+            if hard >= 2 or eps < path.least * first or len(result.steps) >= last_step:
+                return
+            if hard == 0:
+                eps *= path.factor
 
 
-def _ended(part: LoopResult, result: LoopResult, left: int) -> bool:
-    if part.outcome in (Outcome.CONVERGED, Outcome.STOPPED, Outcome.INTERRUPTED):
-        result.outcome, result.message, result.last = part.outcome, part.message, part.last
-        return True
-    if left <= 0:
-        result.outcome, result.message = Outcome.STEP_LIMIT, "no steps left"
-        return True
-    return False
+def _rescaled(equation: Any, x: FloatArray) -> bool:
+    """Bring F to the unit of x at this point, where the equation can."""
+    rescale = getattr(equation, "rescale", None)
+    return rescale is not None and bool(rescale(x))

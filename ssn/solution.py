@@ -51,7 +51,9 @@ class Solution:
     certificate : Certificate or None
         Distance bound to the exact discrete solution, where the problem is strongly convex.
     state, adjoint : array or None
-        Control problems: y and p with E'p = C'Wy(z - Cy).
+        Control problems: y and p with E'p = C'Wy(z - Cy), minus M l where the state has bounds.
+    violation : float or None
+        Control problems with state bounds: the largest violation, in the unit of the state.
     work : WorkCounts
         What the whole solve cost, final checks included.
     objective : float
@@ -75,6 +77,7 @@ class Solution:
     certificate: Certificate | None = None
     state: FloatArray | None = None
     adjoint: FloatArray | None = None
+    violation: float | None = None
     work: WorkCounts = field(default_factory=WorkCounts)
     objective: float = float("nan")
     choices: Mapping[str, str] = field(default_factory=dict)

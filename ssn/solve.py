@@ -13,8 +13,9 @@ from .equations.dual import DualEquation
 from .equations.natural import NaturalPoint
 from .errors import InputError, SolveInterrupted
 from .finish import finish
-from .globalization import EnvelopeSearch, FullStep
+from .globalization import EnvelopeSearch, FullStep, ResidualSearch
 from .linear import ReducedSolver, SubspaceSolver
+from .moreau_yosida import follow_penalty
 from .newton import Limits, LoopResult, run
 from .prepare import Plan, prepare
 from .protocols import FloatArray, Globalization
@@ -100,6 +101,8 @@ def solve(
         limits = Limits(limits.tolerance, limits.max_steps, exact=True)
     if plan.path is not None:
         solution = _run_path(plan, limits, observer, before)
+    elif plan.penalty is not None:
+        solution = _run_penalty(plan, limits, observer, before)
     else:
         solution = _run_until_confirmed(plan, limits, observer, before)
     if solution.outcome is Outcome.INTERRUPTED:
@@ -250,6 +253,20 @@ def _run_path(plan: Plan, limits: Limits, callback: Callback | None, before: Any
         else result.equation
     )
     return finish(plan, result.loop, limits, before)
+
+
+def _run_penalty(plan: Plan, limits: Limits, callback: Callback | None, before: Any) -> Solution:
+    assert plan.penalty is not None
+    search = plan.globalization
+
+    def make_search() -> Globalization:
+        return search.fresh() if isinstance(search, ResidualSearch) else search
+
+    result = follow_penalty(plan.equation, make_search, plan.start, limits, plan.penalty, callback)
+    plan.equation = result.equation
+    plan.choices["path"] += f"; {result.points} points, the last at {result.equation.gamma:.3g}"
+    plan.problem = plan.problem.penalised(result.equation.gamma)
+    return finish(plan, result.loop, replace(limits, tolerance=result.tolerance), before)
 
 
 def _with_progress(callback: Callback | None) -> Callback:

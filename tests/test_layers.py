@@ -26,6 +26,7 @@ LEVELS: dict[str, float] = {
     "protocols": 0,
     "records": 0,
     "status": 0,
+    "schema": 0,
     "validate": 0,
     "work": 0,
     # building blocks
@@ -48,6 +49,7 @@ LEVELS: dict[str, float] = {
     "reference": 2,
     "user_equation": 2,
     # the loop over a path of equations
+    "moreau_yosida": 2.25,
     "proximal_point": 2.25,
     "smoothing_path": 2.25,
     # what "auto" decides, and the end of a solve
@@ -63,6 +65,9 @@ LEVELS: dict[str, float] = {
     "follow": 3,
     "weight_path": 3,
     "problem_file": 3.5,
+    # evidence about problem files
+    "gate": 3.75,
+    "verification": 3.75,
     # for people
     "benchmarking": 4,
     "report": 4,

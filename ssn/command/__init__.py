@@ -6,11 +6,13 @@ import io
 import sys
 
 from .compare_command import compare
+from .gate_command import gate_problems
 from .list_command import list_problems
 from .program import program
 from .solve_command import solve
+from .verify_command import verify
 
-COMMANDS = (list_problems, solve, compare)
+COMMANDS = (list_problems, solve, compare, verify, gate_problems)
 
 for _command in COMMANDS:
     program.add_command(_command)

@@ -93,6 +93,10 @@ class MidEquation(NaturalEquation):
         self._best_norm = np.inf
         return True
 
+    def typical(self, x: FloatArray) -> float:
+        """Root mean square of x."""
+        return self.inner.norm(x) / float(np.sqrt(self.weights.sum()))
+
     def other_form(self) -> MidEquation:
         """The Fischer-Burmeister equation of the same problem."""
         return FischerBurmeisterEquation(self.problem, self.step, self.magnitude)

@@ -1,6 +1,7 @@
 """Results for people and programs: tables and sentences, pictures, an HTML page, JSON."""
 
 from .entry import Entry, caution, setting
+from .gate_tables import GateTable, gate_conclusion, gate_document, gate_lines
 from .html import page
 from .pictures import (
     check_picture_path,
@@ -14,13 +15,24 @@ from .pictures import (
 )
 from .tables import Overview, catalogue_table, comparison, conclusion, pairs_table, solution_summary
 from .terminal import Report, Terminal
+from .verify_tables import (
+    Verified,
+    VerifiedOverview,
+    folder_line,
+    verification_document,
+    verification_table,
+    verify_figure,
+)
 from .writer import as_text, comparison_document, solution_document
 
 __all__ = [
     "Entry",
+    "GateTable",
     "Overview",
     "Report",
     "Terminal",
+    "Verified",
+    "VerifiedOverview",
     "as_text",
     "catalogue_table",
     "caution",
@@ -29,6 +41,10 @@ __all__ = [
     "comparison_document",
     "conclusion",
     "embedded",
+    "folder_line",
+    "gate_conclusion",
+    "gate_document",
+    "gate_lines",
     "history_figure",
     "is_figure",
     "page",
@@ -40,4 +56,7 @@ __all__ = [
     "setting",
     "solution_document",
     "solution_summary",
+    "verification_document",
+    "verification_table",
+    "verify_figure",
 ]
