@@ -12,6 +12,7 @@ from .costs import Bounds
 from .errors import InputError
 from .inner import InnerProduct, relative
 from .linear.boundary import is_symmetric
+from .smooth import TracedMap
 from .validate import bound_arrays, scalar
 from .work import WorkCounts
 
@@ -23,7 +24,8 @@ class ComplementarityProblem:
 
     Parameters
     ----------
-    F : AffineMap, SmoothMap, or object with value(x) and derivative(x)
+    F : AffineMap, SmoothMap, function, or object with value(x) and derivative(x)
+        A plain function of a NumPy array of n numbers is traced: its derivative follows from its operations.
     lower, upper : float or array, shape (n,)
         Infinite where there is no bound.
     size : int, optional
@@ -55,9 +57,11 @@ class ComplementarityProblem:
         size: int | None = None,
         magnitude: float | None = None,
     ) -> None:
-        if not (hasattr(F, "value") and hasattr(F, "derivative")):
+        traced = callable(F) and not hasattr(F, "value")
+        if not traced and not (hasattr(F, "value") and hasattr(F, "derivative")):
             raise InputError(
-                "F must be an AffineMap, a SmoothMap, or an object with value(x) and derivative(x)"
+                "F must be an AffineMap, a SmoothMap, a function of NumPy arrays, or an object with value(x) and "
+                "derivative(x)"
             )
         low, high = bound_arrays(lower, upper)
         sizes = {int(k) for k in (getattr(F, "size", None), size) if k is not None}
@@ -69,8 +73,8 @@ class ComplementarityProblem:
                 f"the number of unknowns is not clear: F, lower, upper and size say {sorted(sizes) or 'nothing'}"
             )
         self.unknowns = sizes.pop()
-        self.map = F
-        self.affine = bool(getattr(F, "affine", False))
+        self.map = TracedMap(F, self.unknowns) if traced else F
+        self.affine = bool(getattr(self.map, "affine", False))
         self.lower = np.broadcast_to(low, (self.unknowns,)).copy()
         self.upper = np.broadcast_to(high, (self.unknowns,)).copy()
         self.cost = Bounds(self.lower, self.upper)

@@ -13,6 +13,7 @@ from scipy.special import expit
 
 from .errors import InputError
 from .linear.boundary import as_matrix, as_square, is_symmetric, product, transpose_product
+from .traced import TracedEquation
 from .validate import float_array, weight_array
 
 FloatArray = npt.NDArray[np.float64]
@@ -200,3 +201,22 @@ class SmoothMap:
     def derivative(self, x: FloatArray) -> Any:
         """F'(x)."""
         return self._derivative(x.copy())
+
+
+class TracedMap:
+    """A map given by a plain function of NumPy arrays; its derivative follows from its operations."""
+
+    affine = False
+    symmetric = False
+
+    def __init__(self, function: Callable[[FloatArray], Any], size: int) -> None:
+        self._equation = TracedEquation(function, np.zeros(size))
+        self.size = size
+
+    def value(self, x: FloatArray) -> FloatArray:
+        """F(x)."""
+        return self._equation.residual(x)
+
+    def derivative(self, x: FloatArray) -> Any:
+        """F'(x)."""
+        return self._equation.linearize(x).derivative

@@ -62,3 +62,22 @@ def test_fischer_burmeister_has_the_roots_of_the_problem():
     form = FischerBurmeister(prepare(problem, x).equation)
     assert np.abs(form.evaluate(x).residual).max() < 1e-12
     assert np.abs(form.evaluate(x + 0.05).residual).max() > 1e-3
+
+
+def test_a_plain_function_serves_as_the_map_of_complementarity():
+    """Kojima and Shindo (J. Oper. Res. Soc. Japan 29, 1986), written as a function."""
+
+    def force(x):
+        a, b, c, d = x[0], x[1], x[2], x[3]
+        return np.stack(
+            [
+                3 * a**2 + 2 * a * b + 2 * b**2 + c + 3 * d - 6,
+                2 * a**2 + a + b**2 + 10 * c + 2 * d - 2,
+                3 * a**2 + a * b + 2 * b**2 + 2 * c + 9 * d - 9,
+                a**2 + 3 * b**2 + 2 * c + 3 * d - 3,
+            ]
+        )
+
+    solution = ssn.solve(ssn.ComplementarityProblem(force, 0.0, size=4), np.array([1.0, 0.0, 1.0, 0.0])).require()
+    known = [np.array([np.sqrt(6) / 2, 0, 0, 0.5]), np.array([1.0, 0, 3, 0])]
+    assert min(np.abs(solution.x - k).max() for k in known) < 1e-7
