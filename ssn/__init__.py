@@ -20,6 +20,7 @@ from .solve import solve
 from .states import StateModel, SteadyState
 from .status import Outcome
 from .traced import TracedEquation, custom_operation, declare_continuous
+from .weight_path import placements, refit, vanishing_weight, weight_path
 from .work import WorkCounts
 
 __version__ = "0.1.0"
@@ -63,7 +64,11 @@ __all__ = [
     "custom_operation",
     "declare_continuous",
     "follow",
+    "placements",
     "proximal_gradient",
+    "refit",
     "solve",
     "solve_many",
+    "vanishing_weight",
+    "weight_path",
 ]

@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from typing import Any
+import copy
+from typing import Any, Self
 
 import numpy as np
 import numpy.typing as npt
@@ -65,6 +66,15 @@ class CompositeProblem:
         self.symmetric = True
         self._lipschitz: float | None = None
         self._strong: float | None = None
+
+    def with_cost(self, cost: Cost) -> Self:
+        """Return the same problem with another cost; operators, factors and work counters are shared."""
+        if not isinstance(cost, Cost):
+            raise InputError(f"cost must have the members of ssn.Cost, got {type(cost).__name__}")
+        cost.check_size(self.unknowns)
+        other = copy.copy(self)
+        other.cost = cost
+        return other
 
     @property
     def convex(self) -> bool:
