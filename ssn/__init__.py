@@ -5,12 +5,22 @@ from .batch import solve_many
 from .complementarity import ComplementarityProblem
 from .composite import CompositeProblem
 from .control import ControlProblem
-from .costs import Bounds, SparseCost
+from .costs import (
+    Bounds,
+    ElasticNetCost,
+    HingeLoss,
+    HuberCost,
+    InsensitiveLoss,
+    PiecewiseQuadraticCost,
+    QuantileLoss,
+    SparseCost,
+)
 from .errors import InputError, MissingExtraError, NotConverged, ProblemFileError, SolveInterrupted, StopSolve
-from .follow import follow
+from .follow import follow, follow_meshes
 from .globalization import DualSearch, EnvelopeSearch, FullStep, ResidualSearch
 from .iteration import Iteration
 from .pieces import Pieces
+from .primal_dual import primal_dual
 from .protocols import Cost, Equation, Linearization, SmoothPart
 from .records import Certificate, StepRecord
 from .reference import proximal_gradient
@@ -19,6 +29,8 @@ from .solution import Solution
 from .solve import solve
 from .states import StateModel, SteadyState
 from .status import Outcome
+from .sum_problem import SumProblem, Term
+from .time_state import TimeDependentState
 from .traced import TracedEquation, custom_operation, declare_continuous
 from .weight_path import placements, refit, vanishing_weight, weight_path
 from .work import WorkCounts
@@ -34,10 +46,14 @@ __all__ = [
     "ControlProblem",
     "Cost",
     "DualSearch",
+    "ElasticNetCost",
     "EnvelopeSearch",
     "Equation",
     "FullStep",
+    "HingeLoss",
+    "HuberCost",
     "InputError",
+    "InsensitiveLoss",
     "Iteration",
     "LeastSquares",
     "Linearization",
@@ -46,8 +62,10 @@ __all__ = [
     "NotConverged",
     "Outcome",
     "Pieces",
+    "PiecewiseQuadraticCost",
     "ProblemFileError",
     "Quadratic",
+    "QuantileLoss",
     "ResidualSearch",
     "SmoothMap",
     "SmoothPart",
@@ -58,13 +76,18 @@ __all__ = [
     "SteadyState",
     "StepRecord",
     "StopSolve",
+    "SumProblem",
+    "Term",
+    "TimeDependentState",
     "TracedEquation",
     "WorkCounts",
     "costs",
     "custom_operation",
     "declare_continuous",
     "follow",
+    "follow_meshes",
     "placements",
+    "primal_dual",
     "proximal_gradient",
     "refit",
     "solve",

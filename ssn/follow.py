@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 import math
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
@@ -234,3 +235,58 @@ def _ratio(first: float, second: float, third: float) -> float | None:
         first, second, third = math.log(first), math.log(second), math.log(third)
     move = second - first
     return (third - second) / move if move != 0.0 else None
+
+
+def follow_meshes(
+    build: Callable[..., Any],
+    sizes: Sequence[int],
+    transfer: Callable[[Any, Any], Callable[[FloatArray], FloatArray]],
+    *,
+    parameters: dict[str, Any] | None = None,
+    callback: Callable[[PathPoint], None] | None = None,
+    **options: Any,
+) -> Path:
+    """Solve on a coarse mesh and carry the unknown over to finer ones; every level is searched, none is trusted.
+
+    Parameters
+    ----------
+    build : callable
+        ``build(n=..., **parameters)`` returns the problem on the mesh of size n, as in a problem file.
+    sizes : sequence of int
+        Mesh sizes, ascending; the last is the one wanted.
+    transfer : callable
+        ``transfer(coarse_problem, fine_problem)`` returns a function that maps the unknown of one mesh to the next.
+    parameters : dict, optional
+        Passed on to `build`.
+    callback : callable, optional
+        Gets each `PathPoint`; its value is the mesh size.
+    **options
+        Passed on to `ssn.solve`.
+
+    Returns
+    -------
+    Path
+        Not converged where a level fails: the coarser solutions and the failed one are kept.
+
+    Raises
+    ------
+    InputError
+        For sizes that do not ascend.
+    """
+    levels = [count(n, f"sizes[{k}]") for k, n in enumerate(sizes)]
+    if not levels or any(b <= a for a, b in itertools.pairwise(levels)):
+        raise InputError(f"sizes must ascend, got {levels}")
+    points: list[PathPoint] = []
+    coarse = None
+    for n in levels:
+        problem = build(n=n, **(parameters or {}))
+        start = None if coarse is None else transfer(coarse, problem)(points[-1].solution.x)
+        solution = solve(problem, start, **options)
+        if not solution.converged:
+            message = f"no convergence at n = {n}: {solution.outcome.value}"
+            return Path(tuple(points), False, message, ((float(n), solution),))
+        points.append(PathPoint(float(n), solution, "own start" if coarse is None else "coarser mesh", False))
+        if callback is not None:
+            callback(points[-1])
+        coarse = problem
+    return Path(tuple(points), True, "all meshes solved")

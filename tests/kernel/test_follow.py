@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import itertools
+from pathlib import Path
 
 import numpy as np
 import pytest
@@ -89,3 +90,30 @@ def test_secant_predictor_saves_steps():
 def test_refused(arguments, message):
     with pytest.raises(ssn.InputError, match=message):
         ssn.follow(lambda v: control(), **arguments)
+
+
+def loaded(name):
+    from ssn.problem_file import load
+
+    return load(Path(__file__).parents[2] / "problems" / name)
+
+
+@pytest.mark.parametrize(
+    ("name", "sizes", "most"),
+    [("obstacle.py", [16, 32, 64, 128], 5), ("sparse_elliptic.py", [16, 32, 64, 128], 5)],
+)
+def test_nested_meshes_need_few_steps_on_the_finest(name, sizes, most):
+    file = loaded(name)
+    path = ssn.follow_meshes(file.builder, sizes, file.transfer)
+    assert path.converged and list(path.values) == sizes
+    direct = ssn.solve(file.builder(n=sizes[-1])).require()
+    np.testing.assert_allclose(path.solution.x, direct.x, atol=1e-6 * np.abs(direct.x).max())
+    assert len(path.solution.steps) <= most < len(direct.steps)
+
+
+def test_nested_meshes_say_where_they_failed():
+    file = loaded("sparse_elliptic.py")
+    path = ssn.follow_meshes(file.builder, [8, 16], file.transfer, max_steps=1)
+    assert not path.converged and "n = 8" in path.message and not path.points and path.failed
+    with pytest.raises(ssn.InputError, match="ascend"):
+        ssn.follow_meshes(file.builder, [16, 8], file.transfer)
