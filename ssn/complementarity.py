@@ -18,6 +18,8 @@ from .work import WorkCounts
 
 FloatArray = npt.NDArray[np.float64]
 
+FORMS = ("mid", "fischer-burmeister")
+
 
 class ComplementarityProblem:
     """Find x with lower <= x <= upper and F(x) normal to the box.
@@ -33,6 +35,9 @@ class ComplementarityProblem:
     magnitude : float, optional
         Typical size of x (root mean square), below which accuracy is absolute; by default the size of F(x)/F'(x)
         at the projection of zero for an affine F, 1 otherwise.
+    form : {"mid", "fischer-burmeister"}
+        The equation that is solved; both have the same roots. The smoothing path of "auto" begins with it and goes over
+        to the other one where it fails.
 
     Raises
     ------
@@ -56,7 +61,11 @@ class ComplementarityProblem:
         *,
         size: int | None = None,
         magnitude: float | None = None,
+        form: str = "mid",
     ) -> None:
+        if form not in FORMS:
+            raise InputError(f"form must be one of {', '.join(map(repr, FORMS))}, got {form!r}")
+        self.form = form
         traced = callable(F) and not hasattr(F, "value")
         if not traced and not (hasattr(F, "value") and hasattr(F, "derivative")):
             raise InputError(
@@ -167,7 +176,8 @@ class ComplementarityProblem:
     def accuracy(self, x: FloatArray) -> float:
         """||mid(x - upper, x - lower, F/diag F')|| relative to ||x||, evaluated afresh."""
         step = self.row_step(x)
-        residual = x - np.clip(x - step * self.value(x), self.lower, self.upper)
+        force = step * self.value(x)  # compared as it is: in x - clip(x - F, ...) it would drown in a large x
+        residual = np.maximum(np.minimum(force, x - self.lower), x - self.upper)
         return relative(
             float(np.linalg.norm(residual)), max(float(np.linalg.norm(x)), self.magnitude(x, step))
         )

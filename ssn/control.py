@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import copy
-from typing import Any
+from typing import Any, Self
 
 import numpy as np
 import numpy.typing as npt
@@ -66,12 +66,12 @@ class ControlProblem:
     ``Solution.state`` is y, ``Solution.adjoint`` is p with E' p = C' Wy (z - C y), so that without g
     alpha Wu u = B' p.
 
-    State bounds are solved for by a path in the penalty gamma/2 (||max(0, y - upper)||^2_M + ||max(0, lower - y)||^2_M),
-    M the lumped state mass or ones. ``Solution.multipliers["state"]`` is the density l = gamma max(0, y - upper) -
-    gamma max(0, lower - y) with respect to M: positive where the upper bound acts, negative where the lower one does;
-    M l are nodal forces, and E' p = C' Wy (z - C y) - M l. `penalised` gives the problem for one gamma, whose objective
-    is the penalised one; a problem with hard bounds has an objective (inf where they are violated by more than
-    `state_tolerance`) and no gradient.
+    State bounds are solved for by a path in the penalty gamma/2 (||max(0, y - upper)||^2_M + ||max(0, lower -
+    y)||^2_M), M the lumped state mass or ones. ``Solution.multipliers["state"]`` is the density l = gamma max(0, y
+    - upper) - gamma max(0, lower - y) with respect to M: positive where the upper bound acts, negative where the
+    lower one does; M l are nodal forces, and E' p = C' Wy (z - C y) - M l. `penalised` gives the problem for one
+    gamma, whose objective is the penalised one; a problem with hard bounds has an objective (inf where they are
+    violated by more than `state_tolerance`) and no gradient.
     """
 
     def __init__(
@@ -177,6 +177,20 @@ class ControlProblem:
         other = copy.copy(self)
         other.state_penalty = scalar(gamma, "gamma", positive=True)
         return other
+
+    def with_cost(self, cost: Cost) -> Self:
+        """Return the same problem with another cost; operators, factors and work counters are shared."""
+        if not isinstance(cost, Cost):
+            raise InputError(f"cost must have the members of ssn.Cost, got {type(cost).__name__}")
+        cost.check_size(self.unknowns)
+        other = copy.copy(self)
+        other.cost = cost
+        return other
+
+    @property
+    def affine(self) -> bool:
+        """Whether the gradient of the smooth part is an affine map: not with penalised state bounds."""
+        return not self.state_bounded
 
     @property
     def convex(self) -> bool:
@@ -336,4 +350,6 @@ def _mass(value: Any, name: str, size: int) -> Any:
     if sp.issparse(value):
         return as_square(value, name, size)
     array = np.asarray(value)
-    return as_square(array, name, size) if array.ndim == 2 else weight_array(value, name, size)
+    if array.ndim == 2:
+        return sp.csr_array(as_square(array, name, size))
+    return weight_array(value, name, size)

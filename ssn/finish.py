@@ -7,9 +7,11 @@ from typing import Any
 
 import numpy as np
 
+from .augmented_lagrangian import MultiplierResult
 from .complementarity import ComplementarityProblem
 from .composite import CompositeProblem
 from .control import ControlProblem
+from .equations.complementarity import mid_residual
 from .equations.dual import DualEquation
 from .equations.full_space import FullSpaceEquation
 from .inner import relative
@@ -24,6 +26,8 @@ from .status import Outcome
 ADJOINT_ERROR = 1e-7
 # error left by the linear solves, relative to the control, from which on a solution counts as inaccurate
 SOLVE_ERROR = 1e-7
+# residual of one component, relative to its size, from which on a point is no solution whatever the norm says
+COMPONENT_ERROR = 1e-4
 
 
 def finish(plan: Plan, result: LoopResult, limits: Limits, before: Any) -> Solution:
@@ -226,6 +230,36 @@ def _composite_doubt(
     return Outcome.SADDLE_POINT, f"negative curvature {values[0]:.1e} among the free components"
 
 
+def finish_sum(plan: Plan, result: MultiplierResult, limits: Limits, before: Any) -> Solution:
+    """Collect the end of a method of multipliers; both relative errors are computed afresh."""
+    problem, loop = plan.problem, result.loop
+    stationarity, terms = problem.accuracy_of(result.u, result.multipliers)
+    accuracy = max(stationarity, terms)
+    outcome, message = loop.outcome, loop.message
+    if outcome is Outcome.CONVERGED and not accuracy <= limits.tolerance:
+        outcome, message = Outcome.INACCURATE, f"accuracy {accuracy:.1e} when computed afresh"
+    work = problem.work.since(before) if before is not None else problem.work.copy()
+    prices = {f"term {k}": problem.part_of(result.multipliers, k) for k in range(len(problem.costs))}
+    return Solution(
+        x=result.u,
+        converged=outcome is Outcome.CONVERGED,
+        outcome=outcome,
+        message=message,
+        residual_norm=loop.best.norm,
+        accuracy=accuracy,
+        tolerance=limits.tolerance,
+        steps=tuple(loop.steps),
+        start_norm=loop.start_norm,
+        pieces=loop.last.pieces,
+        multipliers=prices,
+        work=work,
+        objective=problem.objective(result.u, slack=10 * limits.tolerance),
+        choices=plan.choices,
+        problem=problem,
+        iterate=result.u,
+    )
+
+
 def _finish_complementarity(plan: Plan, result: LoopResult) -> tuple[FloatArray, float, dict[str, Any]]:
     problem, best = plan.problem, result.best
     if best.data is None:
@@ -233,17 +267,32 @@ def _finish_complementarity(plan: Plan, result: LoopResult) -> tuple[FloatArray,
     x = np.clip(best.x, problem.lower, problem.upper)
     force = problem.value(x)
     step = problem.row_step(x)  # at the returned point: F' may have changed since the start
-    residual = x - np.clip(x - step * force, problem.lower, problem.upper)
+    residual = mid_residual(x, step * force, problem.lower, problem.upper)
     accuracy = relative(
-        float(np.linalg.norm(residual)), max(float(np.linalg.norm(x)), plan.equation.magnitude)
+        float(np.linalg.norm(residual)), plan.equation.size_of(x)
     )
     v = x - step * force
     pieces = problem.cost.pieces(v, 1.0)
     on_bound = pieces["control"] != 1
     objective = problem.potential(x) if problem.symmetric else float("nan")
     return x, accuracy, {
+        "doubt": _complementarity_doubt(x, residual, plan.equation.magnitude),
         "pieces": pieces,
         "margins": problem.cost.margins(v, 1.0),
         "multipliers": {"contact": np.where(on_bound, force, 0.0)},
         "objective": objective,
     }  # fmt: skip
+
+
+def _complementarity_doubt(
+    x: FloatArray, residual: FloatArray, magnitude: float
+) -> tuple[Outcome, str] | None:
+    """Whether a component is far off while a huge one makes the relative accuracy look small."""
+    size = np.maximum(np.abs(x), magnitude / np.sqrt(x.size))
+    off = np.abs(residual) > COMPONENT_ERROR * size
+    if not off.any():
+        return None
+    worst = int(np.argmax(np.where(off, np.abs(residual), 0.0)))
+    return Outcome.INACCURATE, (
+        f"component {worst} is off by {abs(residual[worst]):.1e}; it looks small beside |x| = {np.linalg.norm(x):.1e}"
+    )

@@ -3,34 +3,41 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
+import scipy.sparse as sp
 from scipy.sparse.linalg import LinearOperator
 
+from .augmented_lagrangian import MultiplierPath
 from .complementarity import ComplementarityProblem
 from .composite import CompositeProblem, LeastSquaresMap
 from .control import ControlProblem
-from .equations.complementarity import MidEquation
+from .equations.augmented import AugmentedEquation
+from .equations.complementarity import FischerBurmeisterEquation, MidEquation, inside_bounds
 from .equations.dual import DualEquation
-from .equations.full_space import FullSpaceEquation
+from .equations.full_space import FullSpaceEquation, has_dual
 from .equations.general import GeneralEquation
 from .equations.natural import NaturalEquation
 from .errors import InputError
 from .globalization import CATALOGUE, DualSearch, EnvelopeSearch, ResidualSearch
 from .linear import CATALOGUE as LINEAR
-from .linear import FullSpaceSolver, GeneralSolver, ReducedSolver, SubspaceSolver
+from .linear import AugmentedSolver, FullSpaceSolver, GeneralSolver, ReducedSolver, SubspaceSolver
 from .moreau_yosida import PenaltyPath, first_penalty
 from .protocols import FloatArray, Globalization, LinearSolver
 from .proximal_point import ProximalPointPath
 from .smooth import LeastSquares
 from .smoothing_path import SmoothingPath
+from .sum_problem import SumProblem
 from .traced import TracedEquation
 from .validate import float_array
 
 # full steps tried first on a general equation: piecewise smooth ones settle within them or cycle
 PLAIN_STEPS = 12
+
+# steps of a residual search at a point of the penalty path before a dual search takes over
+QUICK = 6
 
 LINEAR_CHOICES = ("auto", *LINEAR)
 
@@ -50,6 +57,7 @@ class Plan:
     smoothing: SmoothingPath | None = None
     penalty: PenaltyPath | None = None
     plain_steps: int = 0
+    multipliers: MultiplierPath | None = None
     unpack: Callable[[FloatArray], Any] | None = None
 
 
@@ -66,6 +74,8 @@ def prepare(
         plan = _prepare_control(problem, start)
     elif isinstance(problem, CompositeProblem):
         plan = _prepare_composite(problem, start, globalization)
+    elif isinstance(problem, SumProblem):
+        plan = _prepare_sum(problem, start)
     elif isinstance(problem, ComplementarityProblem):
         plan = _prepare_complementarity(problem, start)
     elif hasattr(problem, "residual") and hasattr(problem, "linearize"):
@@ -84,6 +94,8 @@ def prepare(
         )
     if linear not in ("auto", plan.solver.name):
         raise InputError(f"linear={linear!r} does not fit this problem; it is solved by {plan.solver.name!r}")
+    if plan.multipliers is not None and globalization not in ("auto", "dual"):
+        raise InputError(f"globalization={globalization!r} does not fit several terms; use 'auto'")
     if isinstance(globalization, str) and globalization == "smoothing":
         if not getattr(plan.equation, "can_be_smoothed", hasattr(plan.equation, "smoothed")):
             raise InputError(
@@ -94,6 +106,8 @@ def prepare(
         plan.choices["globalization"] = "smoothing: asked for"
     elif globalization != "auto":
         plan.smoothing, plan.plain_steps = None, 0
+        if plan.penalty is not None:
+            plan.penalty = replace(plan.penalty, quick_steps=0)
         plan.globalization = _forced(globalization, plan.equation)
         plan.choices["globalization"] = f"{plan.globalization.name}: asked for"
     return plan
@@ -103,8 +117,14 @@ def _forced(choice: str | Globalization, equation: Any) -> Globalization:
     made: Any = CATALOGUE[choice]() if isinstance(choice, str) else choice
     if not hasattr(made, "advance"):
         raise InputError(f"globalization must have an advance method, got {type(made).__name__}")
-    if isinstance(made, DualSearch) and not isinstance(equation, DualEquation):
-        raise InputError("globalization='dual' needs a control problem or least squares with a convex cost")
+    dual = isinstance(equation, DualEquation) or (
+        isinstance(equation, FullSpaceEquation) and has_dual(equation.problem)
+    )
+    if isinstance(made, DualSearch) and not dual:
+        raise InputError(
+            "globalization='dual' needs a control problem or least squares with a convex cost; with state bounds, "
+            "the whole state observed and a lumped mass"
+        )
     if isinstance(made, EnvelopeSearch) and getattr(equation, "potential", None) is None:
         raise InputError(
             "globalization='envelope' needs an objective: a composite problem or symmetric complementarity"
@@ -143,24 +163,28 @@ def _prepare_state_bounds(problem: ControlProblem, control: FloatArray | None) -
         raise InputError(
             f"state bounds need the explicit matrix of the state equation, which {type(problem.state).__name__} hides"
         )
-    for name, matrix in (("control_operator", problem.control_operator), ("observation", problem.observation)):
+    for name, matrix in (
+        ("control_operator", problem.control_operator),
+        ("observation", problem.observation),
+    ):
         if isinstance(matrix, LinearOperator):
             raise InputError(f"state bounds need {name} as a matrix, got a LinearOperator")
     if problem.cost.prox_derivative(np.zeros(problem.unknowns), 1.0 / problem.alpha).diagonal is None:
         raise InputError(f"state bounds need a separable cost; {type(problem.cost).__name__} is not")
-    gamma = problem.state_penalty if problem.state_penalty is not None else np.inf
-    equation = FullSpaceEquation(problem, min(first_penalty(problem), gamma))
+    gamma = problem.state_penalty if problem.state_penalty is not None else first_penalty(problem)
+    equation = FullSpaceEquation(problem, gamma)
     choices = {
         "equation": "state and adjoint, control eliminated, state bounds penalised",
-        "globalization": "residual search at each point of the path, which goes back where it fails",
+        "globalization": "residual search, and dual search behind it: the dual function of each point is convex"
+        if has_dual(problem)
+        else "residual search at each point of the path, which goes back where it fails",
         "linear": "full space: one sparse factorisation a step, pattern kept",
-        "path": "Moreau-Yosida: the penalty rises by a model of the value function",
+        "path": "Moreau-Yosida: the penalty rises from 0 (dual search) by a model of the value function",
     }
     search = ResidualSearch().fresh()
+    path = PenaltyPath(control, quick_steps=QUICK if has_dual(problem) else 0)
     x = equation.start(control)
-    return Plan(
-        problem, equation, FullSpaceSolver(equation), search, x, choices, penalty=PenaltyPath()
-    )
+    return Plan(problem, equation, FullSpaceSolver(equation), search, x, choices, penalty=path)
 
 
 def _prepare_composite(problem: CompositeProblem, start: Any, globalization: Any) -> Plan:
@@ -199,18 +223,57 @@ def _natural_equation(problem: CompositeProblem) -> NaturalEquation:
     )
 
 
+# distances inside the bounds tried where F or F' is not defined at the start
+START_DISTANCES = (0.0, 1e-3, 1e-2, 1e-1, 1.0)
+
+COMPLEMENTARITY_EQUATIONS = {
+    "mid": (MidEquation, "mid(x - upper, x - lower, F / |diagonal of F'|)"),
+    "fischer-burmeister": (
+        FischerBurmeisterEquation,
+        "Fischer-Burmeister function of x - lower, upper - x and F / |diagonal of F'|",
+    ),
+}
+
+
 def _prepare_complementarity(problem: ComplementarityProblem, start: Any) -> Plan:
     given = _start_array(start, problem.unknowns)
-    x = problem.start() if given is None else given
+    x, moved = _where_defined(problem, problem.start() if given is None else given)
     step = problem.row_step(x)
-    equation = MidEquation(problem, step, problem.magnitude(x, step))
+    kind, name = COMPLEMENTARITY_EQUATIONS[problem.form]
+    equation = kind(problem, step, problem.magnitude(x, step))
+    equation.start_at(x)
     choices = {
-        "equation": "mid(x - upper, x - lower, F / |diagonal of F'|)",
+        "equation": name,
         "globalization": "smoothing path, which tries plain steps first and at every point, then residual search: "
-        "plain steps may cycle, or take one step an unknown or a layer of the contact set",
+        "plain steps may cycle, or take one step an unknown or a layer of the contact set; where the path fails, plain "
+        "steps, the path in the other form, and paths from inside the bounds",
     }
+    if moved:
+        choices["start"] = moved
     search = ResidualSearch().fresh()
     return Plan(problem, equation, ReducedSolver(equation), search, x, choices, smoothing=SmoothingPath())
+
+
+def _where_defined(problem: ComplementarityProblem, x: FloatArray) -> tuple[FloatArray, str]:
+    """Return the start, moved to or inside the bounds where F or its derivative is not defined, and what was done."""
+    if problem.affine or _defined(problem, x):
+        return x, ""
+    for distance in START_DISTANCES:
+        inside = inside_bounds(x, problem.lower, problem.upper, distance)
+        if _defined(problem, inside):
+            where = f"{distance:g} inside the bounds" if distance else "the bounds"
+            return inside, f"moved to {where}: F or its derivative is not defined at the start"
+    return x, ""
+
+
+def _defined(problem: ComplementarityProblem, x: FloatArray) -> bool:
+    with np.errstate(all="ignore"):
+        if not np.isfinite(problem.value(x)).all():
+            return False
+        derivative = problem.derivative(x)
+    if isinstance(derivative, LinearOperator):
+        return True
+    return bool(np.isfinite(derivative.data if sp.issparse(derivative) else np.asarray(derivative)).all())
 
 
 def _prepare_equation(problem: Any, start: Any) -> Plan:

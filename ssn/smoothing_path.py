@@ -20,14 +20,21 @@ from typing import Any
 
 from .globalization import FullStep, ResidualSearch
 from .newton import Limits, LoopResult, run
-from .protocols import Evaluation, FloatArray, Globalization
+from .protocols import FloatArray, Globalization
 from .records import StepRecord
 from .status import Outcome
 
 ENDS = (Outcome.CONVERGED, Outcome.STOPPED, Outcome.INTERRUPTED)
 # ways to go on where the path from the start fails: steps at most
+WAY_STEPS = 40
 PLAIN_STEPS = 15
 WAY_STEPS = 40
+# share of all steps that the ways may use: the rest is for the search from the best point, which tells why it fails
+WAYS_SHARE = 0.85
+import os
+TOL=float(os.environ.get('TOL','0.5'))
+# lengths below 2^-HALVINGS are not tried at a point of a nonlinear equation: a regularised step does better
+HALVINGS = 6
 
 
 @dataclass(frozen=True)
@@ -49,7 +56,7 @@ class SmoothingPath:
         of x.
     """
 
-    factor: float = 0.1
+    factor: float = float(os.environ.get("FAC","0.1"))
     point_steps: int = 12
     contraction: float = 0.3
     least: float = 1e-12
@@ -88,6 +95,7 @@ class _Follower:
         self.callback, self.first_index = callback, first_index
         at = equation.evaluate(start)
         self.start = at.x
+        self.most = limits.max_steps
         self.result = LoopResult(at, at, Outcome.STALLED, "", start_norm=at.norm, start_accuracy=at.accuracy)
         self.ended = not at.finite
         if self.ended:
@@ -97,15 +105,23 @@ class _Follower:
     def all_ways(self) -> LoopResult:
         """The path from the start, then the other ways while steps are left."""
         equation, result = self.equation, self.result
-        self._follow(equation, self.start, equation.smoothing_scale(result.best), self.limits.max_steps, "")
-        if self.ended or not hasattr(equation, "other_form"):
+        first = equation.smoothing_scale(result.best)
+        if not hasattr(equation, "other_form"):
+            self._follow(equation, self.start, first, self.limits.max_steps, "")
             return result
+        hard_points = 2 if equation.piecewise_affine else 1
+        self._follow(equation, self.start, first, self.limits.max_steps, "", hard_points)
+        if self.ended:
+            return result
+        self.most = max(1, int(WAYS_SHARE * self.limits.max_steps))
         way = "plain steps from the start"
-        at = self._plain(equation, self.start, PLAIN_STEPS, way)
+        self._plain(equation, self.start, PLAIN_STEPS, way)
         if self.ended:
             return result
         other = equation.other_form()
-        self._follow(other, self.start, other.smoothing_scale(at), WAY_STEPS, f"{other.form}, ")
+        other.rescale(self.start)
+        first = other.smoothing_scale(other.evaluate(self.start))
+        self._follow(other, self.start, first, WAY_STEPS, f"{other.form}, ")
         for size in self.path.interior:
             if self.ended:
                 break
@@ -115,10 +131,16 @@ class _Follower:
         return result
 
     def _left(self) -> int:
-        return self.limits.max_steps - len(self.result.steps)
+        return max(0, self.most - len(self.result.steps))
 
     def _stage(
-        self, equation: Any, solver: Any, globalization: Globalization, at: FloatArray, limits: Limits, name: str
+        self,
+        equation: Any,
+        solver: Any,
+        globalization: Globalization,
+        at: FloatArray,
+        limits: Limits,
+        name: str,
     ) -> LoopResult:
         part = run(
             equation, solver, globalization, at, replace(limits, max_steps=max(0, min(limits.max_steps, self._left()))),
@@ -127,31 +149,43 @@ class _Follower:
         self.result.steps.extend(part.steps)
         return part
 
-    def _plain(self, equation: Any, x: FloatArray, steps: int, name: str) -> Evaluation:
-        """Plain steps at eps = 0; ends the solve where they converge."""
+    def _plain(self, equation: Any, x: FloatArray, steps: int, name: str) -> None:
+        """Plain steps at eps = 0 while they stay within a bound; they end the solve where they converge."""
+        _rescaled(equation, x)
         solver = self.make_solver(equation)
-        part = self._stage(equation, solver, FullStep(), x, replace(self.limits, max_steps=steps), name)
-        self._keep(equation, part)
-        return part.best
+        last_step = len(self.result.steps) + steps
+        while not self.ended:
+            left = last_step - len(self.result.steps)
+            part = self._stage(equation, solver, FullStep(), x, replace(self.limits, max_steps=left), name)
+            unconfirmed = self._keep(equation, part)
+            if not unconfirmed or not part.steps:
+                return
+            x = part.last.x
 
-    def _keep(self, equation: Any, part: LoopResult) -> None:
-        """Remember the best point; end where the part settled the solve or no steps are left."""
+    def _keep(self, equation: Any, part: LoopResult) -> bool:
+        """Remember the best point; end where the part settled the solve or no steps are left.
+
+        True where the part converged, but not with F in the unit of x at its last point.
+        """
         result = self.result
-        if part.outcome is Outcome.CONVERGED and _rescaled(equation, part.best.x):
-            at = equation.evaluate(part.best.x)
-            part.best = part.last = at
-            if at.accuracy > self.limits.tolerance:
-                part.outcome = Outcome.STEP_LIMIT
+        unconfirmed = False
+        if part.outcome is Outcome.CONVERGED and hasattr(equation, "confirmed"):
+            part.best = part.last = equation.confirmed(part.best)
+            if not part.best.accuracy <= self.limits.tolerance:
+                part.outcome, unconfirmed = Outcome.STEP_LIMIT, part.best.finite
         if part.best.accuracy < result.best.accuracy or part.outcome is Outcome.CONVERGED:
             result.best = part.best
         if part.outcome in ENDS:
             result.outcome, result.message, result.last = part.outcome, part.message, part.last
             self.ended = True
         elif self._left() <= 0:
-            result.outcome, result.message = Outcome.STEP_LIMIT, f"{self.limits.max_steps} steps taken"
+            result.outcome, result.message = Outcome.STEP_LIMIT, f"{len(result.steps)} steps taken"
             self.ended = True
+        return unconfirmed
 
-    def _follow(self, equation: Any, x: FloatArray, eps: float, steps: int, way: str) -> None:
+    def _follow(
+        self, equation: Any, x: FloatArray, eps: float, steps: int, way: str, hard_points: int = 2
+    ) -> None:
         """One path from x with the first eps."""
         path, result = self.path, self.result
         last_step = min(self.limits.max_steps, len(result.steps) + steps)
@@ -177,8 +211,9 @@ class _Follower:
             if smoothed_solver is None:
                 smoothed_solver = self.make_solver(smoothed)
             smoothed_solver.equation = smoothed  # the pattern stays, and with it the symbolic factorisation
-            search = ResidualSearch(memory=1).fresh()
-            point = Limits(tolerance=0.5, max_steps=min(path.point_steps, last_step - len(result.steps)))
+            affine = bool(getattr(equation, "piecewise_affine", False))
+            search = ResidualSearch(memory=int(os.environ.get("MEM","1")), max_halvings=10 if affine else HALVINGS).fresh()
+            point = Limits(tolerance=TOL, max_steps=min(path.point_steps, last_step - len(result.steps)))
             part = self._stage(smoothed, smoothed_solver, search, x, point, f"{way}eps = {eps:.1e}")
             if part.outcome in (Outcome.STOPPED, Outcome.INTERRUPTED):
                 result.outcome, result.message = part.outcome, part.message
@@ -191,12 +226,12 @@ class _Follower:
                 return
             if self._left() <= 0:
                 result.outcome = Outcome.STEP_LIMIT
-                result.message = f"{self.limits.max_steps} steps taken"
+                result.message = f"{len(result.steps)} steps taken"
                 self.ended = True
                 return
             x = part.last.x
             hard = 0 if part.outcome is Outcome.CONVERGED else hard + 1
-            if hard >= 2 or eps < path.least * first or len(result.steps) >= last_step:
+            if hard >= hard_points or eps < path.least * first or len(result.steps) >= last_step:
                 return
             if hard == 0:
                 eps *= path.factor

@@ -9,13 +9,14 @@ from typing import Any
 
 import numpy as np
 
+from .augmented_lagrangian import follow_multipliers
 from .equations.dual import DualEquation
 from .equations.natural import NaturalPoint
 from .errors import InputError, SolveInterrupted
-from .finish import finish
+from .finish import finish, finish_sum
 from .globalization import EnvelopeSearch, FullStep, ResidualSearch
 from .linear import ReducedSolver, SubspaceSolver
-from .moreau_yosida import follow_penalty
+from .moreau_yosida import first_penalty, follow_penalty
 from .newton import Limits, LoopResult, run
 from .prepare import Plan, prepare
 from .protocols import FloatArray, Globalization
@@ -69,7 +70,7 @@ def solve(
         "auto": dual search where the problem has a dual equation, envelope search for other composite problems,
         residual search and smoothing path for complementarity, residual search otherwise. What was decided, and why,
         stands in ``Solution.choices``.
-    linear : {"auto", "subspace", "reduced", "general"}
+    linear : {"auto", "subspace", "reduced", "general", "full space"}
         How Newton systems are solved; only the one that fits the equation is accepted beside "auto".
     callback : callable, optional
         Gets each `StepRecord`; may raise `StopSolve`.
@@ -99,7 +100,12 @@ def solve(
     plan = prepare(problem, start, globalization=globalization, linear=linear)
     if isinstance(plan.globalization, FullStep):
         limits = Limits(limits.tolerance, limits.max_steps, exact=True)
-    if plan.path is not None:
+    if plan.multipliers is not None:
+        path = follow_multipliers(
+            plan.problem, type(plan.solver), plan.start, limits, plan.multipliers, observer
+        )
+        solution = finish_sum(plan, path, limits, before)
+    elif plan.path is not None:
         solution = _run_path(plan, limits, observer, before)
     elif plan.penalty is not None:
         solution = _run_penalty(plan, limits, observer, before)
@@ -262,10 +268,10 @@ def _run_penalty(plan: Plan, limits: Limits, callback: Callback | None, before: 
     def make_search() -> Globalization:
         return search.fresh() if isinstance(search, ResidualSearch) else search
 
-    result = follow_penalty(plan.equation, make_search, plan.start, limits, plan.penalty, callback)
+    result = follow_penalty(plan.equation, make_search, limits, plan.penalty, callback)
     plan.equation = result.equation
     plan.choices["path"] += f"; {result.points} points, the last at {result.equation.gamma:.3g}"
-    plan.problem = plan.problem.penalised(result.equation.gamma)
+    plan.problem = plan.problem.penalised(result.equation.gamma or first_penalty(plan.problem))
     return finish(plan, result.loop, replace(limits, tolerance=result.tolerance), before)
 
 

@@ -39,6 +39,7 @@ LEVELS: dict[str, float] = {
     "smooth": 1.5,
     "solution": 1.5,
     "states": 1.5,
+    "time_state": 1.5,
     "environment": 1.5,
     # statements, and the loop
     "complementarity": 2,
@@ -47,11 +48,15 @@ LEVELS: dict[str, float] = {
     "equations": 2,
     "newton": 2,
     "reference": 2,
+    "sum_problem": 2,
+    "primal_dual": 2.1,
+    "weight_path": 3.2,
     "user_equation": 2,
     # the loop over a path of equations
     "moreau_yosida": 2.25,
     "proximal_point": 2.25,
     "smoothing_path": 2.25,
+    "augmented_lagrangian": 2.25,
     # what "auto" decides, and the end of a solve
     "extragradient": 2.1,
     "prepare": 2.3,
@@ -63,7 +68,6 @@ LEVELS: dict[str, float] = {
     # many solves
     "evidence": 3,
     "follow": 3,
-    "weight_path": 3,
     "problem_file": 3.5,
     # evidence about problem files
     "gate": 3.75,

@@ -1,9 +1,73 @@
 """Nonsmooth costs, one family a file; `CATALOGUE` is the explicit list that the contract tests run over."""
 
+from .balls import EuclideanBall, L1Ball
 from .bounds import Bounds
 from .derivative import DiagonalDerivative
+from .elastic_net import ElasticNetCost
+from .group import GroupSparseCost
+from .halfspace import HalfSpace, Hyperplane
+from .huber import HuberCost
+from .losses import HingeLoss, InsensitiveLoss, QuantileLoss
+from .multibang import MultiBangCost
+from .operations import ConjugateCost, ScaledCost, SumWithQuadratic, TranslatedCost
+from .piecewise import PiecewiseQuadraticCost
+from .product import Product
+from .second_order_cone import SecondOrderCone
+from .semidefinite import PositiveSemidefiniteCone
+from .simplex import Simplex
 from .sparse import SparseCost
+from .switching import SwitchingCost
 
-CATALOGUE = (SparseCost, Bounds)
+CATALOGUE = (
+    SparseCost,
+    Bounds,
+    PiecewiseQuadraticCost,
+    ElasticNetCost,
+    HuberCost,
+    HingeLoss,
+    QuantileLoss,
+    InsensitiveLoss,
+    Simplex,
+    EuclideanBall,
+    L1Ball,
+    HalfSpace,
+    Hyperplane,
+    SecondOrderCone,
+    PositiveSemidefiniteCone,
+    Product,
+    GroupSparseCost,
+    SwitchingCost,
+    MultiBangCost,
+    SumWithQuadratic,
+    ScaledCost,
+    TranslatedCost,
+    ConjugateCost,
+)
 
-__all__ = ["CATALOGUE", "Bounds", "DiagonalDerivative", "SparseCost"]
+__all__ = [
+    "CATALOGUE",
+    "Bounds",
+    "ConjugateCost",
+    "DiagonalDerivative",
+    "ElasticNetCost",
+    "EuclideanBall",
+    "GroupSparseCost",
+    "HalfSpace",
+    "HingeLoss",
+    "HuberCost",
+    "Hyperplane",
+    "InsensitiveLoss",
+    "L1Ball",
+    "MultiBangCost",
+    "PiecewiseQuadraticCost",
+    "PositiveSemidefiniteCone",
+    "Product",
+    "QuantileLoss",
+    "ScaledCost",
+    "SecondOrderCone",
+    "Simplex",
+    "SparseCost",
+    "SumWithQuadratic",
+    "SwitchingCost",
+    "TranslatedCost",
+]

@@ -9,6 +9,7 @@ Source: A. Fischer, Optimization 24 (1992) 269-284; C. Kanzow, SIAM J. Matrix An
 
 from __future__ import annotations
 
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -28,6 +29,8 @@ FloatArray = npt.NDArray[np.float64]
 
 # the squared Fischer-Burmeister residual counts as stationary where a move by the size of x promises this fraction
 STATIONARY = 1e-4
+# x this many times larger than start and magnitude counts as run away: accuracy is relative to no more than that
+FAR = 1e8
 # how far inside the bounds the derivative is taken where it is infinite on them, relative to the size of x
 INSIDE = 1e-8
 # below this weight of its F row an unknown counts as fixed
@@ -58,6 +61,11 @@ class MidEquation(NaturalEquation):
         self.preferred_search = "residual"
         self.lower, self.upper = problem.lower, problem.upper
         self.problem = problem
+        self.far = np.inf
+
+    def start_at(self, x: FloatArray) -> None:
+        """Note the start: an accuracy relative to an x that has run away from it would say nothing."""
+        self.far = FAR * max(self.inner.norm(x), self.magnitude)
 
     def evaluate(self, x: FloatArray) -> Evaluation:
         """The residual at x, or at its projection onto the bounds where F(x) is not defined."""
@@ -69,7 +77,17 @@ class MidEquation(NaturalEquation):
             return at if not np.isfinite(x).all() or (inside == x).all() else self._evaluate_here(inside)
 
     def _evaluate_here(self, x: FloatArray) -> Evaluation:
-        return super().evaluate(x)
+        at = super().evaluate(x)
+        if self.eps > 0.0 or not at.finite:
+            return at
+        residual = mid_residual(x, at.data.step * at.data.force, self.lower, self.upper)
+        norm = self.inner.norm(residual)
+        accuracy = relative(norm, self.size_of(at.data.moved))
+        return replace(at, residual=residual, norm=norm, accuracy=accuracy)
+
+    def size_of(self, x: FloatArray) -> float:
+        """What the accuracy is relative to: ||x||, at least the magnitude, at most FAR times start and magnitude."""
+        return max(min(self.inner.norm(x), self.far), self.magnitude)
 
     def jacobian(self, x: FloatArray) -> Any:
         """F'(x), taken a little inside the bounds where it is infinite on them."""
@@ -93,13 +111,25 @@ class MidEquation(NaturalEquation):
         self._best_norm = np.inf
         return True
 
+    def confirmed(self, at: Evaluation) -> Evaluation:
+        """The evaluation at the projection onto the bounds, with F brought to the unit of x there."""
+        x = np.clip(at.x, self.lower, self.upper)
+        if not self.rescale(x) and (x == at.x).all():
+            return at
+        return self.evaluate(x)
+
     def typical(self, x: FloatArray) -> float:
         """Root mean square of x."""
         return self.inner.norm(x) / float(np.sqrt(self.weights.sum()))
 
     def other_form(self) -> MidEquation:
         """The Fischer-Burmeister equation of the same problem."""
-        return FischerBurmeisterEquation(self.problem, self.step, self.magnitude)
+        return self._in_form(FischerBurmeisterEquation)
+
+    def _in_form(self, kind: type[MidEquation]) -> MidEquation:
+        other = kind(self.problem, self.step, self.magnitude)
+        other.far = self.far
+        return other
 
     def interior(self, x: FloatArray, distance: float) -> FloatArray:
         """The nearest point at least `distance` inside the bounds, or halfway where they are closer."""
@@ -176,13 +206,19 @@ class FischerBurmeisterEquation(MidEquation):
         if self.eps > 0.0:
             accuracy, pieces = norm / (self.eps * float(np.sqrt(self.weights.sum()))), Pieces()
         else:
-            natural, size = self.inner.norm(x - moved), max(self.inner.norm(moved), self.magnitude)
-            accuracy, pieces = relative(natural, size), self.cost.pieces(v, 1.0)
+            natural = mid_residual(x, self.step * force, self.lower, self.upper)
+            accuracy = relative(self.inner.norm(natural), self.size_of(moved))
+            pieces = self.cost.pieces(v, 1.0)
         return Evaluation(x, value / total, norm, accuracy, pieces, data)
 
     def other_form(self) -> MidEquation:
         """The mid equation of the same problem."""
-        return MidEquation(self.problem, self.step, self.magnitude)
+        return self._in_form(MidEquation)
+
+
+def mid_residual(x: FloatArray, f: FloatArray, low: FloatArray, high: FloatArray) -> FloatArray:
+    """mid(x - high, x - low, f): x - clip(x - f, low, high), but f does not drown in a large x."""
+    return np.maximum(np.minimum(f, x - low), x - high)
 
 
 def fischer_burmeister(
@@ -211,10 +247,11 @@ def _phi(a: FloatArray, b: FloatArray, eps: float) -> tuple[FloatArray, FloatArr
     safe = np.where(root > 0, root, 1.0)
     half = np.sqrt(0.5)
     pa, pb = 1.0 - np.where(root > 0, a / safe, half), 1.0 - np.where(root > 0, b / safe, half)
-    # a + b - root without cancellation where a and b are positive
-    positive = (a > 0) & (b > 0)
-    close = 2.0 * (a * b - eps * eps) / np.where(positive, a + b + root, 1.0)
-    return np.where(positive, close, a + b - root), pa, pb
+    # a + b - root without cancellation where one of the two is positive
+    large, small = np.maximum(a, b), np.minimum(a, b)
+    below = np.where(large > 0, large + root, 1.0)
+    exact = small - (small * small + 2.0 * eps * eps) / below
+    return np.where(large > 0, exact, a + b - root), pa, pb
 
 
 class FischerBurmeister:

@@ -12,6 +12,7 @@ import numpy as np
 from ..solution import Solution
 from ..solve import solve
 from ..validate import scalar
+from . import judge
 from .agreement import checked_tolerance, decide, objective_check
 from .certificate import certificate
 from .check import Check, describe, plain
@@ -174,6 +175,7 @@ def assess(
         seconds = time.perf_counter() - began
     else:
         seconds = float("nan")
+    problem = judge.judged(problem, solution)
     own = ours(problem, solution, seconds)
     others, checks = _others(problem, solution, own_methods, budget, agreement_tolerance, tell)
     verdict, note = decide(problem, solution, others, agreement_tolerance)

@@ -15,6 +15,8 @@ LEAST_FALL = 0.05
 RESOLUTION = 0.03
 # The figure that a fall has to reach.
 REACH = 0.1
+# Rounding below this counts as zero.
+TINY = 1e-6
 # Largest figure that counts as near enough to the limit for the slope.
 ASYMPTOTIC = 0.5
 
@@ -26,7 +28,8 @@ class Decay:
     Attributes
     ----------
     kind : {"exact", "falls", "levels", "undecided"}
-        "exact": at rounding level below some size, more abruptly than any power law seen above it explains;
+        "exact": at rounding level below some size, more abruptly than any power law seen above it explains, or with
+        too little above it to show one;
         "falls": over at least three sizes above rounding, down to 0.1 and still falling there; "levels": it stays.
     slope : float or None
         Of log figure against log size, over the last sizes above rounding.
@@ -68,7 +71,7 @@ def decay(sizes: Sequence[float], figures: Sequence[float], rounding: Sequence[f
         split -= 1
     above, below = seen[:split], seen[split:]
     last = above[-1][1] if above else 0.0
-    if below and _abrupt(above, below[0]):
+    if below and (_abrupt(above, below[0]) or (len(above) < 3 and below[0][2] <= TINY)):
         return Decay("exact", None, last, below[0][0], f"at rounding level from size {below[0][0]:.0e} on")
     if len(above) > 1 and not np.isfinite([row[1] for row in above[-2:]]).all():
         return Decay("levels", None, float("inf"), None, "not finite at the smallest sizes")

@@ -57,7 +57,8 @@ def check_derivative(problem: Any, at: Any = None, *, seed: int = 0) -> tuple[Ch
     if hasattr(problem, "cost"):
         checks.append(_proximal(local, rng))
     if isinstance(problem, ControlProblem | CompositeProblem | ComplementarityProblem):
-        u = local.x if not local.dual else np.zeros(problem.unknowns) if point is None else point
+        own = not isinstance(problem, ControlProblem)  # whose iterate is the user's unknown
+        u = local.x if own else np.zeros(problem.unknowns) if point is None else point
         checks += _smooth(problem, u, _size(local, u), rng)
     if isinstance(problem, ControlProblem):
         checks += adjoints.control(problem, rng)

@@ -10,6 +10,7 @@ from ..complementarity import ComplementarityProblem
 from ..inner import relative
 from ..prepare import prepare
 from ..protocols import FloatArray
+from ..solution import Solution
 
 # a point this near the domain of the cost, relative to its norm, is judged at its projection
 INSIDE = 1e-7
@@ -18,6 +19,11 @@ INSIDE = 1e-7
 def is_statement(problem: Any) -> bool:
     """Whether the problem is one of ours with an accuracy of its own, not a user's equation."""
     return hasattr(problem, "accuracy") and hasattr(problem, "controls")
+
+
+def judged(problem: Any, solution: Solution) -> Any:
+    """What the solution solves: for hard state bounds the problem with the last penalty of the path."""
+    return solution.problem if getattr(problem, "state_bounded", False) else problem
 
 
 def accuracy(problem: Any, x: FloatArray) -> float:

@@ -9,6 +9,7 @@ import numpy as np
 from ..composite import CompositeProblem
 from ..control import ControlProblem
 from ..equations.dual import DualEquation
+from ..equations.full_space import FullSpaceEquation
 from ..equations.natural import NaturalEquation
 from ..linear.boundary import product
 from ..linear.subspace import SubspaceSolver
@@ -69,6 +70,12 @@ class Local:
             self.equation, self.solver, self.x = plan.equation, plan.solver, plan.start
             if isinstance(self.equation, DualEquation):
                 self.note = "dual equation, in the observation norm of the dual variable"
+                if iterate is not None and iterate.shape == self.x.shape:
+                    self.x = iterate
+            elif isinstance(self.equation, FullSpaceEquation):
+                self.note = (
+                    f"state and adjoint at penalty {self.equation.gamma:.3g}, in the norm of their masses"
+                )
                 if iterate is not None and iterate.shape == self.x.shape:
                     self.x = iterate
             elif isinstance(self.equation, NaturalEquation):

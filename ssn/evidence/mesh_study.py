@@ -145,7 +145,7 @@ def mesh_study(
                 unknowns=int(solution.x.size),
                 steps=len(solution.steps),
                 state_solves=solution.work.state_solves,
-                accuracy=judge.accuracy(problem, solution.x),
+                accuracy=judge.accuracy(judge.judged(problem, solution), solution.x),
                 outcome=solution.outcome.value,
                 converged=solution.converged,
                 objective=solution.objective,

@@ -12,6 +12,8 @@ from .local import EPS, Local
 
 # An error of the derivative below this, relative to the image, is not looked for.
 NEGLIGIBLE = 1e-7
+# growth from one size to the next smaller one (a tenth) that tells an absolute error from a relative one
+GROWTH = 3.0
 SIZES = tuple(10.0**-k for k in range(1, 8))
 
 
@@ -86,7 +88,7 @@ def kink_along(local: Local, x: FloatArray, h: FloatArray) -> FloatArray | None:
     if base is None or not len(base):
         return None
     low, high = 0.0, None
-    for t in (1e-6, 1e-4, 1e-3, 1e-2, 1e-1, 1.0, 1e1, 1e2):
+    for t in (1e-6, 1e-4, 1e-3, 1e-2, 1e-1, 1.0, 1e1):
         there = pieces(local, x + t * local.reference * h)
         if there is None:
             return None
@@ -143,8 +145,20 @@ def _along(
             continue
         figures.append(local.residual_norm(change - image) / scale if scale > 0.0 else 0.0)
         rounding.append(max(30.0 * noise / scale, NEGLIGIBLE) if scale > 0.0 else NEGLIGIBLE)
-    judged = decay(sizes, figures, rounding)
+    kept = _without_noise(figures)
+    judged = decay(sizes[:kept], figures[:kept], rounding[:kept])
     return judged.kind in ("exact", "falls"), judged.last if judged.kind != "exact" else 0.0, judged.reason
+
+
+def _without_noise(figures: list[float]) -> int:
+    """How many sizes to look at: not the last ones, if the figure grows there like an absolute error divided by the size.
+
+    Such an error is rounding, or a kink much nearer than the sizes; that of a wrong derivative stays level.
+    """
+    kept = len(figures)
+    while kept > 3 and figures[kept - 1] > GROWTH * figures[kept - 2]:
+        kept -= 1
+    return kept
 
 
 def _noise(local: Local, base: Evaluation, rng: np.random.Generator) -> float:

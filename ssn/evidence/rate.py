@@ -23,6 +23,8 @@ from .check import plain
 from .decay import decay
 from .local import EPS, Local
 
+# contractions below this are not told from rounding: direct solves leave the condition number times 1e-16
+NEGLIGIBLE = 1e-8
 DELTAS = (1e-1, 1e-2, 1e-3, 1e-4, 1e-5, 1e-6)
 # x* is known up to the scatter of Newton steps from points this near
 NEAR = 1e-9
@@ -181,20 +183,35 @@ def _polish(local: Local, max_steps: int = 80) -> Evaluation:
 
 
 def _floor(local: Local, best: Evaluation, rng: np.random.Generator) -> float:
-    """How well x* is known: the Newton step left at it, and the scatter of two steps from nearby points."""
-    known = scatter = 0.0
+    """How well x* is known: the Newton step left at it, and how Newton steps scatter around it.
+
+    The scatter is that of single steps from points one rounding error away, which lets the condition number show
+    even where the residual at x* happens to vanish, and of two steps from points 1e-9 away.
+    """
+    reference = local.reference
+    known = 0.0
     if best.norm > 0.0:
         left = local.step(best)
-        known = float("inf") if left.vector is None else local.norm(left.vector)
+        known = NEAR * reference if left.vector is None else local.norm(left.vector)
+    scatter = 0.0
+    for _ in range(3):
+        ended = _walk(local, local.scatter(best.x, rng), 1)
+        scatter = max(scatter, local.norm(ended.x - best.x))
     for smooth in (False, True):
-        at = local.evaluate(best.x + NEAR * local.reference * local.direction(rng, smooth=smooth))
-        for _ in range(2):
-            direction = local.step(at) if at.finite and at.norm > 0.0 else None
-            if direction is None or direction.vector is None:
-                break
-            at = local.evaluate(at.x + direction.vector)
-        scatter = max(scatter, min(local.norm(at.x - best.x), NEAR * local.reference))
-    return max(known, scatter, 4.0 * EPS * local.reference)
+        ended = _walk(local, best.x + NEAR * reference * local.direction(rng, smooth=smooth), 2)
+        scatter = max(scatter, min(local.norm(ended.x - best.x), NEAR * reference))
+    return max(known, scatter, 4.0 * EPS * reference)
+
+
+def _walk(local: Local, x: FloatArray, steps: int) -> Evaluation:
+    """Full Newton steps from x, as far as they go."""
+    at = local.evaluate(x)
+    for _ in range(steps):
+        direction = local.step(at) if at.finite and at.norm > 0.0 else None
+        if direction is None or direction.vector is None:
+            break
+        at = local.evaluate(at.x + direction.vector)
+    return at
 
 
 def _directions(local: Local, rng: np.random.Generator, samples: int) -> list[FloatArray]:
@@ -210,7 +227,7 @@ def _contraction(
     local: Local, best: Evaluation, directions: list[FloatArray], size: float, floor: float
 ) -> tuple[float, float, int]:
     """Worst contraction from the perturbations of one size, what rounding would give, how many had no residual."""
-    worst, level, bad = 0.0, 10.0 * floor / size, 0
+    worst, level, bad = 0.0, max(10.0 * floor / size, NEGLIGIBLE), 0
     for h in directions:
         at = local.evaluate(best.x + size * h)
         if not at.finite:

@@ -1,5 +1,6 @@
 """Linear solvers for Newton systems, one a file; `CATALOGUE` is the explicit list."""
 
+from .augmented import AugmentedSolver
 from .full_space import FullSpaceSolver
 from .general import GeneralSolver
 from .reduced import ReducedSolver
@@ -10,6 +11,7 @@ CATALOGUE = {
     "reduced": ReducedSolver,
     "general": GeneralSolver,
     "full space": FullSpaceSolver,
+    "augmented": AugmentedSolver,
 }
 
-__all__ = ["CATALOGUE", "FullSpaceSolver", "GeneralSolver", "ReducedSolver", "SubspaceSolver"]
+__all__ = ["CATALOGUE", "AugmentedSolver", "FullSpaceSolver", "GeneralSolver", "ReducedSolver", "SubspaceSolver"]

@@ -11,6 +11,7 @@ import ssn
 from ssn.evidence import assess, compare
 from ssn.evidence.agreement import decide
 from ssn.evidence.method_result import MethodResult
+from ssn.evidence.residual_only import start_near
 
 from . import cases
 
@@ -227,11 +228,39 @@ def test_complementarity_with_two_solutions_is_confirmed_locally():
         ], dtype=float)  # fmt: skip
 
     problem = ssn.ComplementarityProblem(ssn.SmoothMap(F, derivative), size=4)
-    for start, root in (([1.0, 0.0, 2.5, 0.0], [1.0, 0.0, 3.0, 0.0]),):
+    elsewhere = 0
+    for start, root in (
+        ([1.0, 0.0, 2.5, 0.0], [1.0, 0.0, 3.0, 0.0]),
+        ([1.25, 0.0, 0.0, 0.5], [np.sqrt(6.0) / 2.0, 0.0, 0.0, 0.5]),
+    ):
         solution = ssn.solve(problem, start)
         assert solution.x == pytest.approx(root, abs=1e-8)
         assessment = assess(problem, solution=solution)
         assert assessment.agreement == "holds", assessment.agreement_note
+        if assessment.methods[1].distance > 0.1:
+            elsewhere += 1
+            assert [m.name for m in assessment.methods[1:]] == ["extragradient", "residual-only root finder"]
+    assert elsewhere == 1
+
+
+def test_a_reference_that_stops_too_early_goes_on(monkeypatch):
+    def early(problem, start, *, tolerance, budget):
+        tolerances.append(tolerance)
+        return ssn.proximal_gradient(problem, start, tolerance=min(1e3 * tolerance, 0.1), budget=budget)
+
+    tolerances = []
+    monkeypatch.setattr("ssn.evidence.references.proximal_gradient", early)
+    assessment = assess(cases.obstacle(40))
+    assert assessment.agreement == "holds", assessment.agreement_note
+    assert len(tolerances) > 1
+    assert tolerances == pytest.approx([3e-7 * 0.1**k for k in range(len(tolerances))])
+
+
+def test_a_reference_that_did_not_converge_contradicts_nothing():
+    problem = cases.obstacle()
+    wrong = moved(problem, 1e-2)
+    for converged, verdict in ((True, "fails"), (False, "undecided")):
+        assert decide(problem, wrong, [result(1e-2, converged=converged)], 1e-6)[0] == verdict
 
 
 def test_agreement_tolerance_is_never_loose():
@@ -399,3 +428,14 @@ def test_large_equations_are_confirmed_by_residuals_alone():
     )
     assessment = assess(equation)
     assert assessment.failures() == []
+
+
+def test_the_root_finder_starts_elsewhere():
+    x = np.linspace(1.0, 2.0, 5)
+    assert np.linalg.norm(start_near(x) - x) == pytest.approx(1e-2 * np.linalg.norm(x))
+    # every point of a line is a root: it finds one, but not ours
+    line = cases.Given(
+        lambda x: np.array([x[0] + x[1] - 1.0, 0.0]), lambda x: np.array([[1.0, 1.0], [0.0, 0.0]]), [0.5, 0.5]
+    )
+    solution = ssn.solve(line)
+    assert assess(line, solution=solution).agreement == "undecided"

@@ -25,6 +25,15 @@ CASES = [
     ("a late drop", [0.9, 0.5, 0.3, 0.2, 0.1, 1e-9], ROUNDING, "exact", None),
     ("a slow fall not there yet", [5.0 * s**0.15 for s in SIZES], ROUNDING, "undecided", 0.15),
     ("rounding hides all but two", [0.1, 1e-2] + [1e-3] * 4, [1e-4 / s for s in SIZES], "undecided", None),
+    ("rounding hides everything", [0.5] * 6, [1.0] * 6, "undecided", None),
+    (
+        "cubic, into rounding",
+        [max(5.0 * s * s, r) for s, r in zip(SIZES, ROUNDING, strict=True)],
+        ROUNDING,
+        "falls",
+        2.0,
+    ),
+    ("next to nothing", [3e-7] + [1e-7] * 5, [1e-7] * 6, "exact", None),
     ("nothing to measure", [np.inf] * 6, ROUNDING, "levels", None),
     ("outside the domain at first", [np.inf, np.inf, 1e-3, 1e-4, 1e-5, 1e-6], ROUNDING, "falls", 1.0),
 ]

@@ -92,6 +92,19 @@ def test_kink_crossing_directions_are_needed():
     assert "at the point" not in check.detail
 
 
+def test_a_kink_much_nearer_than_the_sizes():
+    # x = 1e-10 lies off the kink by less than the smallest size: the quotient has a hump there, the derivative is right
+    equation = cases.Given(
+        lambda x: 2.0 * x - np.maximum(0.0, x), lambda x: np.diag(2.0 - 1.0 * (x > 0.0)), np.ones(5)
+    )
+    at = np.array([1e-10, -1e-10, 1.0, -1.0, 0.0])
+    assert cases.names(check_derivative(equation, at)) == set()
+    wrong = cases.Given(
+        lambda x: 2.0 * x - np.maximum(0.0, x), lambda x: np.diag(2.0 - 1.0 * (x > -0.5)), np.ones(5)
+    )
+    assert cases.names(check_derivative(wrong, at)) == {"newton derivative"}
+
+
 def test_wrong_gradient_of_one_component():
     class OneWrong(cases.Curved):
         def gradient(self, u):
@@ -157,7 +170,7 @@ def test_operators_with_a_wrong_adjoint():
 def test_multigrid_states_pass():
     class Multigrid(ssn.SteadyState):
         def __init__(self, E):
-            super().__init__(E, solver="multigrid")
+            super().__init__(E, solver="multigrid", accuracy=1e-10)
 
     assert cases.names(check_derivative(cases.control(10, state=Multigrid))) == set()
 

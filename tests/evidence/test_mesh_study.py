@@ -1,5 +1,6 @@
 import json
 
+import numpy as np
 import pytest
 
 import ssn
@@ -16,6 +17,7 @@ from . import cases
         ([5, 6, 7], True),
         ([5, 6, 8], False),
         ([9, 7, 6], True),
+        ([5, 9, 8], False),
         ([12, 8, 9, 12], False),
         ([7, 12, 8], True),
         ([4, 7, 9, 18, 34], False),
@@ -51,18 +53,20 @@ def test_a_control_problem():
 
 
 def test_growing_steps_are_seen():
-    # plain steps of this equation take about one step an unknown
+    # min(x, M x - 1) with M of Murty's kind: Newton steps move one unknown a step
     def build(n):
-        def upper(x):
-            return x.cumsum()[::-1] * 0.0 + x
+        M = np.eye(n) + 2.0 * np.triu(np.ones((n, n)), 1)
 
-        K = cases.laplacian(n)
-        del upper
-        return ssn.ComplementarityProblem(ssn.AffineMap(K, -1.0 / n**2 * (1.0 + 0.0 * K[0])), 0.0, 0.02)
+        def derivative(x):
+            low = x <= M @ x - 1.0
+            return np.where(low[:, None], np.eye(n), M)
 
-    study = mesh_study(build, [8, 16])
-    assert study.mesh_independent in (True, False)
-    assert study.rows[0].steps >= 1
+        return cases.Given(lambda x: np.minimum(x, M @ x - 1.0), derivative, np.zeros(n))
+
+    study = mesh_study(build, [4, 8, 16])
+    assert study.rows[-1].steps > study.rows[0].steps + 2
+    assert study.mesh_independent is False
+    assert [check.name for check in study.checks() if not check.holds] == ["mesh study"]
 
 
 def test_failing_known_values_name_the_mesh():

@@ -5,6 +5,7 @@ import pytest
 
 import ssn
 from ssn.evidence import rate
+from ssn.evidence.local import Local
 
 from . import cases
 
@@ -140,6 +141,34 @@ def test_exact_below_falls_with_the_mesh():
     assert fine.exact_below < coarse.exact_below
 
 
+def test_an_ill_conditioned_equation_that_vanishes_exactly_at_its_root():
+    # steps scatter by condition times rounding around a root with residual zero: that is no linear rate
+    H = 1.0 / (1.0 + np.add.outer(np.arange(7), np.arange(7)))
+    b = H @ np.ones(7)
+    verdict = rate(
+        cases.Given(lambda x: H @ x - b, lambda x: H, np.ones(7)), deltas=(1e-1, 1e-2, 1e-3, 1e-4, 1e-5)
+    )
+    assert verdict.verdict == "exact", verdict.sentence()
+    assert verdict.floor > 1e-11
+
+
+def test_singular_systems_near_the_solution():
+    right = ssn.solve(cases.kinked())
+    verdict = rate(cases.kinked(change=lambda d: lambda x: np.zeros((20, 20))), right)
+    assert verdict.verdict == "none"
+    assert verdict.contractions[-1][1] == np.inf
+    assert verdict.as_dict()["contractions"][-1] == [1e-6, None]
+
+
+def test_the_linear_solve_is_accounted_for():
+    problem = cases.control()
+    local = Local(problem, ssn.solve(problem).x)
+    at = local.evaluate(local.x + 0.1 * local.direction(np.random.default_rng(0), smooth=False))
+    direction = replace(local.step(at), relative_residual=1e-3)
+    assert local.solve_error(at, direction) == pytest.approx(1e-3 * at.norm)
+    assert local.solve_error(at, replace(direction, relative_residual=0.0)) == 0.0
+
+
 def test_no_solution_no_rate():
     equation = cases.kinked()
     failed = replace(ssn.solve(equation), converged=False, outcome=ssn.Outcome.STALLED)
@@ -174,8 +203,6 @@ def test_bad_deltas_are_refused(deltas):
 
 
 def test_the_dual_variable_is_measured_with_its_adjoint_kept_consistent():
-    from ssn.evidence.local import Local
-
     problem = cases.control()
     local = Local(problem, ssn.solve(problem).x)
     h = local.direction(np.random.default_rng(0), smooth=False)

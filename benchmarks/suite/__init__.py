@@ -1,0 +1,1 @@
+"""The asv suite of ssn; `benchmarks/run.py` runs it."""
