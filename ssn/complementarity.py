@@ -158,7 +158,7 @@ class ComplementarityProblem:
             return np.ones(self.unknowns)
         diagonal = np.abs(derivative.diagonal())
         rows = np.asarray(abs(derivative).sum(axis=1)).ravel()
-        diagonal = np.where(diagonal > 1e-3 * rows, diagonal, rows)
+        diagonal = np.where(diagonal > 1e-8 * rows, diagonal, rows)
         usable = np.isfinite(diagonal) & (diagonal > 0)
         if not usable.any():
             return np.ones(self.unknowns)

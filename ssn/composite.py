@@ -60,6 +60,8 @@ class CompositeProblem:
         cost.check_size(self.unknowns)
         self.part, self.cost = smooth, cost
         self.weights = weight_array(weights, "weights", self.unknowns)
+        if hasattr(cost, "check_weights"):
+            cost.check_weights(self.weights)
         self.controls = InnerProduct(self.weights)
         self.work = WorkCounts()
         self.affine = bool(getattr(smooth, "affine_gradient", False))

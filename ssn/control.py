@@ -129,6 +129,8 @@ class ControlProblem:
         if not isinstance(cost, Cost):
             raise InputError(f"cost must have the members of ssn.Cost, got {type(cost).__name__}")
         cost.check_size(n)
+        if hasattr(cost, "check_weights"):
+            cost.check_weights(self.weights)
         self.cost = cost
         self.unknowns = n
         self.work = WorkCounts()

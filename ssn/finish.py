@@ -217,7 +217,8 @@ def _composite_doubt(
     rows = np.flatnonzero(free > 0)
     hessian = problem.derivative(z)
     dense = hessian.toarray() if hasattr(hessian, "toarray") else np.asarray(hessian)
-    values, vectors = np.linalg.eigh(dense[np.ix_(rows, rows)])
+    curvature = problem.weights[rows] * (1.0 / free[rows] - 1.0) / step  # of the cost on its piece
+    values, vectors = np.linalg.eigh(dense[np.ix_(rows, rows)] + np.diag(curvature))
     if values[0] >= -1e-10 * np.abs(values).max():
         return None
     far = z.copy()

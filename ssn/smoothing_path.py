@@ -31,8 +31,6 @@ PLAIN_STEPS = 15
 WAY_STEPS = 40
 # share of all steps that the ways may use: the rest is for the search from the best point, which tells why it fails
 WAYS_SHARE = 0.85
-import os
-TOL=float(os.environ.get('TOL','0.5'))
 # lengths below 2^-HALVINGS are not tried at a point of a nonlinear equation: a regularised step does better
 HALVINGS = 6
 
@@ -56,7 +54,7 @@ class SmoothingPath:
         of x.
     """
 
-    factor: float = float(os.environ.get("FAC","0.1"))
+    factor: float = 0.1
     point_steps: int = 12
     contraction: float = 0.3
     least: float = 1e-12
@@ -212,8 +210,8 @@ class _Follower:
                 smoothed_solver = self.make_solver(smoothed)
             smoothed_solver.equation = smoothed  # the pattern stays, and with it the symbolic factorisation
             affine = bool(getattr(equation, "piecewise_affine", False))
-            search = ResidualSearch(memory=int(os.environ.get("MEM","1")), max_halvings=10 if affine else HALVINGS).fresh()
-            point = Limits(tolerance=TOL, max_steps=min(path.point_steps, last_step - len(result.steps)))
+            search = ResidualSearch(memory=1, max_halvings=10 if affine else HALVINGS).fresh()
+            point = Limits(tolerance=0.5, max_steps=min(path.point_steps, last_step - len(result.steps)))
             part = self._stage(smoothed, smoothed_solver, search, x, point, f"{way}eps = {eps:.1e}")
             if part.outcome in (Outcome.STOPPED, Outcome.INTERRUPTED):
                 result.outcome, result.message = part.outcome, part.message

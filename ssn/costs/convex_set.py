@@ -102,7 +102,10 @@ class ConvexSet:
         raise NotImplementedError
 
     def margins(self, v: FloatArray, step: float) -> FloatArray:
-        """Return r with: a change of v by less than r_i sqrt(w_i) in the norm of the weights leaves the label i."""
+        """Return the distance of v to where the label i changes and no other, in the weighted norm, over sqrt(w_i).
+
+        A change of v by less than the least r_i sqrt(w_i), in the norm of the weights, leaves all labels.
+        """
         raise NotImplementedError
 
     def value(self, u: FloatArray, weights: FloatArray | None = None) -> float:

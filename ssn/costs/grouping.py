@@ -50,7 +50,7 @@ class Groups:
             if unused.size:
                 raise InputError(f"groups has no component with label {int(unused[0])}")
             return cls(labels)
-        if not isinstance(groups, Sequence) or not len(groups):
+        if isinstance(groups, str) or not isinstance(groups, Sequence) or not len(groups):
             raise InputError("groups must be an integer array with one label a component, or a list of index arrays")
         parts = [np.atleast_1d(np.asarray(part)) for part in groups]
         for k, part in enumerate(parts):

@@ -243,14 +243,14 @@ def fischer_burmeister(
 
 
 def _phi(a: FloatArray, b: FloatArray, eps: float) -> tuple[FloatArray, FloatArray, FloatArray]:
-    root = np.hypot(a, b) if eps == 0.0 else np.sqrt(a * a + b * b + 2.0 * eps * eps)
+    root = np.hypot(np.hypot(a, b), np.sqrt(2.0) * eps)
     safe = np.where(root > 0, root, 1.0)
     half = np.sqrt(0.5)
     pa, pb = 1.0 - np.where(root > 0, a / safe, half), 1.0 - np.where(root > 0, b / safe, half)
     # a + b - root without cancellation where one of the two is positive
     large, small = np.maximum(a, b), np.minimum(a, b)
     below = np.where(large > 0, large + root, 1.0)
-    exact = small - (small * small + 2.0 * eps * eps) / below
+    exact = small - small * (small / below) - 2.0 * eps * (eps / below)
     return np.where(large > 0, exact, a + b - root), pa, pb
 
 
@@ -271,10 +271,10 @@ class FischerBurmeister:
         self.work.operator_products += 1
         with np.errstate(all="ignore"):
             force = self.mid.map.value(x)
-        if not np.isfinite(force).all():
-            return Evaluation(x, force, np.inf, np.inf, Pieces())
-        residual, _, _ = self._parts(x, force)
-        norm = self.inner.norm(residual)
+            if not np.isfinite(force).all():
+                return Evaluation(x, force, np.inf, np.inf, Pieces())
+            residual, _, _ = self._parts(x, force)
+            norm = self.inner.norm(residual)
         return Evaluation(x, residual, norm, norm, Pieces())
 
     def derivative(self, x: FloatArray) -> Any:

@@ -28,6 +28,9 @@ from ..work import WorkCounts
 
 FloatArray = npt.NDArray[np.float64]
 
+# relative error of an objective, with room for long sums
+ROUNDING = 1e-14
+
 
 class NaturalMap(Protocol):
     """F with its derivative, and the potential f where F = f'."""
@@ -201,6 +204,20 @@ class NaturalEquation:
         """||x - z||^2 / (2 s)."""
         return float((self.weights / self.step * at.residual) @ at.residual) / 2.0
 
+    def envelope_target(self, at: Evaluation, sigma: float) -> float:
+        """The envelope value that a trial point must not exceed.
+
+        Where the cost is not convex it is no more than the objective at the proximal gradient point z, so that the
+        objective falls along the points z, up to rounding.
+        """
+        target = self.envelope(at) - sigma * self.envelope_decrease(at)
+        if self.cost.convex:
+            return target
+        assert self.potential is not None
+        self.work.operator_products += 1
+        safe = self.potential(at.data.moved) + self.cost.value(at.data.moved, self.weights)
+        return min(target, safe) + ROUNDING * abs(safe)
+
     def proximal_gradient_point(self, at: Evaluation) -> FloatArray:
         """Z of the evaluation."""
         moved: FloatArray = at.data.moved
@@ -223,7 +240,12 @@ class NaturalEquation:
         return at
 
     def is_best(self, at: Evaluation) -> bool:
-        """Whether the residual norm is the smallest seen; remembers it."""
+        """Whether the residual norm is the smallest seen, which remembers it; never where the cost is not convex.
+
+        There a small residual may belong to a worse point, and every step has to lower the envelope.
+        """
+        if not self.cost.convex:
+            return False
         if at.norm < self._best_norm:
             self._best_norm = at.norm
             return True

@@ -151,12 +151,12 @@ def _along(
 
 
 def _without_noise(figures: list[float]) -> int:
-    """How many sizes to look at: not the last ones, if the figure grows there like an absolute error divided by the size.
+    """How many sizes to look at: not the last ones, where the figure grows like an absolute error over the size.
 
     Such an error is rounding, or a kink much nearer than the sizes; that of a wrong derivative stays level.
     """
     kept = len(figures)
-    while kept > 3 and figures[kept - 1] > GROWTH * figures[kept - 2]:
+    while kept > 1 and figures[kept - 1] > GROWTH * figures[kept - 2]:
         kept -= 1
     return kept
 

@@ -27,7 +27,7 @@ class EnvelopeSearch:
     def advance(self, equation: Any, at: Evaluation, direction: Direction) -> StepOutcome:
         """Return the first trial that lowers the envelope enough; the proximal gradient point if none does."""
         safe = equation.proximal_gradient_point(at)
-        target = equation.envelope(at) - self.sigma * equation.envelope_decrease(at)
+        target = equation.envelope_target(at, self.sigma)
         evaluations = 0
         reason = direction.message
         if direction.vector is not None:

@@ -26,8 +26,9 @@ FloatArray = npt.NDArray[np.float64]
 # of a new direction, what the basis leaves of it: below the first figure it is applied to S* afresh, since the
 # difference of known images has lost digits; below the second it is rounding
 FRESH, ROUNDING = 1e-2, 1e-10
-# additions in a row that did not halve the residual of the Newton system after which it is at rounding level
-STAGNANT = 4
+# additions in a row that did not halve the residual of the Newton system, which is below the second figure already,
+# after which it is at rounding level
+STAGNANT, NEAR_ROUNDING = 4, 1e-9
 
 
 class SubspaceSolver:
@@ -103,7 +104,8 @@ class SubspaceSolver:
                 return Direction(
                     None, np.inf, inner, "singular", "the Newton operator returned NaN or infinity"
                 )
-            idle = idle + 1 if best is not None and residual_norm > 0.5 * best[0] and forcing < 1e-6 else 0
+            no_gain = best is not None and residual_norm > 0.5 * best[0] and best[0] < NEAR_ROUNDING * norm_b
+            idle = idle + 1 if no_gain else 0
             if best is None or residual_norm < best[0]:
                 best = (residual_norm, d, lifted_d)
             if residual_norm <= forcing * norm_b or inner >= self.max_inner or idle >= STAGNANT:

@@ -472,6 +472,9 @@ def no_kink_within_the_margin(case: Case) -> None:
     assert (margins >= 0).all()
     radius = np.where(np.isfinite(margins), margins, 50.0)
     here = labels(case, case.v)
+    if type(case.cost) in sets.INSTANCES:  # with the other labels as they are: the least is a radius for all
+        root = np.sqrt(case.inner)
+        radius = (radius * root).min() / root
     if not case.separable:
         for i in range(case.n):
             for line in (np.eye(case.n)[i], case.v, case.direction(), case.direction()):

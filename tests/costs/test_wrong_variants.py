@@ -1,0 +1,196 @@
+"""Wrong variants of costs: each is one mistake that somebody makes some day, caught by a named check of the contract."""
+
+import numpy as np
+import pytest
+from hypothesis import find, settings
+from hypothesis import strategies as st
+from hypothesis.errors import NoSuchExample
+
+import ssn
+from tests.costs import test_contract as contract
+
+
+class SlopesAtTheWrongEnd(ssn.PiecewiseQuadraticCost):
+    """Kinks are entered and left with the derivative on the right of the breakpoint only."""
+
+    def _labels(self, v, step):
+        labels = super()._labels(v, step)
+        for j, b in enumerate(self._points):
+            late = (labels == 2 * j + 2) & (v < b + step * self._right[j])
+            labels = np.where(late, 2 * j + 1, labels)
+        return labels
+
+
+class ShrinkageOfAnElasticNetNotDivided(ssn.ElasticNetCost):
+    """The proximal map forgets the quadratic, as that of L1 would."""
+
+    def prox(self, v, step):
+        return ssn.SparseCost(self.beta, self.lower, self.upper).prox(v, step)
+
+
+class HuberOfUnitSlope(ssn.HuberCost):
+    """Curvature 1/width whatever the weight: the derivative jumps at the ends of the quadratic piece."""
+
+    def prox_derivative(self, v, step):
+        return ssn.HuberCost(np.ones(()), self.width, self.target).prox_derivative(v, step)
+
+
+class HingeWithoutLabels(ssn.HingeLoss):
+    """Values do not see the labels."""
+
+    def value(self, u, weights=None):
+        terms = self.weight * np.maximum(0.0, self.margin - u)
+        return float(terms.sum() if weights is None else weights @ terms)
+
+
+class QuantileOfTheOtherTail(ssn.QuantileLoss):
+    """Values exchange level and 1 - level."""
+
+    def value(self, u, weights=None):
+        return ssn.QuantileLoss(1.0 - self.level, self.target, self.weight).value(u, weights)
+
+
+class DeadZoneOfTwiceTheWidth(ssn.InsensitiveLoss):
+    """Width taken for half the width."""
+
+    def prox(self, v, step):
+        return ssn.InsensitiveLoss(2.0 * self.width, self.target, self.weight).prox(v, step)
+
+
+class NormAndBoundsOneAfterTheOther(ssn.GroupSparseCost):
+    """Shrink, then clip: right for one component a group only."""
+
+    def prox(self, v, step):
+        free = ssn.GroupSparseCost(self.beta, self.groups.labels, inner_weights=self.inner_weights)
+        return np.clip(free.prox(v, step), self.lower, self.upper)
+
+
+class NormDerivativeWithoutItsRankOneTerm(ssn.GroupSparseCost):
+    """Only the diagonal of the derivative."""
+
+    def prox_derivative(self, v, step):
+        right = super().prox_derivative(v, step)
+        return ssn.costs.DiagonalDerivative(right._entries)
+
+
+class NormsWithoutInnerWeights(ssn.GroupSparseCost):
+    """The proximal map of the plain Euclidean norm."""
+
+    def prox(self, v, step):
+        plain = ssn.GroupSparseCost(self.beta, self.groups.labels, lower=self.lower, upper=self.upper)
+        return plain.prox(v, step)
+
+
+class ThresholdOverAllActuators(ssn.SwitchingCost):
+    """No sorting: the threshold as if all actuators stayed on."""
+
+    def _threshold(self, v, step):
+        t = self._strength(step)
+        total = self.groups.sum(self.inner_weights)
+        return t * self._sums(v) / (1.0 + t * total)
+
+
+class SwitchingDerivativeWithoutTheOthers(ssn.SwitchingCost):
+    """The threshold is taken as fixed."""
+
+    def prox_derivative(self, v, step):
+        return ssn.costs.DiagonalDerivative((self._labels(v, step) != 1).astype(float))
+
+
+class JumpsAtTheSettings(ssn.MultiBangCost):
+    """Slopes alpha u_i instead of half way between neighbours."""
+
+    def prox(self, v, step):
+        wrong = ssn.PiecewiseQuadraticCost(
+            self.settings[1:-1], self.alpha * self.settings[:-1], lower=self.lower, upper=self.upper
+        )
+        return wrong.prox(v, step)
+
+
+class QuadraticWithoutItsCentre(ssn.SumWithQuadratic):
+    """The centre is left out of the proximal map."""
+
+    def _inside(self, v, step):
+        grown = 1.0 + step * self.gamma
+        return v / grown, step / grown, grown
+
+
+class StretchNotSquared(ssn.ScaledCost):
+    """The step is scaled by the stretch, not by its square."""
+
+    def _inside(self, v, step):
+        return self.stretch * v, step * self.factor * abs(self.stretch)
+
+
+class MarginsOfTheUnshifted(ssn.TranslatedCost):
+    """Margins are read at v instead of v - shift."""
+
+    def margins(self, v, step):
+        return self.cost.margins(v, step)
+
+
+class MoreauWithoutTheInverseStep(ssn.ConjugateCost):
+    """v - s prox_{s g}(v/s)."""
+
+    def prox(self, v, step):
+        return v - step * self.cost.prox(v / step, step)
+
+
+# wrong variant, and the check of the contract that catches it
+WRONG = {
+    SlopesAtTheWrongEnd: contract.prox_is_optimal,
+    ShrinkageOfAnElasticNetNotDivided: contract.prox_is_the_brute_force_minimiser,
+    HuberOfUnitSlope: contract.derivative_is_the_difference_quotient,
+    HingeWithoutLabels: contract.prox_is_optimal,
+    QuantileOfTheOtherTail: contract.prox_is_the_brute_force_minimiser,
+    DeadZoneOfTwiceTheWidth: contract.prox_is_optimal,
+    NormAndBoundsOneAfterTheOther: contract.prox_is_the_brute_force_minimiser,
+    NormDerivativeWithoutItsRankOneTerm: contract.derivative_is_the_difference_quotient,
+    NormsWithoutInnerWeights: contract.prox_is_optimal,
+    ThresholdOverAllActuators: contract.prox_is_optimal,
+    SwitchingDerivativeWithoutTheOthers: contract.derivative_is_the_difference_quotient,
+    JumpsAtTheSettings: contract.prox_is_optimal,
+    QuadraticWithoutItsCentre: contract.prox_is_the_brute_force_minimiser,
+    StretchNotSquared: contract.prox_is_optimal,
+    MarginsOfTheUnshifted: contract.no_kink_within_the_margin,
+    MoreauWithoutTheInverseStep: contract.conjugate_satisfies_fenchel,
+}
+
+
+@st.composite
+def cases(draw, wrong):
+    instance, n = draw(contract.INSTANCES[wrong.__base__])
+    instance.__class__ = wrong
+    v, w = contract.vector(draw, n), contract.vector(draw, n)
+    return contract.Case(instance, v, w, draw(contract.STEPS), draw)
+
+
+def fails(check):
+    def failing(case):
+        try:
+            check(case)
+        except AssertionError:
+            return True
+        return False
+
+    return failing
+
+
+EXAMPLES = settings(max_examples=400, derandomize=True, deadline=None, database=None)
+
+
+@pytest.mark.parametrize("wrong", WRONG, ids=lambda c: c.__name__)
+def test_the_named_check_catches_the_mistake(wrong):
+    find(cases(wrong), fails(WRONG[wrong]), settings=EXAMPLES)
+
+
+def test_every_cost_of_these_files_has_a_wrong_variant():
+    here = ("piecewise", "elastic_net", "huber", "losses", "group", "switching", "multibang", "operations")
+    costs = [c for c in ssn.costs.CATALOGUE if c.__module__.rsplit(".", 1)[1] in here]
+    assert {w.__base__ for w in WRONG} == set(costs)
+    assert len(WRONG) == 16
+
+
+def test_the_right_twin_is_not_caught():
+    with pytest.raises(NoSuchExample):
+        find(cases(type("Right", (ssn.SwitchingCost,), {})), fails(contract.prox_is_optimal), settings=EXAMPLES)
