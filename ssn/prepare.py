@@ -276,6 +276,21 @@ def _defined(problem: ComplementarityProblem, x: FloatArray) -> bool:
     return bool(np.isfinite(derivative.data if sp.issparse(derivative) else np.asarray(derivative)).all())
 
 
+def _prepare_sum(problem: SumProblem, start: Any) -> Plan:
+    given = _start_array(start, problem.unknowns)
+    x = np.zeros(problem.unknowns) if given is None else given
+    equation = AugmentedEquation(problem, np.zeros(int(problem.splits[-1])), 1.0, x, 0.0)
+    choices = {
+        "equation": "stationarity of the augmented Lagrangian: several nonsmooth terms",
+        "globalization": "dual: the augmented Lagrangian is convex and smooth, the search needs products only",
+        "linear": "augmented: Cholesky where every part is explicit, conjugate gradients otherwise",
+        "path": "method of multipliers: the penalty grows while the terms are the less accurate part",
+    }
+    return Plan(
+        problem, equation, AugmentedSolver(equation), DualSearch(), x, choices, multipliers=MultiplierPath()
+    )
+
+
 def _prepare_equation(problem: Any, start: Any) -> Plan:
     given = start if start is not None else getattr(problem, "start", None)
     if given is None:

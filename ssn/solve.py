@@ -19,7 +19,7 @@ from .linear import ReducedSolver, SubspaceSolver
 from .moreau_yosida import first_penalty, follow_penalty
 from .newton import Limits, LoopResult, run
 from .prepare import Plan, prepare
-from .protocols import FloatArray, Globalization
+from .protocols import Evaluation, FloatArray, Globalization
 from .proximal_point import follow, operator_size
 from .records import StepRecord
 from .smoothing_path import SmoothingPath, follow_smoothing
@@ -142,6 +142,7 @@ def _run_until_confirmed(plan: Plan, limits: Limits, callback: Callback | None, 
         if solution.outcome is not Outcome.INACCURATE or not np.isfinite(solution.accuracy):
             break
         left = limits.max_steps - len(result.steps)
+        result.best = _at_scale(plan.equation, result.best)
         inner = replace(
             inner, tolerance=0.1 * inner.tolerance * limits.tolerance / solution.accuracy, max_steps=left
         )
@@ -166,11 +167,18 @@ def _run_smoothing(plan: Plan, limits: Limits, callback: Callback | None) -> Loo
     left = limits.max_steps - len(result.steps)
     if result.outcome in SETTLED or left <= 0:
         return result
+    result.best = _at_scale(plan.equation, result.best)
     ended = run(
         plan.equation, plan.solver, plan.globalization, result.best.x, replace(limits, max_steps=left),
-        callback=callback, first_index=len(result.steps) + 1,
+        callback=callback, first_index=len(result.steps) + 1, stage="search from the best point",
     )  # fmt: skip
     return _joined(result, ended)
+
+
+def _at_scale(equation: Any, at: Evaluation) -> Evaluation:
+    """The evaluation with the equation scaled anew at its point, where the equation can."""
+    rescale = getattr(equation, "rescale", None)
+    return equation.evaluate(at.x) if rescale is not None and rescale(at.x) else at
 
 
 def _run_plain_first(plan: Plan, limits: Limits, callback: Callback | None) -> LoopResult:

@@ -12,13 +12,14 @@ import ssn.evidence
 PUBLIC = {
     "ssn": """
         AffineMap Bounds Certificate ComplementarityProblem CompositeProblem ConjugateCost ControlProblem Cost
-        DualSearch ElasticNetCost EnvelopeSearch Equation FullStep GroupSparseCost HingeLoss HuberCost InputError
-        InsensitiveLoss Iteration LeastSquares Linearization Logistic MissingExtraError MultiBangCost NotConverged
-        Outcome Pieces PiecewiseQuadraticCost ProblemFileError Quadratic QuantileLoss ResidualSearch ScaledCost
-        SmoothMap SmoothPart Solution SolveInterrupted SparseCost StateModel SteadyState StepRecord StopSolve
-        SumProblem SumWithQuadratic SwitchingCost Term TimeDependentState TracedEquation TranslatedCost WorkCounts
-        costs custom_operation declare_continuous follow follow_meshes placements primal_dual proximal_gradient
-        refit solve solve_many vanishing_weight weight_path
+        CountCost DualSearch ElasticNetCost EnvelopeSearch Equation EuclideanBall FullStep GroupSparseCost HalfSpace
+        HingeLoss HuberCost Hyperplane InputError InsensitiveLoss Iteration L1Ball LeastSquares Linearization
+        Logistic MissingExtraError MultiBangCost NotConverged Outcome Pieces PiecewiseQuadraticCost
+        PositiveSemidefiniteCone PowerCost ProblemFileError Product Quadratic QuantileLoss ResidualSearch ScaledCost
+        SecondOrderCone Simplex SmoothMap SmoothPart Solution SolveInterrupted SparseCost StateModel SteadyState
+        StepRecord StopSolve SumProblem SumWithQuadratic SwitchingCost Term TimeDependentState TracedEquation
+        TranslatedCost WorkCounts costs custom_operation declare_continuous follow follow_meshes placements
+        primal_dual proximal_gradient refit solve solve_many vanishing_weight weight_path
     """,
     "ssn.evidence": """
         Assessment Check KnownValue MeshRow MeshStudy MethodResult RateVerdict assess check_derivative compare

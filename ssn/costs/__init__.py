@@ -2,6 +2,7 @@
 
 from .balls import EuclideanBall, L1Ball
 from .bounds import Bounds
+from .count import CountCost
 from .derivative import DiagonalDerivative
 from .elastic_net import ElasticNetCost
 from .group import GroupSparseCost
@@ -11,6 +12,7 @@ from .losses import HingeLoss, InsensitiveLoss, QuantileLoss
 from .multibang import MultiBangCost
 from .operations import ConjugateCost, ScaledCost, SumWithQuadratic, TranslatedCost
 from .piecewise import PiecewiseQuadraticCost
+from .power import PowerCost
 from .product import Product
 from .second_order_cone import SecondOrderCone
 from .semidefinite import PositiveSemidefiniteCone
@@ -35,6 +37,8 @@ CATALOGUE = (
     SecondOrderCone,
     PositiveSemidefiniteCone,
     Product,
+    CountCost,
+    PowerCost,
     GroupSparseCost,
     SwitchingCost,
     MultiBangCost,
@@ -48,6 +52,7 @@ __all__ = [
     "CATALOGUE",
     "Bounds",
     "ConjugateCost",
+    "CountCost",
     "DiagonalDerivative",
     "ElasticNetCost",
     "EuclideanBall",
@@ -61,6 +66,7 @@ __all__ = [
     "MultiBangCost",
     "PiecewiseQuadraticCost",
     "PositiveSemidefiniteCone",
+    "PowerCost",
     "Product",
     "QuantileLoss",
     "ScaledCost",

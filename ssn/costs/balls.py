@@ -40,9 +40,9 @@ class EuclideanBall(ConvexSet):
     Notes
     -----
     Outside, with d = v - centre and y = d / ||d||: centre + radius y, derivative radius / ||d|| (I - y y' W). Selection
-    on the sphere: the piece outside, with the smaller derivative. Smoothed map: max(||d||, radius) by
-    (||d|| + radius + sqrt((||d|| - radius)^2 + 4 eps^2)) / 2; it stays inside the ball and differs from the projection
-    by at most eps in norm.
+    on the sphere: the piece outside, with the smaller derivative. Smoothed map: the square of max(||d||, radius) by
+    (||d||^2 + radius^2 + sqrt((||d||^2 - radius^2)^2 + (4 eps radius)^2)) / 2; it stays inside the ball and differs
+    from the projection by at most eps in norm.
     """
 
     piecewise_affine = False
@@ -98,10 +98,12 @@ class EuclideanBall(ConvexSet):
 
     def _smoothed(self, v: FloatArray, eps: float) -> tuple[FloatArray, ProxDerivative]:
         d, size = self._offset(v)
-        excess, slope = (float(x) for x in smooth_plus(np.asarray(size - self.radius), eps))
-        larger = self.radius + excess
-        ratio = self.radius / larger
-        along = max(0.0, ratio - size * ratio * slope / larger)
+        r, over = self.radius, size * size - self.radius**2
+        root = float(np.sqrt(over * over + (4.0 * eps * r) ** 2))
+        larger = float(np.sqrt(0.5 * (size * size + r * r + root)))
+        ratio = r / larger
+        # ratio times (larger - size * its derivative) / larger
+        along = 0.5 * ratio * (r * r * (1.0 - over / root) + 16.0 * (eps * r) ** 2 / root) / larger**2
         return self.centre + ratio * d, self._radial(d, size, ratio, along)
 
 
@@ -150,42 +152,54 @@ class L1Ball(ConvexSet):
     def _support(self, y: FloatArray) -> float:
         return self.radius * float(np.abs(y).max())
 
-    def _threshold(self, v: FloatArray) -> float | None:
-        """The threshold, None inside the ball."""
-        if self._sum(v) < self.radius:
+    def _gaps(self, v: FloatArray) -> FloatArray | None:
+        """|v| - t, t the threshold, measured from the largest size so that no digit is lost; None inside the ball."""
+        size = np.abs(v)
+        if (
+            float((self.weights * size).sum() if self.weights.ndim else self.weights * size.sum())
+            < self.radius
+        ):
             return None
-        return max(0.0, threshold(np.abs(v), self.weights, self.radius))
+        top = float(size.max())
+        size -= top
+        t = threshold(size, self.weights, self.radius)
+        size -= max(t, -top)  # at the sphere rounding may take t below zero
+        return size
 
     def _project(self, v: FloatArray) -> FloatArray:
-        t = self._threshold(v)
-        return v.copy() if t is None else v - np.clip(v, -t, t)
+        gaps = self._gaps(v)
+        if gaps is None:
+            return v.copy()
+        np.maximum(gaps, 0.0, out=gaps)
+        return np.copysign(gaps, v, out=gaps)
 
     def _derivative(self, v: FloatArray) -> ProxDerivative:
-        t = self._threshold(v)
-        if t is None:
+        gaps = self._gaps(v)
+        if gaps is None:
             return DiagonalDerivative(np.ones(v.shape))
-        signs = np.where(np.abs(v) > t, np.sign(v), 0.0)
+        signs = np.where(gaps > 0.0, np.sign(v), 0.0)
         coefficient = np.array([1.0 / self._sum(signs)])
         return LowRankDerivative(np.abs(signs), signs[:, None], coefficient, self.weights)
 
     def pieces(self, v: FloatArray, step: float) -> Pieces:
         """Label all components inside, or each one negative, zero or positive."""
-        t = self._threshold(v)
-        if t is None:
+        gaps = self._gaps(v)
+        if gaps is None:
             labels = np.full(v.shape, INSIDE, dtype=np.int8)
         else:
-            labels = np.where(v > t, np.int8(POSITIVE), np.where(v < -t, np.int8(NEGATIVE), np.int8(ZERO)))
+            labels = np.where(v > 0.0, np.int8(POSITIVE), np.int8(NEGATIVE))
+            labels[gaps <= 0.0] = ZERO
         return Pieces({"control": labels}, {"control": ("inside", "negative", "zero", "positive")})
 
     def margins(self, v: FloatArray, step: float) -> FloatArray:
         """Return the distance of v to where component i changes its label, in the weighted norm, over sqrt(w_i)."""
-        t = self._threshold(v)
-        if t is None:
+        gaps = self._gaps(v)
+        if gaps is None:
             return self._spread((self.radius - self._sum(v)) / np.sqrt(self._sum(np.ones(v.shape))), v)
-        size = np.abs(v)
-        active = size > t
+        active = gaps > 0.0
+        t = float((np.abs(v) - gaps).max())
         mass = self._sum(active.astype(np.float64))
-        own = distances(size - t, 1.0 + np.where(active, -self.weights, self.weights) / mass)
+        own = distances(gaps, 1.0 + np.where(active, -self.weights, self.weights) / mass)
         return np.minimum(own, self._spread(t * float(np.sqrt(mass)), v))
 
     def _smoothed(self, v: FloatArray, eps: float) -> tuple[FloatArray, LowRankDerivative]:

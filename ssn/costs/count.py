@@ -47,7 +47,7 @@ class CountCost:
     proximal map as eps -> 0 everywhere but at the jump.
 
     A problem with this cost is solved for a fixed point of the proximal gradient map with a step just below 1/L: the
-    objective falls from step to step, and every point returned is stationary (a local minimum on its support), not more.
+    objective falls from step to step, and every point returned is stationary (a local minimum on its support), no more.
     It depends on the start; take several and keep the best::
 
         starts = [np.zeros(n), unpenalised, *(rng.standard_normal(n) for _ in range(8))]

@@ -52,8 +52,8 @@ class GroupSparseCost:
     other w, and the proximal map minimises step g(u) + 1/2 sum w_i (u_i - v_i)^2. Without weights the outer ones are 1.
 
     *Proximal map.* Without bounds max(0, 1 - step beta/||v_g||) v_g. With bounds
-    u_i = clip(v_i r/(r + step beta), lower_i, upper_i), r = ||u_g||, one monotone scalar equation a group; u_g = 0 where
-    zero is within the bounds and the part of v_g that points into them is not longer than step beta. The derivative is
+    u_i = clip(v_i r/(r + step beta), lower_i, upper_i), r = ||u_g||, one monotone scalar equation a group; u_g = 0
+    where zero is within the bounds and the part of v_g that points into them is not longer than step beta. The derivative is
     the inverse of I + step beta Hess ||.|| on the components that are not clipped, a multiple of the identity plus a
     rank-one term.
 
@@ -174,9 +174,11 @@ class GroupSparseCost:
             rest = safe - norm
             low, high = np.where(open_ & (rest < 0), r, low), np.where(open_ & (rest > 0), r, high)
             newton = safe - (safe / norm - 1.0) * norm * norm / np.maximum(norm - moving, 1e-300)
-            inside = (newton >= low) & (newton <= high)
+            # at rounding level; the step is then noise, magnified where the derivative is small, and may go round
+            settled = (np.abs(newton - safe) <= 2e-15 * safe) | (np.abs(rest) <= 1e-15 * safe)
+            inside = ((newton >= low) & (newton <= high)) | settled
             following = np.where(inside, newton, 0.5 * (low + high))
-            done = (rest == 0.0) | (np.abs(following - r) <= 4e-16 * r) | (high - low <= 4e-16 * high)
+            done = settled | (rest == 0.0) | (np.abs(following - r) <= 4e-16 * r) | (high - low <= 4e-16 * high)
             r = np.where(open_, np.where(rest == 0.0, r, following), r)
             open_ &= ~done
         return np.where(zero, 0.0, r)
@@ -206,7 +208,10 @@ class GroupSparseCost:
         bend = np.where(positive, t / (length + t), 0.0)
         rank_one = np.where(positive, factor * bend / (1.0 - bend * np.minimum(share, 1.0)), 0.0)
         return GroupDerivative(
-            np.where(free, spread(factor), 0.0), spread(rank_one) * unit, self.inner_weights * unit, self.groups
+            np.where(free, spread(factor), 0.0),
+            spread(rank_one) * unit,
+            self.inner_weights * unit,
+            self.groups,
         )
 
     def pieces(self, v: FloatArray, step: float) -> Pieces:
@@ -241,7 +246,9 @@ class GroupSparseCost:
             there = np.isfinite(bound)
             b = np.where(there, bound, 0.0)
             clipped = (scaled <= b) if bound is self.lower else (scaled >= b)
-            held = np.abs(v - b * stretch) / (1.0 + np.where(curved, 2.0 * np.abs(b) * t_each * root / safe**2, 0.0))
+            held = np.abs(v - b * stretch) / (
+                1.0 + np.where(curved, 2.0 * np.abs(b) * t_each * root / safe**2, 0.0)
+            )
             held = np.minimum(held, np.where(curved, 0.5 * length / root, np.inf))
             moved = np.where(clipped, held, np.abs(scaled - b))
             seen = there & ~spread(zero) & (self.lower < self.upper)
@@ -311,7 +318,9 @@ class GroupSparseCost:
         fixed = self.lower == self.upper
         u = np.where(fixed, low, u)
         with np.errstate(divide="ignore"):
-            bend = np.where(below, (eps / (u - low)) ** 2, 0.0) + np.where(above, (eps / (high - u)) ** 2, 0.0)
+            bend = np.where(below, (eps / (u - low)) ** 2, 0.0) + np.where(
+                above, (eps / (high - u)) ** 2, 0.0
+            )
         return u, np.where(fixed, np.inf, bend)
 
     def smoothed_prox(self, v: FloatArray, step: float, eps: float) -> FloatArray:
@@ -334,8 +343,8 @@ class GroupSparseCost:
     def multipliers(self, u: FloatArray, subgradient: FloatArray) -> dict[str, FloatArray]:
         """Split xi = -grad f(u) into the norm's part and the bound force.
 
-        ``sparsity`` is beta u/||u_g|| on nonzero groups and of norm at most beta on zero ones; ``bounds`` is positive at
-        the upper bound (the bound pushes u down), negative at the lower bound, zero between.
+        ``sparsity`` is beta u/||u_g|| on nonzero groups and of norm at most beta on zero ones; ``bounds`` is positive
+        at the upper bound (the bound pushes u down), negative at the lower bound, zero between.
         """
         r = self.groups.spread(self.norms(u))
         beta = self.groups.spread(np.broadcast_to(self.beta, (self.groups.number,)))

@@ -51,7 +51,9 @@ class Groups:
                 raise InputError(f"groups has no component with label {int(unused[0])}")
             return cls(labels)
         if isinstance(groups, str) or not isinstance(groups, Sequence) or not len(groups):
-            raise InputError("groups must be an integer array with one label a component, or a list of index arrays")
+            raise InputError(
+                "groups must be an integer array with one label a component, or a list of index arrays"
+            )
         parts = [np.atleast_1d(np.asarray(part)) for part in groups]
         for k, part in enumerate(parts):
             if part.ndim != 1 or not part.size or not np.issubdtype(part.dtype, np.integer):
@@ -71,7 +73,11 @@ class Groups:
             sizes = tuple(count(s, "shape") for s in shape)
         except TypeError as error:
             raise InputError(f"shape must be a tuple of whole numbers, got {shape!r}") from error
-        if isinstance(axis, bool) or not isinstance(axis, (int, np.integer)) or not -len(sizes) <= axis < len(sizes):
+        if (
+            isinstance(axis, bool)
+            or not isinstance(axis, (int, np.integer))
+            or not -len(sizes) <= axis < len(sizes)
+        ):
             raise InputError(f"axis must be one of the {len(sizes)} axes of shape {sizes}, got {axis!r}")
         rest = sizes[: axis % len(sizes)] + sizes[axis % len(sizes) + 1 :]
         lines = np.arange(int(np.prod(rest))).reshape(rest)
@@ -81,7 +87,7 @@ class Groups:
         """Sums over the groups, (number,) or (number, k)."""
         return np.asarray(self._gather @ x)
 
-    def spread(self, x: FloatArray) -> FloatArray:
+    def spread(self, x: npt.NDArray[Any]) -> npt.NDArray[Any]:
         """The value of its group for each component."""
         return x[self.labels]
 

@@ -18,6 +18,8 @@ FloatArray = npt.NDArray[np.float64]
 
 # angle between a normal and a subgradient, as a sine, that counts as rounding in the support function
 PARALLEL = 1e-9
+# what is left of a component, relative to it, that is rounding
+ROUNDING = 4.0 * float(np.finfo(np.float64).eps)
 
 
 class HalfSpace(ConvexSet):
@@ -82,7 +84,11 @@ class HalfSpace(ConvexSet):
         return self._excess(v) >= 0.0
 
     def _project(self, v: FloatArray) -> FloatArray:
-        return v - self._excess(v) * self._unit if self._outside(v) else v.copy()
+        if not self._outside(v):
+            return v.copy()
+        u = v - self._excess(v) * self._unit
+        u[np.abs(u) <= ROUNDING * np.abs(v)] = 0.0  # what cancels to rounding is zero
+        return u
 
     def _partial(self, slope: float) -> LowRankDerivative:
         return LowRankDerivative(np.ones(()), self._unit[:, None], np.array([slope]), self.weights)

@@ -14,7 +14,7 @@ from .piecewise import PiecewiseQuadraticCost, by_component, check_together, not
 class HuberCost(PiecewiseQuadraticCost):
     """g(u) = sum_i beta_i h_i(u_i - target_i), h(r) = r^2/(2 width) where |r| <= width, else |r| - width/2.
 
-    The smooth approximation of beta |r| from below with error at most beta width / 2, and the loss of robust regression.
+    The smooth approximation of beta |r| from below with error at most beta width / 2, and a robust loss.
 
     Parameters
     ----------

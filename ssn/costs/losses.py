@@ -40,7 +40,9 @@ class HingeLoss(PiecewiseQuadraticCost):
         self.margin = float_array(margin, "margin")
         if (np.abs(self.labels) != 1).any():
             index = int(np.argmax(np.atleast_1d(np.abs(self.labels) != 1)))
-            raise InputError(f"labels must be +1 or -1, got {np.atleast_1d(self.labels)[index]} at index {index}")
+            raise InputError(
+                f"labels must be +1 or -1, got {np.atleast_1d(self.labels)[index]} at index {index}"
+            )
         check_together(labels=self.labels, weight=self.weight, margin=self.margin)
         left = np.where(self.labels > 0, -self.weight, 0.0)
         right = np.where(self.labels > 0, 0.0, self.weight)
@@ -110,7 +112,9 @@ class InsensitiveLoss(PiecewiseQuadraticCost):
         self.width, self.target = not_negative(width, "width"), float_array(target, "target")
         self.weight = not_negative(weight, "weight")
         if (self.width == 0).any():
-            raise InputError("width must be positive; without a dead zone take QuantileLoss(0.5, target, 2 * weight)")
+            raise InputError(
+                "width must be positive; without a dead zone take QuantileLoss(0.5, target, 2 * weight)"
+            )
         check_together(width=self.width, target=self.target, weight=self.weight)
         super().__init__(
             by_component(self.target - self.width, self.target + self.width),

@@ -44,7 +44,9 @@ class MultiBangCost(PiecewiseQuadraticCost):
         if given.size < 2:
             raise InputError(f"settings must be at least two, got {given.size}")
         if (np.diff(given) == 0).any():
-            raise InputError(f"settings must differ, but {given[int(np.argmax(np.diff(given) == 0))]} is there twice")
+            raise InputError(
+                f"settings must differ, but {given[int(np.argmax(np.diff(given) == 0))]} is there twice"
+            )
         self.settings, self.alpha = given, scalar(alpha, "alpha", nonnegative=True)
         self.jumps = 0.5 * self.alpha * (given[:-1] + given[1:])
         super().__init__(
@@ -69,11 +71,13 @@ class MultiBangCost(PiecewiseQuadraticCost):
         return self.settings[np.searchsorted(self.jumps, y, side="left")]
 
     def regularised_staircase(self, y: FloatArray, gamma: float) -> FloatArray:
-        """The staircase of g + gamma/2 u^2: ramps of slope 1/gamma from jump_i + gamma u_i to jump_i + gamma u_{i+1}."""
+        """The staircase of g + gamma/2 u^2: slope 1/gamma from jump_i + gamma u_i to jump_i + gamma u_{i+1}."""
         gamma = scalar(gamma, "gamma", positive=True)
         return self.prox(y / gamma, 1.0 / gamma)
 
-    def share_between(self, u: FloatArray, weights: FloatArray | None = None, tolerance: float = 0.0) -> float:
+    def share_between(
+        self, u: FloatArray, weights: FloatArray | None = None, tolerance: float = 0.0
+    ) -> float:
         """The share of the components (of their weights) that are further than `tolerance` from every setting."""
         gap = np.abs(np.asarray(u)[:, None] - self.settings).min(axis=1)
         w = np.ones(gap.shape) if weights is None else weights

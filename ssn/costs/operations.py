@@ -201,10 +201,12 @@ class ScaledCost(_Derived):
 
     @property
     def lower(self) -> Any:
+        """Lower bound of u."""
         return (super().lower if self.stretch > 0 else super().upper) / self.stretch
 
     @property
     def upper(self) -> Any:
+        """Upper bound of u."""
         return (super().upper if self.stretch > 0 else super().lower) / self.stretch
 
     def _inside(self, v: FloatArray, step: float) -> tuple[FloatArray, float]:
@@ -281,10 +283,12 @@ class TranslatedCost(_Derived):
 
     @property
     def lower(self) -> Any:
+        """Lower bound of u."""
         return super().lower + self.shift
 
     @property
     def upper(self) -> Any:
+        """Upper bound of u."""
         return super().upper + self.shift
 
     def check_size(self, size: int) -> None:
@@ -365,7 +369,9 @@ class ConjugateCost(_Derived):
         if not self.convex:
             raise InputError(f"{type(cost).__name__} is not convex: it is not the conjugate of its conjugate")
         if not hasattr(cost, "conjugate_value"):
-            raise InputError(f"the conjugate of {type(cost).__name__} is not known: it has no conjugate_value")
+            raise InputError(
+                f"the conjugate of {type(cost).__name__} is not known: it has no conjugate_value"
+            )
 
     def __repr__(self) -> str:
         return f"ConjugateCost({self.cost!r})"

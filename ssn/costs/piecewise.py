@@ -56,7 +56,9 @@ class PiecewiseQuadraticCost:
     convex = True
     separable = True
     piecewise_affine = True
-    _words: tuple[str, ...] | None = None  # names of piece, kink, piece, ..., for families that have better ones
+    _words: tuple[str, ...] | None = (
+        None  # names of piece, kink, piece, ..., for families that have better ones
+    )
 
     def __init__(
         self,
@@ -85,7 +87,9 @@ class PiecewiseQuadraticCost:
         try:
             shape = np.broadcast_shapes(*shapes)
         except ValueError as error:
-            raise InputError(f"the parameters are for {shapes} unknowns, which do not fit together") from error
+            raise InputError(
+                f"the parameters are for {shapes} unknowns, which do not fit together"
+            ) from error
         if len(shape) > 1:
             raise InputError(f"parameters may vary along one axis, got {shape}")
         if ((at < self.lower) | (at > self.upper)).any():
@@ -304,7 +308,9 @@ class PiecewiseQuadraticCost:
         """
         left, right = self.one_sided_derivatives(u)
         fixed = self.lower == self.upper
-        left = np.where(fixed, self._slopes[0] + self._curvatures[0] * u, np.where(np.isinf(left), right, left))
+        left = np.where(
+            fixed, self._slopes[0] + self._curvatures[0] * u, np.where(np.isinf(left), right, left)
+        )
         right = np.where(np.isinf(right), left, right)
         at_bound = (u <= self.lower) | (u >= self.upper)
         price = np.where(at_bound, np.clip(subgradient, left, right), subgradient)

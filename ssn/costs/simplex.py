@@ -57,26 +57,33 @@ class Simplex(ConvexSet):
     def _support(self, y: FloatArray) -> float:
         return self.total * float(y.max())
 
+    def _gaps(self, v: FloatArray) -> FloatArray:
+        """V - t, measured from the largest component, so that a common offset costs no digit."""
+        gaps = v - v.max()
+        gaps -= threshold(gaps, self.weights, self.total)
+        return gaps
+
     def _project(self, v: FloatArray) -> FloatArray:
-        return np.maximum(v - threshold(v, self.weights, self.total), 0.0)
+        gaps = self._gaps(v)
+        return np.maximum(gaps, 0.0, out=gaps)
 
     def _derivative(self, v: FloatArray) -> LowRankDerivative:
-        active = (v > threshold(v, self.weights, self.total)).astype(np.float64)
+        active = (self._gaps(v) > 0.0).astype(np.float64)
         mass = float((self.weights * active).sum())
         return LowRankDerivative(active, active[:, None], np.array([1.0 / mass]), self.weights)
 
     def pieces(self, v: FloatArray, step: float) -> Pieces:
         """Label each component zero (0) or positive (1)."""
-        labels = (v > threshold(v, self.weights, self.total)).astype(np.int8)
+        labels = (self._gaps(v) > 0.0).astype(np.int8)
         return Pieces({"control": labels}, {"control": ("zero", "positive")})
 
     def margins(self, v: FloatArray, step: float) -> FloatArray:
         """Return the distance of v to where component i changes its label, in the weighted norm, over sqrt(w_i)."""
-        t = threshold(v, self.weights, self.total)
-        active = v > t
+        gaps = self._gaps(v)
+        active = gaps > 0.0
         mass = float((self.weights * active).sum())
         square = 1.0 + np.where(active, -self.weights, self.weights) / mass
-        return distances(v - t, square)
+        return distances(gaps, square)
 
     def _smoothed(self, v: FloatArray, eps: float) -> tuple[FloatArray, LowRankDerivative]:
         w = self.weights

@@ -40,8 +40,8 @@ class SwitchingCost:
 
     Notes
     -----
-    *Inner product.* The sum is sum_i a_i |u_ti|. A problem with weights w needs w_ti = outer_t a_i, with one outer weight
-    an instant (the time step); `value` is then sum_t outer_t beta_t/2 (...)^2, raises `InputError` for other w, and the
+    *Inner product.* The sum is sum_i a_i |u_ti|. A problem with weights w needs w_ti = outer_t a_i, with one outer
+    weight an instant (the time step); `value` is then sum_t outer_t beta_t/2 (...)^2, raises `InputError` for other w, and the
     proximal map minimises step g(u) + 1/2 sum w (u - v)^2. Without weights the outer ones are 1.
 
     *Proximal map.* Soft shrinkage by tau = step beta sum_i a_i |u_i|; the actuators that stay on are the first k in
@@ -75,7 +75,9 @@ class SwitchingCost:
     def check_size(self, size: int) -> None:
         """Raise `InputError` unless `size` is instants times actuators."""
         if size != self.size:
-            raise InputError(f"{type(self).__name__} of shape {self.shape} has {self.size} unknowns, not {size}")
+            raise InputError(
+                f"{type(self).__name__} of shape {self.shape} has {self.size} unknowns, not {size}"
+            )
 
     def check_weights(self, weights: FloatArray) -> None:
         """Raise `InputError` unless the weights are outer times inner ones."""
@@ -137,11 +139,15 @@ class SwitchingCost:
         sign = np.where(labels == POSITIVE, 1.0, np.where(labels == NEGATIVE, -1.0, 0.0))
         return self._derivative(on, sign, sign, step)
 
-    def _derivative(self, kept: FloatArray, sign: FloatArray, shares: FloatArray, step: float) -> GroupDerivative:
+    def _derivative(
+        self, kept: FloatArray, sign: FloatArray, shares: FloatArray, step: float
+    ) -> GroupDerivative:
         """kept - sign t (a sign)' / (1 + t sum a |shares|)."""
         t = self._strength(step)
         factor = t / (1.0 + t * self.groups.sum(self.inner_weights * np.abs(shares)))
-        return GroupDerivative(kept, -self.groups.spread(factor) * sign, self.inner_weights * sign, self.groups)
+        return GroupDerivative(
+            kept, -self.groups.spread(factor) * sign, self.inner_weights * sign, self.groups
+        )
 
     def pieces(self, v: FloatArray, step: float) -> Pieces:
         """Label each actuator at each instant negative, off or positive; free where there is no weight."""
@@ -192,11 +198,13 @@ class SwitchingCost:
         return self._derivative(d_up + d_down, d_up - d_down, d_up + d_down, step)
 
     def multipliers(self, u: FloatArray, subgradient: FloatArray) -> dict[str, FloatArray]:
-        """Return the subgradient as ``switching``: beta sum_j a_j |u_j| sign(u_i) where u_i is on, at most that where off."""
+        """Return the subgradient as ``switching``: beta sum_j a_j |u_j| sign(u_i) where on, at most that where off."""
         return {"switching": 1.0 * subgradient}
 
 
-def _ramps(v: FloatArray, tau: FloatArray, eps: float) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
+def _ramps(
+    v: FloatArray, tau: FloatArray, eps: float
+) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
     """The smoothed max(0, v - tau) and max(0, -v - tau), and their derivatives."""
     x, y = v - tau, -v - tau
     root_x, root_y = np.sqrt(x * x + 4.0 * eps * eps), np.sqrt(y * y + 4.0 * eps * eps)

@@ -5,6 +5,7 @@ from __future__ import annotations
 import time
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
+from functools import partial
 from typing import Any
 
 import numpy as np
@@ -18,6 +19,7 @@ from .certificate import certificate
 from .check import Check, describe, plain
 from .derivative import check_derivative
 from .known import KnownValue, known_values
+from .library_methods import library_methods
 from .method_result import MethodResult, ours
 from .own_methods import Method, Methods, named, run_method
 from .rate import RateVerdict, rate
@@ -126,6 +128,7 @@ def assess(
     agreement_tolerance: float = 1e-6,
     solution: Solution | None = None,
     seed: int = 0,
+    libraries: bool = True,
 ) -> Assessment:
     """Solve a problem and collect the evidence for and against the solution.
 
@@ -153,6 +156,8 @@ def assess(
         To be judged instead of solving.
     seed : int
         Of all random directions.
+    libraries : bool
+        Whether methods of general libraries are asked too, where the problem fits them and they are installed.
 
     Returns
     -------
@@ -175,9 +180,12 @@ def assess(
         seconds = time.perf_counter() - began
     else:
         seconds = float("nan")
+    stated = problem
     problem = judge.judged(problem, solution)
     own = ours(problem, solution, seconds)
     others, checks = _others(problem, solution, own_methods, budget, agreement_tolerance, tell)
+    if libraries:
+        others += _libraries(stated, problem, solution, set(own_methods), budget, tell)
     verdict, note = decide(problem, solution, others, agreement_tolerance)
     tell("measuring the rate")
     speed = _rate(problem, solution, seed)
@@ -238,6 +246,26 @@ def _others(
         if result.x is None:
             checks.append(Check(f"method {name}", False, f"raised {result.note}"))
     return results, checks
+
+
+def _libraries(
+    stated: Any, judged: Any, solution: Solution, taken: set[str], budget: float, tell: Callable[..., Any]
+) -> list[MethodResult]:
+    """Results of library methods on the problem as stated, judged like the others; one that raises is left out."""
+    results = []
+    for name, method in library_methods(stated).items():
+        if name in taken:
+            continue
+        tell(name)
+        result = run_method(judged, solution, name, partial(_on, stated, method), budget=budget)
+        if result.x is not None:
+            results.append(result)
+    return results
+
+
+def _on(stated: Any, method: Method, judged: Any, *, budget: float) -> Any:
+    """Run a method on the problem as stated, whatever problem the result is judged by."""
+    return method(stated, budget=budget)
 
 
 def _solved(solution: Solution) -> Check:

@@ -12,7 +12,9 @@ from .local import EPS, Local
 
 # An error of the derivative below this, relative to the image, is not looked for.
 NEGLIGIBLE = 1e-7
-# growth from one size to the next smaller one (a tenth) that tells an absolute error from a relative one
+# Before an absolute error takes over, a figure this small is enough.
+SMALL = 1e-5
+# Growth from one size to the next smaller one (a tenth) that tells an absolute error from a relative one
 GROWTH = 3.0
 SIZES = tuple(10.0**-k for k in range(1, 8))
 
@@ -147,6 +149,9 @@ def _along(
         rounding.append(max(30.0 * noise / scale, NEGLIGIBLE) if scale > 0.0 else NEGLIGIBLE)
     kept = _without_noise(figures)
     judged = decay(sizes[:kept], figures[:kept], rounding[:kept])
+    least = min(figures[:kept])
+    if kept < len(figures) and least <= SMALL:
+        return True, least, f"is {least:.1e} before an absolute error shows"
     return judged.kind in ("exact", "falls"), judged.last if judged.kind != "exact" else 0.0, judged.reason
 
 

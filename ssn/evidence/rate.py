@@ -81,6 +81,10 @@ class RateVerdict:
         return f"{self.verdict}{order}{where}{worst}; {self.note}"
 
 
+# smaller sizes looked at where the verdict is not clear, and the rounding level that allows one
+FURTHER, CLEAR = 3, 1e-4
+
+
 def rate(
     problem: Any,
     solution: Solution | None = None,
@@ -100,7 +104,7 @@ def rate(
     seed : int
         Of the perturbations.
     deltas : sequence of float
-        Relative sizes, falling, at least three.
+        Relative sizes, falling, at least three; up to three smaller ones follow where the verdict is not clear.
     samples : int
         Rough and as many smooth directions; the first two of each kind are opposite.
     tolerance : float
@@ -139,12 +143,22 @@ def rate(
     floor = _floor(local, best, rng)
     directions = _directions(local, rng, samples)
     worst, rounding, skipped = [], [], 0
-    for delta in sizes:
+    waiting = list(sizes)
+    while waiting:
+        delta = waiting.pop(0)
         q, level, bad = _contraction(local, best, directions, delta * local.reference, floor)
         worst.append(q)
         rounding.append(level)
         skipped += bad
-    judged = decay(sizes, worst, rounding)
+        if waiting:
+            continue
+        judged = decay(sizes, worst, rounding)
+        smaller = 0.1 * delta
+        # a kink may lie nearer to the solution than the smallest size: look further in while rounding allows it
+        unclear = judged.kind in ("levels", "undecided") and len(sizes) < len(deltas) + FURTHER
+        if unclear and 10.0 * floor <= CLEAR * smaller * local.reference:
+            sizes.append(smaller)
+            waiting = [smaller]
     note = f"{local.note}; {len(directions)} perturbations a size"
     if skipped:
         note += f"; {skipped} of them left the domain of the equation"

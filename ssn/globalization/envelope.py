@@ -26,6 +26,7 @@ class EnvelopeSearch:
 
     def advance(self, equation: Any, at: Evaluation, direction: Direction) -> StepOutcome:
         """Return the first trial that lowers the envelope enough; the proximal gradient point if none does."""
+        at = equation.shrink_step(at)  # the envelope is a merit function for steps below 1/L only
         safe = equation.proximal_gradient_point(at)
         target = equation.envelope_target(at, self.sigma)
         evaluations = 0

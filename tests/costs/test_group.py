@@ -20,7 +20,9 @@ def test_two_components_by_hand():
     unit = np.array([0.6, 0.8])
     expected = np.zeros((3, 3))
     expected[:2, :2] = 0.8 * np.eye(2) + 0.2 * np.outer(unit, unit)
-    np.testing.assert_allclose(matrix, expected, atol=1e-15)  # the group of norm 1 is at its kink: derivative 0
+    np.testing.assert_allclose(
+        matrix, expected, atol=1e-15
+    )  # the group of norm 1 is at its kink: derivative 0
     np.testing.assert_allclose(cost.margins(v, 0.5), [4.0, 4.0, 0.0])
     assert cost.value(v) == 12.0
 
@@ -42,10 +44,10 @@ def test_groups_of_one_are_sparse_costs():
     rng = np.random.default_rng(1)
     v, beta = 3 * rng.standard_normal(50), rng.uniform(0, 2, 50)
     lower, upper = -rng.uniform(-0.5, 2, 50), 2 + rng.uniform(0, 2, 50)
-    one = ssn.GroupSparseCost(beta, np.arange(50), lower=lower, upper=upper, inner_weights=rng.uniform(1, 1, 50))
-    np.testing.assert_allclose(
-        one.prox(v, 0.8), ssn.SparseCost(beta, lower, upper).prox(v, 0.8), atol=1e-14
+    one = ssn.GroupSparseCost(
+        beta, np.arange(50), lower=lower, upper=upper, inner_weights=rng.uniform(1, 1, 50)
     )
+    np.testing.assert_allclose(one.prox(v, 0.8), ssn.SparseCost(beta, lower, upper).prox(v, 0.8), atol=1e-14)
 
 
 def test_prox_minimises_the_weighted_functional():
@@ -62,7 +64,9 @@ def test_prox_minimises_the_weighted_functional():
         return step * 0.9 * mass @ norms + 0.5 * weights @ (u - v) ** 2
 
     u = cost.prox(v, step)
-    assert step * cost.value(u, weights) + 0.5 * weights @ (u - v) ** 2 == pytest.approx(objective(u), rel=1e-14)
+    assert step * cost.value(u, weights) + 0.5 * weights @ (u - v) ** 2 == pytest.approx(
+        objective(u), rel=1e-14
+    )
     found = minimize(objective, np.clip(v, -0.8, 0.6), bounds=[(-0.8, 0.6)] * v.size, method="L-BFGS-B",
                      options={"ftol": 1e-15, "gtol": 1e-10, "maxiter": 10000})  # fmt: skip
     assert objective(u) <= found.fun + 1e-12
@@ -101,7 +105,7 @@ def test_many_groups_without_a_loop():
     assert time.perf_counter() - begin < 10.0
     r = np.linalg.norm(u.reshape(shape), axis=0)
     nonzero = r > 0
-    assert 0 < nonzero.sum()
+    assert nonzero.sum() > 0
     # optimality, with the bound forces of the right sign
     force = (v - u).reshape(shape)[:, nonzero] - 5.0 * u.reshape(shape)[:, nonzero] / r[nonzero]
     inside = u.reshape(shape)[:, nonzero]
@@ -125,8 +129,14 @@ def test_many_groups_without_a_loop():
         (lambda: ssn.GroupSparseCost(1.0, [0.0, 1.0]), "groups"),
         (lambda: ssn.GroupSparseCost([1.0, -1.0], [0, 1]), "beta must not be negative.*index 1"),
         (lambda: ssn.GroupSparseCost([1.0, 1.0, 1.0], [0, 1]), r"beta has shape \(3,\) for 2 groups"),
-        (lambda: ssn.GroupSparseCost(1.0, [0, 1], inner_weights=[1.0, 0.0]), "inner_weights must be positive"),
-        (lambda: ssn.GroupSparseCost(1.0, [0, 1], inner_weights=[1.0] * 3), r"inner_weights has shape \(3,\)"),
+        (
+            lambda: ssn.GroupSparseCost(1.0, [0, 1], inner_weights=[1.0, 0.0]),
+            "inner_weights must be positive",
+        ),
+        (
+            lambda: ssn.GroupSparseCost(1.0, [0, 1], inner_weights=[1.0] * 3),
+            r"inner_weights has shape \(3,\)",
+        ),
         (lambda: ssn.GroupSparseCost(1.0, [0, 1], lower=[0.0] * 3), r"lower has shape \(3,\)"),
         (lambda: ssn.GroupSparseCost(1.0, [0, 1], lower=2.0, upper=1.0), "no value lies between"),
         (lambda: ssn.GroupSparseCost(1.0, shape=(2, 2), axis=2), "axis must be one of the 2 axes"),

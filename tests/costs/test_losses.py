@@ -8,8 +8,14 @@ import ssn
 U = np.linspace(-4, 4, 161)
 CASES = [
     (ssn.ElasticNetCost(0.5, 2.0), lambda u: 0.5 * np.abs(u) + u**2),
-    (ssn.ElasticNetCost(0.5, 0.0, -1.0, 2.0), lambda u: 0.5 * np.abs(u) + np.where((u < -1) | (u > 2), np.inf, 0)),
-    (ssn.ElasticNetCost(0.5, 1.0, 1.0, 2.0), lambda u: 0.5 * u + u**2 / 2 + np.where((u < 1) | (u > 2), np.inf, 0)),
+    (
+        ssn.ElasticNetCost(0.5, 0.0, -1.0, 2.0),
+        lambda u: 0.5 * np.abs(u) + np.where((u < -1) | (u > 2), np.inf, 0),
+    ),
+    (
+        ssn.ElasticNetCost(0.5, 1.0, 1.0, 2.0),
+        lambda u: 0.5 * u + u**2 / 2 + np.where((u < 1) | (u > 2), np.inf, 0),
+    ),
     (
         ssn.HuberCost(3.0, 0.5, 1.0),
         lambda u: 3 * np.where(np.abs(u - 1) <= 0.5, (u - 1) ** 2, np.abs(u - 1) - 0.25),

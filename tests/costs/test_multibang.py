@@ -61,13 +61,21 @@ def test_labels_name_the_settings():
     v = np.array([-1.0, 0.7, 1.5, 3.0, 9.0])
     np.testing.assert_allclose(cost.prox(v, 1.0), [0, 0.2, 1.0, 1.5, 2.0])
     sizes = cost.pieces(v, 1.0).sizes()["control"]
-    assert sizes == {"setting 1": 1, "between 1 and 2": 1, "setting 2": 1, "between 2 and 3": 1, "setting 3": 1}
+    assert sizes == {
+        "setting 1": 1,
+        "between 1 and 2": 1,
+        "setting 2": 1,
+        "between 2 and 3": 1,
+        "setting 3": 1,
+    }
     assert cost.share_between(cost.prox(v, 1.0)) == pytest.approx(0.4)
     assert cost.share_between(cost.prox(v, 1.0), np.array([1.0, 2, 1, 1, 3])) == pytest.approx(3 / 8)
 
 
 def test_two_settings_and_no_weight():
-    np.testing.assert_array_equal(ssn.MultiBangCost([1.0, -1.0], 0.0).prox(np.array([0.3, 4.0]), 1.0), [0.3, 1.0])
+    np.testing.assert_array_equal(
+        ssn.MultiBangCost([1.0, -1.0], 0.0).prox(np.array([0.3, 4.0]), 1.0), [0.3, 1.0]
+    )
 
 
 @pytest.mark.parametrize(
@@ -77,7 +85,10 @@ def test_two_settings_and_no_weight():
         (lambda: ssn.MultiBangCost([1.0, 0.0, 1.0], 1.0), "1.0 is there twice"),
         (lambda: ssn.MultiBangCost([0.0, 1.0], -1.0), "alpha must not be negative"),
         (lambda: ssn.MultiBangCost([[0.0, 1.0]], 1.0), "settings must have 1 dimension"),
-        (lambda: ssn.MultiBangCost([0.0, 1.0], 1.0).regularised_staircase(np.zeros(1), 0.0), "gamma must be positive"),
+        (
+            lambda: ssn.MultiBangCost([0.0, 1.0], 1.0).regularised_staircase(np.zeros(1), 0.0),
+            "gamma must be positive",
+        ),
     ],
 )
 def test_unusable_parameters_are_named(make, message):

@@ -24,8 +24,11 @@ SAME = [
         ssn.PiecewiseQuadraticCost([0.0], [-0.5, 2.0]),
     ),
     (ssn.ConjugateCost(ssn.ConjugateCost(ssn.QuantileLoss(0.8, 1.0))), ssn.QuantileLoss(0.8, 1.0)),
-    (ssn.ConjugateCost(ssn.ElasticNetCost(0.5, 2.0)), ssn.PiecewiseQuadraticCost([-0.5, 0.5], [0.25, 0, -0.25], [0.5, 0, 0.5])),
-]  # fmt: skip
+    (
+        ssn.ConjugateCost(ssn.ElasticNetCost(0.5, 2.0)),
+        ssn.PiecewiseQuadraticCost([-0.5, 0.5], [0.25, 0.0, -0.25], [0.5, 0.0, 0.5]),
+    ),
+]
 
 
 @pytest.mark.parametrize(("made", "plain"), SAME, ids=[repr(s[0]) for s in SAME])
@@ -35,7 +38,9 @@ def test_same_cost_in_one_formula(made, plain):
         np.testing.assert_allclose(made.prox(V, step), plain.prox(V, step), atol=1e-14)
         away &= np.minimum(made.margins(V, step), plain.margins(V, step)) > 1e-9
         np.testing.assert_allclose(
-            made.prox_derivative(V, step).diagonal[away], plain.prox_derivative(V, step).diagonal[away], atol=1e-14
+            made.prox_derivative(V, step).diagonal[away],
+            plain.prox_derivative(V, step).diagonal[away],
+            atol=1e-14,
         )
         np.testing.assert_allclose(made.margins(V, step), plain.margins(V, step), atol=1e-13)
         u = plain.prox(V, step)
@@ -57,13 +62,17 @@ def test_the_conjugate_of_a_sum_is_an_envelope():
     bang = ssn.MultiBangCost([-1.0, 0.0, 2.0], 1.0)
     summed, h = ssn.SumWithQuadratic(bang, 0.1), 1e-6
     for y in (-0.7, -0.55, 0.3, 1.05, 1.12, 3.0):
-        slope = (summed.conjugate_value(np.array([y + h])) - summed.conjugate_value(np.array([y - h]))) / (2 * h)
+        slope = (summed.conjugate_value(np.array([y + h])) - summed.conjugate_value(np.array([y - h]))) / (
+            2 * h
+        )
         assert slope == pytest.approx(bang.regularised_staircase(np.array([y]), 0.1)[0], abs=1e-5)
 
 
 def test_operations_on_operations_and_coupled_costs():
     inside = ssn.GroupSparseCost(0.8, [0, 0, 1, 1], inner_weights=[1.0, 2.0, 1.0, 0.5], upper=1.0)
-    cost = ssn.TranslatedCost(ssn.ScaledCost(ssn.SumWithQuadratic(inside, 0.5), 2.0, -0.5), [1.0, 0.0, 2.0, -1.0])
+    cost = ssn.TranslatedCost(
+        ssn.ScaledCost(ssn.SumWithQuadratic(inside, 0.5), 2.0, -0.5), [1.0, 0.0, 2.0, -1.0]
+    )
     assert not cost.separable and not cost.piecewise_affine and cost.size == 4
     np.testing.assert_array_equal(cost.lower, [-1.0, -2.0, 0.0, -3.0])
     rng = np.random.default_rng(0)
@@ -81,7 +90,10 @@ def test_operations_on_operations_and_coupled_costs():
     [
         (lambda: ssn.SumWithQuadratic(3.0, 1.0), "cost must have the members of ssn.Cost, got float"),
         (lambda: ssn.SumWithQuadratic(ssn.SparseCost(1.0), -1.0), "gamma must not be negative"),
-        (lambda: ssn.SumWithQuadratic(ssn.SparseCost(1.0), 1.0, [0.0, 0.0]).check_size(3), "centre has shape"),
+        (
+            lambda: ssn.SumWithQuadratic(ssn.SparseCost(1.0), 1.0, [0.0, 0.0]).check_size(3),
+            "centre has shape",
+        ),
         (lambda: ssn.ScaledCost(ssn.SparseCost(1.0), -1.0), "factor must be positive"),
         (lambda: ssn.ScaledCost(ssn.SparseCost(1.0), 1.0, 0.0), "stretch must not be zero"),
         (lambda: ssn.TranslatedCost(ssn.SparseCost(1.0), [[1.0]]), "shift must be a number or"),

@@ -101,7 +101,10 @@ def test_conjugate_of_the_dead_zone():
         (lambda: ssn.PiecewiseQuadraticCost([0.0], [1.0]), "1 breakpoints make 2 pieces, but slopes has 1"),
         (lambda: ssn.PiecewiseQuadraticCost([0.0], [0, 1], [0.0]), "but curvatures has 1"),
         (lambda: ssn.PiecewiseQuadraticCost([1.0, 1.0], [0, 1, 2]), "breakpoints must increase"),
-        (lambda: ssn.PiecewiseQuadraticCost([0.0], [0, 1], [0, -1]), "curvatures must not be negative.*index 1"),
+        (
+            lambda: ssn.PiecewiseQuadraticCost([0.0], [0, 1], [0, -1]),
+            "curvatures must not be negative.*index 1",
+        ),
         (lambda: ssn.PiecewiseQuadraticCost([np.nan], [0, 1]), r"breakpoints\[0\] is nan"),
         (lambda: ssn.PiecewiseQuadraticCost([], [0], lower=1, upper=0), "no value lies between"),
         (lambda: ssn.PiecewiseQuadraticCost([], [0], lower=1, value_at=(0, 0)), "point of the domain"),

@@ -36,7 +36,9 @@ def test_off_exactly_where_the_pointwise_condition_says(actuators):
 
 def test_a_larger_weight_leaves_fewer_on():
     v = np.random.default_rng(5).standard_normal(400)
-    counts = [np.count_nonzero(ssn.SwitchingCost(b, (100, 4)).prox(v, 1.0)) for b in (1e-3, 0.1, 1.0, 10.0, 1e3)]
+    counts = [
+        np.count_nonzero(ssn.SwitchingCost(b, (100, 4)).prox(v, 1.0)) for b in (1e-3, 0.1, 1.0, 10.0, 1e3)
+    ]
     assert counts == sorted(counts, reverse=True)
     assert counts[0] > 380 and counts[-1] == 100
 
@@ -54,7 +56,9 @@ def test_prox_minimises_the_weighted_functional():
         return step * outer @ (np.array([0.75, 0.2]) * sums**2) + 0.5 * weights @ (u - v) ** 2
 
     u = cost.prox(v, step)
-    assert step * cost.value(u, weights) + 0.5 * weights @ (u - v) ** 2 == pytest.approx(objective(u), rel=1e-14)
+    assert step * cost.value(u, weights) + 0.5 * weights @ (u - v) ** 2 == pytest.approx(
+        objective(u), rel=1e-14
+    )
     for _ in range(300):
         other = u + 10.0 ** rng.uniform(-6, 0) * rng.standard_normal(6)
         assert objective(other) >= objective(u) + 0.4999999 * weights @ (other - u) ** 2 - 1e-15

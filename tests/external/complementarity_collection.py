@@ -43,8 +43,6 @@ class Published:
         Whether the list holds every solution (proved by enumeration, uniqueness or the source).
     caution : str
         What is known to be hard about it.
-    parts : tuple of str
-        What the solution set is where it is not a list of points ("ray": `member` decides).
     member : callable, optional
         x -> distance to the solution set, where it is not a list of points.
     """
@@ -75,7 +73,7 @@ class Published:
         return self.box[0] + (self.box[1] - self.box[0]) * rng.random((number, self.size))
 
     def residual(self, x: np.ndarray) -> float:
-        """max |mid(x - upper, x - lower, F)|, F divided by max(1, sum |F'_ij|) of its row: independent of the kernel."""
+        """max |mid(x - upper, x - lower, F)|, F divided by max(1, sum |F'_ij|) of its row; shares nothing with ssn."""
         with np.errstate(all="ignore"):
             force = self.value(x)
             derivative = self.derivative(x)

@@ -99,7 +99,10 @@ def test_the_perpetual_put_is_near_its_exact_value():
 
 
 # Starts of the first 20 from which no solution is found, by problem, with the outcome: nothing else may fail.
-FAILURES: dict[str, dict[str, int]] = {}
+FAILURES: dict[str, dict[str, int]] = {
+    "Hock-Schittkowski 2": {"step limit": 1},  # Rosenbrock's valley: the residual must rise on the way
+    "Hock-Schittkowski 100": {"step limit": 1},  # curvature vanishes at zero, several ways use up 100 steps
+}
 
 
 @pytest.mark.parametrize("name", PROBLEMS)
