@@ -87,7 +87,8 @@ def measure(
         tally.wrong_claims += solution.converged and not right
         if solution.converged and right:
             tally.steps.append(len(solution.steps))
-            tally.listed += not published.solutions or published.distance(solution.x) <= (1e-2 if published.member else 1e-3)
+            near = 1e-2 if published.member else 1e-3
+            tally.listed += not published.solutions or published.distance(solution.x) <= near
         else:
             tally.failures[solution.outcome.value] += 1
             tally.failed_starts.append(index)

@@ -72,7 +72,7 @@ def follow_smoothing(
 ) -> LoopResult:
     """Run the path for an equation with ``smoothed(eps)``; the best plain evaluation is returned."""
     follower = _Follower(equation, make_solver, start, limits, path, callback, first_index)
-    return follower.result if follower.ended else follower.all_ways()
+    return follower.result if follower.done() else follower.all_ways()
 
 
 class _Follower:
@@ -95,8 +95,8 @@ class _Follower:
         self.start = at.x
         self.most = limits.max_steps
         self.result = LoopResult(at, at, Outcome.STALLED, "", start_norm=at.norm, start_accuracy=at.accuracy)
-        self.ended = not at.finite
-        if self.ended:
+        self._ended = not at.finite
+        if not at.finite:
             self.result.outcome = Outcome.NOT_FINITE
             self.result.message = "the residual at the start is NaN or infinite"
 
@@ -109,24 +109,28 @@ class _Follower:
             return result
         hard_points = 2 if equation.piecewise_affine else 1
         self._follow(equation, self.start, first, self.limits.max_steps, "", hard_points)
-        if self.ended:
+        if self.done():
             return result
         self.most = max(1, int(WAYS_SHARE * self.limits.max_steps))
         way = "plain steps from the start"
         self._plain(equation, self.start, PLAIN_STEPS, way)
-        if self.ended:
+        if self.done():
             return result
         other = equation.other_form()
         other.rescale(self.start)
         first = other.smoothing_scale(other.evaluate(self.start))
         self._follow(other, self.start, first, WAY_STEPS, f"{other.form}, ")
         for size in self.path.interior:
-            if self.ended:
+            if self.done():
                 break
             distance = size * max(1.0, equation.typical(self.start))
             inside = equation.interior(self.start, distance)
             self._follow(other, inside, distance, WAY_STEPS, f"{other.form} from inside the bounds, ")
         return result
+
+    def done(self) -> bool:
+        """Whether the solve has ended: settled, stopped, or out of steps."""
+        return self._ended
 
     def _left(self) -> int:
         return max(0, self.most - len(self.result.steps))
@@ -152,7 +156,7 @@ class _Follower:
         _rescaled(equation, x)
         solver = self.make_solver(equation)
         last_step = len(self.result.steps) + steps
-        while not self.ended:
+        while not self.done():
             left = last_step - len(self.result.steps)
             part = self._stage(equation, solver, FullStep(), x, replace(self.limits, max_steps=left), name)
             unconfirmed = self._keep(equation, part)
@@ -175,10 +179,10 @@ class _Follower:
             result.best = part.best
         if part.outcome in ENDS:
             result.outcome, result.message, result.last = part.outcome, part.message, part.last
-            self.ended = True
+            self._ended = True
         elif self._left() <= 0:
             result.outcome, result.message = Outcome.STEP_LIMIT, f"{len(result.steps)} steps taken"
-            self.ended = True
+            self._ended = True
         return unconfirmed
 
     def _follow(
@@ -190,7 +194,7 @@ class _Follower:
         solver = self.make_solver(equation)
         smoothed_solver: Any = None
         first, hard = eps, 0
-        while not self.ended:
+        while not self.done():
             at = x
             while True:  # plain steps, as long as they contract
                 _rescaled(equation, at)
@@ -198,7 +202,7 @@ class _Follower:
                 one = replace(self.limits, max_steps=1)
                 part = self._stage(equation, solver, FullStep(), at, one, f"{way}eps = 0")
                 self._keep(equation, part)
-                if self.ended:
+                if self.done():
                     return
                 contracted = bool(part.steps) and part.last.norm <= path.contraction * previous
                 if not contracted:
@@ -215,7 +219,7 @@ class _Follower:
             part = self._stage(smoothed, smoothed_solver, search, x, point, f"{way}eps = {eps:.1e}")
             if part.outcome in (Outcome.STOPPED, Outcome.INTERRUPTED):
                 result.outcome, result.message = part.outcome, part.message
-                self.ended = True
+                self._ended = True
                 return
             result.outcome = Outcome.STALLED
             result.message = f"{way}the smoothing path makes no progress at eps = {eps:.1e}"
@@ -225,7 +229,7 @@ class _Follower:
             if self._left() <= 0:
                 result.outcome = Outcome.STEP_LIMIT
                 result.message = f"{len(result.steps)} steps taken"
-                self.ended = True
+                self._ended = True
                 return
             x = part.last.x
             hard = 0 if part.outcome is Outcome.CONVERGED else hard + 1

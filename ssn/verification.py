@@ -102,4 +102,6 @@ def study(
     progress: Callable[..., Any] | None = None,
 ) -> MeshStudy:
     """Solve the problem of a file on several meshes, see `ssn.evidence.mesh_study`."""
-    return mesh_study(file.build, sizes, parameters=parameters, known=file.known, progress=progress)
+    return mesh_study(
+        file.build, sizes, parameters=parameters, known=file.known, transfer=file.transfer, progress=progress
+    )

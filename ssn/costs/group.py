@@ -53,8 +53,8 @@ class GroupSparseCost:
 
     *Proximal map.* Without bounds max(0, 1 - step beta/||v_g||) v_g. With bounds
     u_i = clip(v_i r/(r + step beta), lower_i, upper_i), r = ||u_g||, one monotone scalar equation a group; u_g = 0
-    where zero is within the bounds and the part of v_g that points into them is not longer than step beta. The derivative is
-    the inverse of I + step beta Hess ||.|| on the components that are not clipped, a multiple of the identity plus a
+    where zero is within the bounds and the part of v_g that points into them is not longer than step beta. The
+    derivative is the inverse of I + step beta Hess ||.|| on the components that are not clipped, a multiple of the identity plus a
     rank-one term.
 
     *Selection* at kinks: zero groups and clipped components own theirs (derivative 0).
@@ -178,7 +178,7 @@ class GroupSparseCost:
             settled = (np.abs(newton - safe) <= 2e-15 * safe) | (np.abs(rest) <= 1e-15 * safe)
             inside = ((newton >= low) & (newton <= high)) | settled
             following = np.where(inside, newton, 0.5 * (low + high))
-            done = settled | (rest == 0.0) | (np.abs(following - r) <= 4e-16 * r) | (high - low <= 4e-16 * high)
+            done = settled | (np.abs(following - r) <= 4e-16 * r) | (high - low <= 4e-16 * high)
             r = np.where(open_, np.where(rest == 0.0, r, following), r)
             open_ &= ~done
         return np.where(zero, 0.0, r)

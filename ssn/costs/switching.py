@@ -41,8 +41,8 @@ class SwitchingCost:
     Notes
     -----
     *Inner product.* The sum is sum_i a_i |u_ti|. A problem with weights w needs w_ti = outer_t a_i, with one outer
-    weight an instant (the time step); `value` is then sum_t outer_t beta_t/2 (...)^2, raises `InputError` for other w, and the
-    proximal map minimises step g(u) + 1/2 sum w (u - v)^2. Without weights the outer ones are 1.
+    weight an instant (the time step); `value` is then sum_t outer_t beta_t/2 (...)^2, raises `InputError` for other w,
+    and the proximal map minimises step g(u) + 1/2 sum w (u - v)^2. Without weights the outer ones are 1.
 
     *Proximal map.* Soft shrinkage by tau = step beta sum_i a_i |u_i|; the actuators that stay on are the first k in
     the order of |v_i|, and tau_k = step beta sum_j<=k a_j |v_j| / (1 + step beta sum_j<=k a_j). The derivative is the

@@ -77,8 +77,9 @@ class MidEquation(NaturalEquation):
             return at if not np.isfinite(x).all() or (inside == x).all() else self._evaluate_here(inside)
 
     def _evaluate_here(self, x: FloatArray) -> Evaluation:
+        on_given_pieces = self.first_pieces is not None
         at = super().evaluate(x)
-        if self.eps > 0.0 or not at.finite:
+        if self.eps > 0.0 or on_given_pieces or not at.finite:
             return at
         residual = mid_residual(x, at.data.step * at.data.force, self.lower, self.upper)
         norm = self.inner.norm(residual)
@@ -191,6 +192,8 @@ class FischerBurmeisterEquation(MidEquation):
     form = "Fischer-Burmeister"
 
     def _evaluate_here(self, x: FloatArray) -> Evaluation:
+        if self.first_pieces is not None:  # a warm start: both forms have the same system on given pieces
+            return super()._evaluate_here(x)
         self.work.operator_products += 1
         force = self.map.value(x)
         if not np.isfinite(force).all():

@@ -183,7 +183,9 @@ def assess(
     stated = problem
     problem = judge.judged(problem, solution)
     own = ours(problem, solution, seconds)
-    others, checks = _others(problem, solution, own_methods, budget, agreement_tolerance, tell)
+    # at the last penalty of hard state bounds no first-order method gets anywhere: it may try, briefly
+    patience = min(budget, 2.0) if getattr(stated, "state_bounded", False) else budget
+    others, checks = _others(problem, solution, own_methods, patience, agreement_tolerance, tell)
     if libraries:
         others += _libraries(stated, problem, solution, set(own_methods), budget, tell)
     verdict, note = decide(problem, solution, others, agreement_tolerance)

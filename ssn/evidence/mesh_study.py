@@ -65,11 +65,15 @@ class MeshStudy:
     mesh_independent : bool or None
         See `mesh_independent`; None for fewer than two meshes.
     note : str
+    nested_steps : tuple of int
+        Steps on each mesh when every one starts from the solution on the mesh before; asked for where the steps from
+        the problem's own start grow and the file has a transfer. The verdict is then about these, and the note says so.
     """
 
     rows: tuple[MeshRow, ...]
     mesh_independent: bool | None
     note: str
+    nested_steps: tuple[int, ...] = ()
 
     @property
     def holds(self) -> bool:
@@ -92,6 +96,7 @@ class MeshStudy:
             "rows": [row.as_dict() for row in self.rows],
             "mesh_independent": self.mesh_independent,
             "note": self.note,
+            "nested_steps": list(self.nested_steps),
         }
 
 
@@ -101,10 +106,11 @@ def mesh_study(
     *,
     parameters: Mapping[str, Any] | None = None,
     known: Callable[[Any, Solution], Any] | None = None,
+    transfer: Callable[[Any, Any], Callable[..., Any]] | None = None,
     progress: Callable[..., Any] | None = None,
     tolerance: float = 1e-9,
 ) -> MeshStudy:
-    """Solve a problem on several meshes, each from its own start.
+    """Solve a problem on several meshes, each from its own start; where steps grow, again from mesh to mesh.
 
     Parameters
     ----------
@@ -116,6 +122,8 @@ def mesh_study(
         The other parameters.
     known : callable, optional
         ``known(problem, solution)`` of the problem file.
+    transfer : callable, optional
+        ``transfer(coarse_problem, fine_problem)`` of the problem file: a function that carries the unknown over.
     progress : callable, optional
         Gets a text about what is being done.
     tolerance : float
@@ -154,7 +162,41 @@ def mesh_study(
             )
         )
     independent, note = mesh_independent([row.steps for row in rows], [row.converged for row in rows])
-    return MeshStudy(tuple(rows), independent, note)
+    if independent is not False or transfer is None or not all(row.converged for row in rows):
+        return MeshStudy(tuple(rows), independent, note)
+    nested = _nested_steps(build, sizes, others, transfer, progress, tolerance)
+    if nested is None:
+        return MeshStudy(tuple(rows), False, f"{note}; not solved from mesh to mesh")
+    independent, own = mesh_independent(nested[1:], [True] * (len(nested) - 1))
+    return MeshStudy(
+        tuple(rows), independent, f"{note}; each started from the mesh before: {own}", tuple(nested)
+    )
+
+
+def _nested_steps(
+    build: Callable[..., Any],
+    sizes: Sequence[int],
+    parameters: Mapping[str, Any],
+    transfer: Callable[[Any, Any], Callable[..., Any]],
+    progress: Callable[..., Any] | None,
+    tolerance: float,
+) -> list[int] | None:
+    """Steps on each mesh, the first from its own start and the others from the mesh before; None after a failure."""
+    steps: list[int] = []
+    coarse: Any = None
+    start: Any = None
+    for n in sizes:
+        if progress is not None:
+            progress(f"n = {n}, from the mesh before")
+        problem = build(n=n, **parameters)
+        if coarse is not None:
+            start = transfer(coarse, problem)(start)
+        solution = solve(problem, start, tolerance=tolerance)
+        if not solution.converged:
+            return None
+        steps.append(len(solution.steps))
+        coarse, start = problem, solution.x
+    return steps
 
 
 def mesh_independent(steps: Sequence[int], converged: Sequence[bool]) -> tuple[bool | None, str]:

@@ -150,6 +150,8 @@ def _row(verified: Verified) -> list[Text]:
     order = f" ({a.rate.order:.2f})" if a.rate.verdict == "superlinear" and a.rate.order else ""
     steps = "-" if v.study is None else ", ".join(str(row.steps) for row in v.study.rows)
     independent = {True: "yes", False: "no", None: "-"}[v.mesh_independent]
+    if independent == "yes" and v.study is not None and v.study.nested_steps:
+        independent = "nested: " + ", ".join(map(str, v.study.nested_steps))
     conclusion = (
         Text("holds", STYLES[HOLDS]) if v.holds else Text(f"not: {', '.join(v.weak_points())}", STYLES[FAILS])
     )
@@ -226,9 +228,14 @@ def verify_figure(verified: Verified) -> Any:
         _say(right, v.note.replace(": ", ":\n", 1))
     else:
         word = {True: "yes", False: "no", None: "not known"}[v.mesh_independent]
+        if v.study.nested_steps:
+            word += ", from mesh to mesh"
         right.set_title(f"independent of the mesh: {word}")
         sizes, steps = zip(*((row.n, row.steps) for row in v.study.rows), strict=True)
         right.plot(sizes, steps, "o-")
+        if v.study.nested_steps:
+            right.plot(sizes, v.study.nested_steps, "s--", label="from the mesh before")
+            right.legend(frameon=False)
         failed = [(row.n, row.steps) for row in v.study.rows if not row.converged]
         if failed:
             right.plot(*zip(*failed, strict=True), "x", color="C3", ms=11, label="not converged")

@@ -92,3 +92,22 @@ def test_one_mesh_is_not_applicable():
 def test_sizes_must_rise(sizes):
     with pytest.raises(ssn.InputError, match="rise"):
         mesh_study(lambda n: cases.control(n), sizes)
+
+
+def test_growth_from_zero_is_judged_again_from_mesh_to_mesh():
+    """Obstacle problems move the contact set by a layer a step from afar, and hardly from the mesh before."""
+    from pathlib import Path
+
+    from ssn.problem_file import load
+
+    file = load(Path(__file__).parents[2] / "problems" / "obstacle.py")
+    alone = mesh_study(file.build, [32, 64, 128])
+    assert alone.mesh_independent is False and not alone.nested_steps
+    study = mesh_study(file.build, [32, 64, 128], transfer=file.transfer)
+    assert study.mesh_independent is True and "from the mesh before" in study.note
+    assert len(study.nested_steps) == 3 and max(study.nested_steps[1:]) <= 5
+    assert study.as_dict()["nested_steps"] == list(study.nested_steps)
+    bad = mesh_study(
+        file.build, [32, 64, 128], transfer=lambda coarse, fine: lambda x: np.full(fine.unknowns, 50.0)
+    )
+    assert bad.mesh_independent is False
