@@ -266,12 +266,11 @@ def _finish_complementarity(plan: Plan, result: LoopResult) -> tuple[FloatArray,
     if best.data is None:
         return best.x, float("inf"), {}
     x = np.clip(best.x, problem.lower, problem.upper)
-    force = problem.value(x)
+    with np.errstate(all="ignore"):  # the point may lie where F is not defined; then the accuracy says so
+        force = problem.value(x)
     step = problem.row_step(x)  # at the returned point: F' may have changed since the start
     residual = mid_residual(x, step * force, problem.lower, problem.upper)
-    accuracy = relative(
-        float(np.linalg.norm(residual)), plan.equation.size_of(x)
-    )
+    accuracy = relative(float(np.linalg.norm(residual)), plan.equation.size_of(x))
     v = x - step * force
     pieces = problem.cost.pieces(v, 1.0)
     on_bound = pieces["control"] != 1

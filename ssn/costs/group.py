@@ -54,8 +54,8 @@ class GroupSparseCost:
     *Proximal map.* Without bounds max(0, 1 - step beta/||v_g||) v_g. With bounds
     u_i = clip(v_i r/(r + step beta), lower_i, upper_i), r = ||u_g||, one monotone scalar equation a group; u_g = 0
     where zero is within the bounds and the part of v_g that points into them is not longer than step beta. The
-    derivative is the inverse of I + step beta Hess ||.|| on the components that are not clipped, a multiple of the identity plus a
-    rank-one term.
+    derivative is the inverse of I + step beta Hess ||.|| on the components that are not clipped, a multiple of the
+    identity plus a rank-one term.
 
     *Selection* at kinks: zero groups and clipped components own theirs (derivative 0).
 

@@ -156,7 +156,11 @@ class MidEquation(NaturalEquation):
         smooth = FischerBurmeister(self)
         derivative = smooth.derivative(at.x)
         residual = smooth.evaluate(at.x).residual
-        if isinstance(derivative, LinearOperator) or not _finite(derivative) or not np.isfinite(residual).all():
+        if (
+            isinstance(derivative, LinearOperator)
+            or not _finite(derivative)
+            or not np.isfinite(residual).all()
+        ):
             return False
         gradient = transpose_product(derivative, residual)
         reach = 1.0 + float(np.linalg.norm(at.x))
@@ -296,8 +300,12 @@ class FischerBurmeister:
 def inside_bounds(x: FloatArray, lower: FloatArray, upper: FloatArray, distance: float) -> FloatArray:
     """The nearest point at least `distance` max(1, |bound|) inside the bounds, or halfway where they are closer."""
     room = 0.5 * (upper - lower)
-    low = lower + np.minimum(distance * np.maximum(1.0, np.where(np.isfinite(lower), np.abs(lower), 0.0)), room)
-    high = upper - np.minimum(distance * np.maximum(1.0, np.where(np.isfinite(upper), np.abs(upper), 0.0)), room)
+    low = lower + np.minimum(
+        distance * np.maximum(1.0, np.where(np.isfinite(lower), np.abs(lower), 0.0)), room
+    )
+    high = upper - np.minimum(
+        distance * np.maximum(1.0, np.where(np.isfinite(upper), np.abs(upper), 0.0)), room
+    )
     return np.clip(x, low, high)
 
 

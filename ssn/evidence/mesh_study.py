@@ -140,13 +140,16 @@ def mesh_study(
     if not sizes or any(b <= a for a, b in pairwise(sizes)):
         raise InputError(f"sizes must rise, got {list(sizes)}")
     others = {key: value for key, value in (parameters or {}).items() if key != "n"}
-    rows = []
+    rows: list[MeshRow] = []
+    points: list[int] = []
     for n in sizes:
         if progress is not None:
             progress(f"n = {n}")
         problem = build(n=n, **others)
         solution = solve(problem, tolerance=tolerance)
         values, checks = known_values(known, problem, solution)
+        if getattr(problem, "state_bounded", False):
+            points.append(len({record.stage for record in solution.steps}))
         rows.append(
             MeshRow(
                 n=int(n),
@@ -161,7 +164,14 @@ def mesh_study(
                 failures=tuple(check.detail for check in checks if not check.holds),
             )
         )
-    independent, note = mesh_independent([row.steps for row in rows], [row.converged for row in rows])
+    counts = [row.steps for row in rows]
+    solved = [row.converged for row in rows]
+    independent, note = mesh_independent(counts, solved)
+    if independent is False and points and all(solved):
+        # hard state bounds: a finer mesh needs a larger last penalty, and so more points of the path
+        each = [-(-steps // max(1, p)) for steps, p in zip(counts, points, strict=True)]
+        independent, own = mesh_independent(each, solved)
+        note = f"{note}; over {', '.join(map(str, points))} penalties, at each of them: {own}"
     if independent is not False or transfer is None or not all(row.converged for row in rows):
         return MeshStudy(tuple(rows), independent, note)
     nested = _nested_steps(build, sizes, others, transfer, progress, tolerance)

@@ -128,7 +128,9 @@ def _box(n: int, low: float, high: float) -> tuple[np.ndarray, np.ndarray]:
 # --- polynomial examples ------------------------------------------------------------------------------------------
 
 
-def _kojima_value(third: float, constants: tuple[float, ...], fourth: float) -> Callable[[np.ndarray], np.ndarray]:
+def _kojima_value(
+    third: float, constants: tuple[float, ...], fourth: float
+) -> Callable[[np.ndarray], np.ndarray]:
     def value(x: np.ndarray) -> np.ndarray:
         a, b, c, d = x
         return np.array([
@@ -296,9 +298,7 @@ COURNOT10 = Published(
     upper=_orthant(10)[1],
     box=_box(10, -1.0, 30.0),
     seed=106,
-    solutions=(
-        _array(7.4415, 4.0978, 2.5906, 0.9353, 17.9490, 4.0978, 1.3047, 5.5901, 3.2222, 1.6771),
-    ),
+    solutions=(_array(7.4415, 4.0978, 2.5906, 0.9353, 17.9490, 4.0978, 1.3047, 5.5901, 3.2222, 1.6771),),
     digits=1e-3,
     caution="F is not defined for negative quantities: about three starts of ten lie there",
 )
@@ -706,7 +706,9 @@ def _k113(x: np.ndarray, m: np.ndarray) -> np.ndarray:
 HS113 = _hs_problem(
     113,
     optimality(_g113, _h113, _c113, _j113, _k113, 10),
-    _array(2.171996, 2.363683, 8.773926, 5.095984, 0.9906548, 1.430574, 1.321644, 9.828726, 8.280092, 8.375927),
+    _array(
+        2.171996, 2.363683, 8.773926, 5.095984, 0.9906548, 1.430574, 1.321644, 9.828726, 8.280092, 8.375927
+    ),
     _array(1.7165, 0.4745, 1.3759, 0.0205, 0.3120, 0, 0.2870, 0),
     _line(10),
     _box(10, -5.0, 12.0),

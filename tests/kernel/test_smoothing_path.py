@@ -64,9 +64,7 @@ def test_a_local_minimiser_is_called_so(form):
 @pytest.mark.parametrize("lower", [0.0, -np.inf])
 def test_iterates_that_run_away_are_not_called_a_root(lower, search):
     """F <= -1: relative to a huge x any residual looks small."""
-    problem = scalar_problem(
-        lambda x: -1 - np.exp(-(x**2)), lambda x: 2 * x * np.exp(-(x**2)), lower=lower
-    )
+    problem = scalar_problem(lambda x: -1 - np.exp(-(x**2)), lambda x: 2 * x * np.exp(-(x**2)), lower=lower)
     solution = ssn.solve(problem, [2.0], globalization=search)
     assert not solution.converged
 
