@@ -7,10 +7,15 @@ from typing import Any
 
 import numpy as np
 import numpy.typing as npt
+import scipy.sparse as sp
 
 from ..protocols import ProxDerivative
 
 FloatArray = npt.NDArray[np.float64]
+
+
+# components of a group from which on its block is not written out
+LARGEST_BLOCK = 8
 
 
 class DiagonalDerivative:
@@ -156,6 +161,14 @@ class GroupDerivative:
         if directions.ndim == 2:
             d, p, q = d[:, None], p[:, None], q[:, None]
         return d * directions + p * self._groups.spread(self._groups.sum(q * directions))
+
+    def as_sparse(self) -> sp.csr_array | None:
+        """The matrix where groups are small, for solvers that factorise; None where its blocks would be large."""
+        if self._groups.counts.max() > LARGEST_BLOCK:
+            return None
+        gather = self._groups.gather
+        coupled = sp.diags_array(self._left) @ (gather.T @ gather) @ sp.diags_array(self._right)
+        return sp.csr_array(sp.diags_array(self._entries) + coupled)
 
 
 class ScaledDerivative:

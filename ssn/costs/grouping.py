@@ -83,6 +83,11 @@ class Groups:
         lines = np.arange(int(np.prod(rest))).reshape(rest)
         return cls(np.broadcast_to(np.expand_dims(lines, axis % len(sizes)), sizes).ravel())
 
+    @property
+    def gather(self) -> sp.csr_array:
+        """The matrix (number, n) that sums over groups."""
+        return self._gather
+
     def sum(self, x: FloatArray) -> FloatArray:
         """Sums over the groups, (number,) or (number, k)."""
         return np.asarray(self._gather @ x)

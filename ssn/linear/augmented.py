@@ -110,5 +110,7 @@ def explicit_complement(derivative: Any) -> Any:
         return sp.diags_array(1.0 - derivative.diagonal)
     if hasattr(derivative, "as_sparse"):
         matrix = derivative.as_sparse()
+        if matrix is None:
+            return None
         return sp.csr_array(sp.eye_array(matrix.shape[0]) - matrix)
     return None
