@@ -129,6 +129,8 @@ def in_half_space(cost: Any, x: np.ndarray) -> np.ndarray:
     moved = x.copy()
     if excess > 0 or isinstance(cost, ssn.costs.Hyperplane):
         moved[k] -= excess / cost.normal[k]
+        if abs(moved[k]) <= 1e-14 * abs(x[k]):  # rounding
+            moved[k] = 0.0
     return moved
 
 

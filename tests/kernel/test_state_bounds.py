@@ -243,9 +243,17 @@ def test_the_reference_agrees_on_the_penalised_problem():
 
 
 def test_evidence_at_a_large_penalty_is_undecided_and_true_otherwise():
-    assessment = assess(BOUNDARY.build(12), known=BOUNDARY.known, budget=0.5)
+    """No first-order method gets anywhere there; without libraries that is said, and nothing else fails."""
+    assessment = assess(BOUNDARY.build(12), known=BOUNDARY.known, budget=0.5, libraries=False)
     assert assessment.agreement == "undecided"
     assert [check.name for check in assessment.checks if not check.holds] == ["agreement"]
+
+
+def test_an_interior_point_method_on_the_hard_bounds_decides():
+    assessment = assess(BOUNDARY.build(12), known=BOUNDARY.known, budget=0.5)
+    assert assessment.agreement == "holds" and assessment.holds, assessment.failures()
+    names = [method.name for method in assessment.methods]
+    assert "interior point (clarabel)" in names and "L-BFGS-B (SciPy)" not in names
 
 
 def test_rate_and_derivative():
