@@ -179,24 +179,37 @@ def _prox(trace: Trace, v: TracedArray, cost: Any, step: Any) -> TracedArray:
             f"the step of a proximal map at {place()} depends on the unknown; it must be a number"
         )
 
-    def derivative(numbers: Any) -> Any:
-        found = cost.prox_derivative(numbers, step)
+    def matrix(found: Any, numbers: Any) -> Any:
         if found.diagonal is not None:
             return np.broadcast_to(found.diagonal, numbers.shape)
         size = numbers.size
+        # self-adjoint in the cost's own inner product
+        weights = np.broadcast_to(np.asarray(getattr(cost, "inner_weights", 1.0), dtype=np.float64), (size,))
         return LinearOperator(
             (size, size),
             matvec=lambda x: found.apply(np.ravel(x)),
-            rmatvec=lambda x: found.apply(np.ravel(x)),  # self-adjoint
+            rmatvec=lambda x: weights * found.apply(np.ravel(x) / weights),
             matmat=found.apply,
             dtype=np.float64,
         )
 
+    def smoothed(traced: TracedArray, eps: float) -> Any:
+        if not hasattr(cost, "smoothed_prox_derivative"):
+            return cost.smoothed_prox(traced, step, eps)
+        form = CustomOperation(
+            lambda numbers: cost.smoothed_prox(numbers, step, eps),
+            lambda numbers: matrix(cost.smoothed_prox_derivative(numbers, step, eps), numbers),
+            None,
+            None,
+            f"smoothed {type(cost).__name__}.prox",
+        )
+        return form(traced)
+
     operation = CustomOperation(
         lambda numbers: cost.prox(numbers, step),
-        derivative,
+        lambda numbers: matrix(cost.prox_derivative(numbers, step), numbers),
         lambda numbers: cost.pieces(numbers, step),
-        lambda traced, eps: cost.smoothed_prox(traced, step, eps),
+        smoothed,
         f"{type(cost).__name__}.prox",
     )
     return operation(v)

@@ -164,3 +164,28 @@ def test_natural_residual_solved():
     solution = ssn.solve(equation, tolerance=1e-12).require()
     problem = ssn.CompositeProblem(smooth=ssn.LeastSquares(a, b), cost=cost)
     np.testing.assert_allclose(solution.x, ssn.solve(problem).require().x, atol=1e-9)
+
+
+@pytest.mark.parametrize("weighted", [False, True])
+def test_proximal_maps_that_cannot_be_traced_have_their_own_smoothed_form(weighted):
+    """Coupled costs sort or solve for a threshold: their smoothed map and its derivative are taken as they are."""
+    rng = np.random.default_rng(0)
+    a = rng.standard_normal((12, 6))
+    h, b = a.T @ a / 12, a.T @ rng.standard_normal(12) / 3
+    inner = np.array([1.0, 2.0, 0.5, 1.5, 1.0, 3.0]) if weighted else 1.0
+    cost = ssn.GroupSparseCost(0.3, [0, 0, 0, 1, 1, 1], inner_weights=inner)
+    step = 0.5
+
+    def natural(u):
+        return u - cost.prox(u - step * (h @ u - b), step)
+
+    equation = TracedEquation(natural, np.full(6, 0.7))
+    smoothed = equation.smoothed(1e-2)
+    x, d = rng.standard_normal(6), rng.standard_normal(6)
+    quotient = (smoothed.residual(x + 1e-6 * d) - smoothed.residual(x - 1e-6 * d)) / 2e-6
+    derivative = smoothed.linearize(x).derivative
+    np.testing.assert_allclose(derivative @ d, quotient, atol=1e-7)
+    e = rng.standard_normal(6)
+    assert (derivative.T @ e) @ d == pytest.approx(e @ (derivative @ d), rel=1e-12)
+    path = ssn.solve(natural, np.full(6, 0.7), globalization="smoothing").require()
+    np.testing.assert_allclose(path.x, ssn.solve(natural, np.full(6, 0.7)).require().x, atol=1e-7)
