@@ -104,7 +104,7 @@ def _assessed(
         seconds = time.perf_counter() - began
         assessment = assess(
             problem, parameters=job.parameters, name=job.file.name, known=job.file.known, methods=methods,
-            budget=budget, progress=report, solution=solution,
+            budget=budget, progress=report, solution=solution, libraries=True,
         )  # fmt: skip
         # solved here, so that an interruption of the evidence does not lose the solution
         ours = replace(assessment.methods[0], seconds=seconds)

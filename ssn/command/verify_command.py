@@ -114,7 +114,7 @@ def assessed(job: Job, report: rep.Report, budget: float) -> Assessment:
     seconds = time.perf_counter() - began
     assessment = assess(
         problem, parameters=job.parameters, name=job.file.name, known=job.file.known, budget=budget, progress=report,
-        solution=solution,
+        solution=solution, libraries=True,
     )  # fmt: skip
     ours = replace(assessment.methods[0], seconds=seconds)
     return replace(assessment, methods=(ours, *assessment.methods[1:]))

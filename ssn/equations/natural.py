@@ -224,15 +224,18 @@ class NaturalEquation:
         return moved
 
     def shrink_step(self, at: Evaluation) -> Evaluation:
-        """Halve the step until the potential lies below its quadratic model at the proximal gradient point."""
+        """Halve the step until the curvature of the potential along the proximal gradient step is below 1/s.
+
+        By gradients, not by values: a value that does not belong to the gradient must not drive the step to zero.
+        """
         if self.potential is None or self.piecewise_affine:
             return at
         for _ in range(60):
             gap = -at.residual
-            model = float(at.data.force @ gap) + 0.95 * self.envelope_decrease(at)
-            here, there = self.potential(at.x), self.potential(at.data.moved)
-            self.work.operator_products += 2
-            if np.isfinite(there) and there <= here + model + 1e-13 * (abs(here) + abs(there)):
+            there = self.map.value(at.data.moved)
+            self.work.operator_products += 1
+            curvature = float((there - at.data.force) @ gap)
+            if np.isfinite(curvature) and curvature <= 1.9 * self.envelope_decrease(at):
                 break
             self.step = 0.5 * self.step
             at = self.evaluate(at.x)

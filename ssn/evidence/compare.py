@@ -128,7 +128,7 @@ def assess(
     agreement_tolerance: float = 1e-6,
     solution: Solution | None = None,
     seed: int = 0,
-    libraries: bool = True,
+    libraries: bool | None = None,
 ) -> Assessment:
     """Solve a problem and collect the evidence for and against the solution.
 
@@ -156,8 +156,9 @@ def assess(
         To be judged instead of solving.
     seed : int
         Of all random directions.
-    libraries : bool
-        Whether methods of general libraries are asked too, where the problem fits them and they are installed.
+    libraries : bool, optional
+        Whether methods of general libraries are asked too, where the problem fits them and they are installed. By
+        default only for hard state bounds, where no first-order method decides about agreement. The commands ask.
 
     Returns
     -------
@@ -186,7 +187,7 @@ def assess(
     # at the last penalty of hard state bounds no first-order method gets anywhere: it may try, briefly
     patience = min(budget, 2.0) if getattr(stated, "state_bounded", False) else budget
     others, checks = _others(problem, solution, own_methods, patience, agreement_tolerance, tell)
-    if libraries:
+    if getattr(stated, "state_bounded", False) if libraries is None else libraries:
         others += _libraries(stated, problem, solution, set(own_methods), budget, tell)
     verdict, note = decide(problem, solution, others, agreement_tolerance)
     tell("measuring the rate")

@@ -50,11 +50,11 @@ def library_methods(problem: Any) -> dict[str, Callable[..., LibraryResult]]:
     if not isinstance(cost, SparseCost) or not convex:
         return found
     if not getattr(problem, "state_bounded", False):
-        found["L-BFGS-B (SciPy)"] = lbfgsb
+        found["L-BFGS-B"] = lbfgsb
     if quadratic_program(problem) is not None and _installed("clarabel"):
-        found["interior point (clarabel)"] = interior_point
+        found["interior point"] = interior_point
     if _is_lasso(problem) and _installed("sklearn"):
-        found["coordinate descent (scikit-learn)"] = coordinate_descent
+        found["coordinate descent"] = coordinate_descent
     return found
 
 

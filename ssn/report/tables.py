@@ -39,7 +39,7 @@ def comparison(entry: Entry) -> RenderableType:
 
 
 class Methods:
-    """The methods as rows, or as columns where the window is too narrow for that: no figure is cut."""
+    """The methods as rows, or as columns where the window is too narrow: as many at a time as fit, no figure is cut."""
 
     def __init__(self, assessment: Assessment) -> None:
         self.rows = [[Text(cell) for cell in method_row(method)] for method in assessment.methods]
@@ -54,11 +54,23 @@ class Methods:
         if fits(wide, console, options):
             yield wide
             return
-        names = [cells[0].plain for cells in self.rows]
-        tall = figure_table(["", *names], figures=names)
+        waiting = list(self.rows)
+        while waiting:
+            many = len(waiting)
+            while many > 1 and not fits(self._tall(waiting[:many]), console, options):
+                many -= 1
+            yield self._tall(waiting[:many])
+            waiting = waiting[many:]
+            if waiting:
+                yield Text()
+
+    @staticmethod
+    def _tall(rows: list[list[Text]]) -> Table:
+        names = [cells[0].plain for cells in rows]
+        table = figure_table(["", *names], figures=names)
         for index, column in enumerate(METHOD_COLUMNS[1:], 1):
-            tall.add_row(Text(column, style="bold"), *(cells[index] for cells in self.rows))
-        yield tall
+            table.add_row(Text(column, style="bold"), *(cells[index] for cells in rows))
+        return table
 
 
 class Overview:
