@@ -14,4 +14,11 @@ CATALOGUE = {
     "augmented": AugmentedSolver,
 }
 
-__all__ = ["CATALOGUE", "AugmentedSolver", "FullSpaceSolver", "GeneralSolver", "ReducedSolver", "SubspaceSolver"]
+__all__ = [
+    "CATALOGUE",
+    "AugmentedSolver",
+    "FullSpaceSolver",
+    "GeneralSolver",
+    "ReducedSolver",
+    "SubspaceSolver",
+]

@@ -78,6 +78,8 @@ def test_a_plain_function_serves_as_the_map_of_complementarity():
             ]
         )
 
-    solution = ssn.solve(ssn.ComplementarityProblem(force, 0.0, size=4), np.array([1.0, 0.0, 1.0, 0.0])).require()
+    solution = ssn.solve(
+        ssn.ComplementarityProblem(force, 0.0, size=4), np.array([1.0, 0.0, 1.0, 0.0])
+    ).require()
     known = [np.array([np.sqrt(6) / 2, 0, 0, 0.5]), np.array([1.0, 0, 3, 0])]
     assert min(np.abs(solution.x - k).max() for k in known) < 1e-7

@@ -384,3 +384,29 @@ def test_two_processes_are_bitwise_equal():
         found.append(done.stdout)
     assert len(found[0]) == 65
     assert found[0] == found[1]
+
+
+class Curved:
+    """1/2 |u + u^2/2 - b|^2 + 0.05 |u|^2: its curvature grows away from zero, where the first step length is taken."""
+
+    affine_gradient = False
+    size = 12
+    b = np.linspace(-0.2, 3, 12)
+
+    def value(self, u):
+        misfit = u + u * u / 2 - self.b
+        return float(misfit @ misfit / 2 + 0.05 * u @ u)
+
+    def gradient(self, u):
+        return (u + u * u / 2 - self.b) * (1 + u) + 0.1 * u
+
+    def hessian(self, u):
+        return np.diag((1 + u) ** 2 + u + u * u / 2 - self.b + 0.1)
+
+
+def test_the_step_follows_a_growing_curvature():
+    problem = ssn.CompositeProblem(smooth=Curved(), cost=ssn.SparseCost(0.05, -0.3, 1.2))
+    solution = ssn.solve(problem).require()
+    assert len(solution.steps) <= 15
+    reference = ssn.proximal_gradient(problem)
+    np.testing.assert_allclose(reference.x, solution.x, atol=1e-6)
