@@ -2,7 +2,7 @@
 
     python benchmarks/overheads.py
 
-Prints three lines: a traced evaluation with derivative at 1e6 unknowns over building the matrix by hand (target: at most
+Prints three lines: a traced evaluation with derivative at 1e6 unknowns over the matrix built by hand (target: at most
 3); a Newton step of a traced problem with 10 unknowns in milliseconds (target: at most 1.5); `ssn.solve_many` on 1e5
 friction problems of 3 unknowns over a Newton iteration written in NumPy for them (target: at most 5). Ratios are
 medians of pairs within the run; milliseconds depend on the machine. Exit code 1 where a target is missed.
