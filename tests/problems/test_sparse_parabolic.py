@@ -134,7 +134,9 @@ def _by_interior_point(problem, beta):
     found = clarabel.DefaultSolver(sp.triu(P, format="csc"), q, A, np.concatenate(b), cones, settings).solve()
     assert str(found.status) in ("Solved", "AlmostSolved", "InsufficientProgress")
     constant = 0.5 * float(weight @ problem.target**2)
-    return found.obj_val / scale + constant, np.asarray(found.x)[size : 2 * size]
+    # its own primal-dual pair: the optimum lies between the two, and sometimes it stops short of 1e-11
+    gap = abs(found.obj_val - found.obj_val_dual) / scale
+    return found.obj_val / scale + constant, np.asarray(found.x)[size : 2 * size], gap
 
 
 @pytest.mark.parametrize("sparsity", PATTERNS)
@@ -147,11 +149,14 @@ def test_agrees_with_an_interior_point_solver(sparsity, parameters):
     n = 8 if not parameters else 6
     problem = sparse_parabolic.build(n, sparsity=sparsity, **parameters)
     solution = ssn.solve(problem).require()
-    objective, control = _by_interior_point(problem, 0.05)
-    assert solution.objective == pytest.approx(objective, rel=1e-8)
-    assert problem.controls.norm(solution.x - control) <= 1e-4 * problem.controls.norm(control)
+    objective, control, gap = _by_interior_point(problem, 0.05)
+    assert gap <= 1e-6 * objective
+    assert solution.objective == pytest.approx(objective, rel=1e-8, abs=gap + 1e-8 * objective)
+    # the objective grows by alpha/2 ||u - u*||^2 at least: so far may a control within the gap be off
+    off = np.sqrt(2.0 * gap / problem.alpha)
+    assert problem.controls.norm(solution.x - control) <= 1e-4 * problem.controls.norm(control) + off
     if not parameters:
-        assert sparse_parabolic.REFERENCE_OBJECTIVE[sparsity] == pytest.approx(objective, rel=1e-9)
+        assert sparse_parabolic.REFERENCE_OBJECTIVE[sparsity] == pytest.approx(objective, abs=gap + 1e-9 * objective)
 
 
 @pytest.mark.parametrize("sparsity", PATTERNS)
