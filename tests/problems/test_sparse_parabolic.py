@@ -156,7 +156,9 @@ def test_agrees_with_an_interior_point_solver(sparsity, parameters):
     off = np.sqrt(2.0 * gap / problem.alpha)
     assert problem.controls.norm(solution.x - control) <= 1e-4 * problem.controls.norm(control) + off
     if not parameters:
-        assert sparse_parabolic.REFERENCE_OBJECTIVE[sparsity] == pytest.approx(objective, abs=gap + 1e-9 * objective)
+        assert sparse_parabolic.REFERENCE_OBJECTIVE[sparsity] == pytest.approx(
+            objective, abs=gap + 1e-9 * objective
+        )
 
 
 @pytest.mark.parametrize("sparsity", PATTERNS)
