@@ -19,9 +19,9 @@ def laplacian(n, *, neumann=False):
 
 
 def nonsymmetric(n):
-    return sp.csr_array(
-        sp.random_array((n, n), density=0.1, rng=np.random.default_rng(n)) + 3 * sp.eye_array(n)
-    )
+    rng = np.random.default_rng(n)
+    entries = np.where(rng.random((n, n)) < 0.1, rng.random((n, n)), 0.0)
+    return sp.csr_array(entries + 3.0 * np.eye(n))
 
 
 BACK_ENDS = {
