@@ -188,7 +188,7 @@ def assess(
     patience = min(budget, 2.0) if getattr(stated, "state_bounded", False) else budget
     others, checks = _others(problem, solution, own_methods, patience, agreement_tolerance, tell)
     if getattr(stated, "state_bounded", False) if libraries is None else libraries:
-        others += _libraries(stated, problem, solution, set(own_methods), budget, tell)
+        others += library_results(stated, problem, solution, set(own_methods), budget, tell)
     verdict, note = decide(problem, solution, others, agreement_tolerance)
     tell("measuring the rate")
     speed = _rate(problem, solution, seed)
@@ -251,7 +251,7 @@ def _others(
     return results, checks
 
 
-def _libraries(
+def library_results(
     stated: Any, judged: Any, solution: Solution, taken: set[str], budget: float, tell: Callable[..., Any]
 ) -> list[MethodResult]:
     """Results of library methods on the problem as stated, judged like the others; one that raises is left out."""
