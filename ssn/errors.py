@@ -18,7 +18,7 @@ class MissingExtraError(InputError):
 
 
 class NotConverged(RuntimeError):
-    """Raised by `Solution.require` and by the assertions of `ssn.testing`.
+    """Raised by `Solution.require` where the solve did not converge.
 
     Attributes
     ----------

@@ -160,7 +160,6 @@ class NewtonEquation(Protocol):
 
     work: WorkCounts
     piecewise_affine: bool
-    preferred_search: str
 
     def evaluate(self, x: FloatArray) -> Evaluation:
         """Residual, norm, accuracy, pieces."""

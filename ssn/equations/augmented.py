@@ -49,7 +49,6 @@ class AugmentedEquation:
         Its weight, not negative.
     """
 
-    preferred_search = "dual"
     piecewise_affine = True
 
     def __init__(

@@ -58,7 +58,6 @@ class MidEquation(NaturalEquation):
             magnitude=magnitude,
             work=problem.work,
         )
-        self.preferred_search = "residual"
         self.lower, self.upper = problem.lower, problem.upper
         self.problem = problem
         self.far = np.inf

@@ -86,8 +86,6 @@ class DualEquation:
     adjoint recomputed from S u: the quantity a user of the control cares for.
     """
 
-    preferred_search = "dual"
-
     def __init__(
         self,
         tracking: TrackingMap,

@@ -89,8 +89,6 @@ class FullSpaceEquation:
     of the proximal map.
     """
 
-    preferred_search = "residual"
-
     def __init__(self, problem: Any, gamma: float) -> None:
         self.problem, self.gamma, self.alpha = problem, gamma, problem.alpha
         self.cost, self.work, self.weights = problem.cost, problem.work, problem.weights
@@ -232,8 +230,6 @@ def has_dual(problem: Any) -> bool:
 
 class DualFullSpaceEquation(FullSpaceEquation):
     """The same equation with y eliminated: y is recomputed from p wherever it is evaluated."""
-
-    preferred_search = "dual"
 
     def state_of(self, load: FloatArray) -> FloatArray:
         """The y with Wy (y - z) + M l(y) = -load."""

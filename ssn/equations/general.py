@@ -28,7 +28,6 @@ class GeneralEquation:
     The norm is the root mean square of F / scale, and so is the accuracy.
     """
 
-    preferred_search = "residual"
     piecewise_affine = False
 
     def __init__(self, equation: Any, size: int, work: WorkCounts | None = None) -> None:

@@ -23,7 +23,6 @@ from ..errors import InputError
 from ..inner import InnerProduct, relative
 from ..pieces import Pieces
 from ..protocols import Cost, Evaluation, FallbackStep, ProxDerivative
-from ..status import Outcome
 from ..work import WorkCounts
 
 FloatArray = npt.NDArray[np.float64]
@@ -111,10 +110,8 @@ class NaturalEquation:
         self.work = work if work is not None else WorkCounts()
         self.piecewise_affine = bool(natural_map.affine)
         self.symmetric = bool(natural_map.symmetric)
-        self.preferred_search = "residual" if potential is None else "envelope"
         self._best_norm = np.inf
         self._derivative_at: tuple[Any, Any] = (None, None)
-        self._first_value: float | None = None
         self.first_pieces: Pieces | None = None
 
     def evaluate(self, x: FloatArray) -> Evaluation:
@@ -261,15 +258,3 @@ class NaturalEquation:
         at = self.shrink_step(at)
         decrease = self.envelope_decrease(at)
         return FallbackStep(at.data.moved, "proximal gradient", decrease) if decrease > 0 else None
-
-    def verdict(self, at: Evaluation) -> tuple[Outcome, str] | None:
-        """Report an objective that falls without bound."""
-        if self.potential is None:
-            return None
-        value = self.potential(at.x)
-        if self._first_value is None:
-            self._first_value = value
-        limit = 1e12 * (1.0 + abs(self._first_value))
-        if value < -limit:
-            return Outcome.UNBOUNDED, f"the smooth part has fallen to {value:.1e}"
-        return None

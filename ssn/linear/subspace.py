@@ -41,8 +41,7 @@ class SubspaceSolver:
         Directions added at most in one Newton step.
     memory : float
         Bytes that the basis may take; when it is full the half that S* amplifies least is dropped. More saves state
-        solves, but passes over the basis then cost more than cheap solves do (1e5 space-time unknowns, 800 solves: 5e8
-        takes 87 s, 2e8 45 s).
+        solves, but passes over a large basis cost more than cheap solves do.
     """
 
     name = "subspace"
