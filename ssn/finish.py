@@ -12,6 +12,7 @@ from .complementarity import ComplementarityProblem
 from .composite import CompositeProblem
 from .control import ControlProblem
 from .equations.complementarity import mid_residual
+from .equations.coupled import CoupledEquation
 from .equations.dual import DualEquation
 from .equations.full_space import FullSpaceEquation
 from .inner import relative
@@ -38,6 +39,8 @@ def finish(plan: Plan, result: LoopResult, limits: Limits, before: Any) -> Solut
         x, accuracy, fields = _finish_dual(plan, result, limits.tolerance)
     elif isinstance(plan.equation, FullSpaceEquation):
         x, accuracy, fields = collect(plan.equation, best)
+    elif isinstance(plan.equation, CoupledEquation):
+        x, accuracy, fields = plan.equation.collect(best.x)
     elif isinstance(plan.problem, CompositeProblem):
         x, accuracy, fields = _finish_composite(plan, result)
     elif isinstance(plan.problem, ComplementarityProblem):

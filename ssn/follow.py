@@ -10,6 +10,7 @@ from typing import Any
 
 import numpy as np
 
+from .control import ControlProblem
 from .errors import InputError
 from .prepare import prepare
 from .protocols import FloatArray
@@ -243,10 +244,14 @@ def follow_meshes(
     transfer: Callable[[Any, Any], Callable[[FloatArray], FloatArray]],
     *,
     parameters: dict[str, Any] | None = None,
+    coarse_tolerance: float | None = None,
     callback: Callable[[PathPoint], None] | None = None,
     **options: Any,
 ) -> Path:
     """Solve on a coarse mesh and carry the unknown over to finer ones; every level is searched, none is trusted.
+
+    Where control and state live on the same nodes, state and adjoint are carried over in place of the control: they are
+    smoother functions and interpolate better.
 
     Parameters
     ----------
@@ -258,6 +263,8 @@ def follow_meshes(
         ``transfer(coarse_problem, fine_problem)`` returns a function that maps the unknown of one mesh to the next.
     parameters : dict, optional
         Passed on to `build`.
+    coarse_tolerance : float, optional
+        Tolerance on the meshes before the last, whose solutions are starts only; that of the last by default.
     callback : callable, optional
         Gets each `PathPoint`; its value is the mesh size.
     **options
@@ -277,11 +284,16 @@ def follow_meshes(
     if not levels or any(b <= a for a, b in itertools.pairwise(levels)):
         raise InputError(f"sizes must ascend, got {levels}")
     points: list[PathPoint] = []
-    coarse = None
+    coarse: Any = None
     for n in levels:
         problem = build(n=n, **(parameters or {}))
-        start = None if coarse is None else transfer(coarse, problem)(points[-1].solution.x)
-        solution = solve(problem, start, **options)
+        start = None
+        if coarse is not None:
+            start = _carried(points[-1].solution, transfer(coarse, problem), coarse, problem)
+        if coarse_tolerance is not None and n != levels[-1]:
+            solution = solve(problem, start, **{**options, "tolerance": coarse_tolerance})
+        else:
+            solution = solve(problem, start, **options)
         if not solution.converged:
             message = f"no convergence at n = {n}: {solution.outcome.value}"
             return Path(tuple(points), False, message, ((float(n), solution),))
@@ -290,3 +302,20 @@ def follow_meshes(
             callback(points[-1])
         coarse = problem
     return Path(tuple(points), True, "all meshes solved")
+
+
+def _carried(solution: Solution, carry: Callable[[FloatArray], FloatArray], coarse: Any, fine: Any) -> Any:
+    """The start on the finer mesh: state and adjoint where they live on the nodes of the control, else the unknown."""
+    if solution.adjoint is None or solution.state is None or not _nodal(coarse) or not _nodal(fine):
+        return carry(solution.x)
+    return carry(solution.state), carry(solution.adjoint)
+
+
+def _nodal(problem: Any) -> bool:
+    """Whether a control problem has a distributed control on the nodes of its state."""
+    return (
+        isinstance(problem, ControlProblem)
+        and problem.unknowns == problem.state.size
+        and problem.alpha > 0
+        and not problem.state_bounded
+    )

@@ -8,6 +8,7 @@ from typing import Any
 import numpy as np
 
 from .equations.complementarity import MidEquation
+from .equations.coupled import CoupledEquation
 from .equations.dual import DualEquation
 from .equations.general import GeneralEquation
 from .errors import InputError
@@ -139,6 +140,8 @@ class Iteration:
         at = self._loop.at
         if isinstance(self._plan.equation, DualEquation):
             return np.array(at.data.corrected if at.data is not None else self._plan.start)
+        if isinstance(self._plan.equation, CoupledEquation):
+            return np.array(at.data.control if at.data is not None else self._plan.equation.residuals(at.x)[3])
         return np.array(at.x)
 
     @property

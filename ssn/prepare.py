@@ -16,6 +16,7 @@ from .composite import CompositeProblem, LeastSquaresMap
 from .control import ControlProblem
 from .equations.augmented import AugmentedEquation
 from .equations.complementarity import FischerBurmeisterEquation, MidEquation, inside_bounds
+from .equations.coupled import CoupledEquation
 from .equations.dual import DualEquation
 from .equations.full_space import FullSpaceEquation, has_dual
 from .equations.general import GeneralEquation
@@ -23,7 +24,15 @@ from .equations.natural import NaturalEquation
 from .errors import InputError
 from .globalization import CATALOGUE, DualSearch, EnvelopeSearch, ResidualSearch
 from .linear import CATALOGUE as LINEAR
-from .linear import AugmentedSolver, FullSpaceSolver, GeneralSolver, ReducedSolver, SubspaceSolver
+from .linear import (
+    AugmentedSolver,
+    CoupledSolver,
+    FullSpaceSolver,
+    GeneralSolver,
+    ReducedSolver,
+    SubspaceSolver,
+)
+from .linear.coupled import refusal
 from .moreau_yosida import PenaltyPath, first_penalty
 from .protocols import FloatArray, Globalization, LinearSolver
 from .proximal_point import ProximalPointPath
@@ -40,6 +49,9 @@ PLAIN_STEPS = 12
 QUICK = 6
 
 LINEAR_CHOICES = ("auto", *LINEAR)
+
+# states from which on cycles on the coupled system beat solves with a factorised state operator
+COUPLED_FROM = 30_000
 
 
 @dataclass
@@ -59,6 +71,7 @@ class Plan:
     plain_steps: int = 0
     multipliers: MultiplierPath | None = None
     unpack: Callable[[FloatArray], Any] | None = None
+    otherwise: Callable[[FloatArray], Plan] | None = None
 
 
 def prepare(
@@ -71,7 +84,7 @@ def prepare(
         names = ", ".join(map(repr, CATALOGUE))
         raise InputError(f"globalization must be 'auto', {names} or 'smoothing', got {globalization!r}")
     if isinstance(problem, ControlProblem):
-        plan = _prepare_control(problem, start)
+        plan = _prepare_control(problem, start, globalization, linear)
     elif isinstance(problem, CompositeProblem):
         plan = _prepare_composite(problem, start, globalization)
     elif isinstance(problem, SumProblem):
@@ -117,8 +130,10 @@ def _forced(choice: str | Globalization, equation: Any) -> Globalization:
     made: Any = CATALOGUE[choice]() if isinstance(choice, str) else choice
     if not hasattr(made, "advance"):
         raise InputError(f"globalization must have an advance method, got {type(made).__name__}")
-    dual = isinstance(equation, DualEquation) or (
-        isinstance(equation, FullSpaceEquation) and has_dual(equation.problem)
+    dual = (
+        isinstance(equation, DualEquation)
+        or (isinstance(equation, FullSpaceEquation) and has_dual(equation.problem))
+        or (isinstance(equation, CoupledEquation) and equation.has_dual)
     )
     if isinstance(made, DualSearch) and not dual:
         raise InputError(
@@ -136,12 +151,24 @@ def _start_array(start: Any, size: int, name: str = "start") -> FloatArray | Non
     return None if start is None else float_array(start, name, shape=(size,))
 
 
-def _prepare_control(problem: ControlProblem, start: Any) -> Plan:
+def _prepare_control(problem: ControlProblem, start: Any, globalization: Any, linear: str) -> Plan:
     if not problem.convex:
         raise InputError(f"{type(problem.cost).__name__} is not convex: control problems need a convex cost")
-    control = _start_array(start, problem.unknowns)
+    pair = _start_pair(start, problem.state.size)
+    if pair is not None and (problem.alpha == 0.0 or problem.state_bounded):
+        raise InputError("start: a pair (state, adjoint) needs control_weight > 0 and a state without bounds")
+    control = _start_array(start, problem.unknowns) if pair is None else None
     if problem.state_bounded:
         return _prepare_state_bounds(problem, control)
+    searched = globalization == "auto" or isinstance(globalization, DualSearch) or globalization == "dual"
+    if linear == "coupled" or (linear == "auto" and searched and problem.state.size >= COUPLED_FROM):
+        reason = refusal(problem)
+        if reason is None and (problem.observation is None or linear == "coupled"):
+            return _prepare_coupled(problem, control, pair, linear)
+        if linear == "coupled":
+            raise InputError(f"linear='coupled' does not fit this problem: {reason}")
+    if pair is not None:
+        control = problem.cost.prox(problem.pull_back(pair[1]) / problem.alpha, 1.0 / problem.alpha)
     path = None if problem.alpha > 0 else ProximalPointPath()
     alpha = problem.alpha if problem.alpha > 0 else 1.0
     equation = DualEquation(problem, problem.reduced_target(), alpha, problem.cost)
@@ -156,6 +183,41 @@ def _prepare_control(problem: ControlProblem, start: Any) -> Plan:
     else:
         x = equation.start(control)
     return Plan(problem, equation, SubspaceSolver(equation), DualSearch(), x, choices, path)
+
+
+def _start_pair(start: Any, size: int) -> tuple[FloatArray, FloatArray] | None:
+    """State and adjoint where the start is a pair of arrays, else None."""
+    if not isinstance(start, tuple):
+        return None
+    if len(start) != 2:
+        raise InputError(f"start: a tuple is a pair (state, adjoint), got {len(start)} entries")
+    y, p = (float_array(part, f"start[{k}]", shape=(size,)) for k, part in enumerate(start))
+    return y, p
+
+
+def _prepare_coupled(
+    problem: ControlProblem,
+    control: FloatArray | None,
+    pair: tuple[FloatArray, FloatArray] | None,
+    linear: str,
+) -> Plan:
+    equation = CoupledEquation(problem)
+    kind = equation.operators.hierarchy.name
+    choices = {
+        "equation": "state and adjoint, control eliminated",
+        "globalization": "dual: the dual function is convex, exact search costs products only"
+        if equation.has_dual
+        else "residual search: the state cannot be eliminated",
+        "linear": f"coupled: {kind} on the pair of state and adjoint, "
+        + ("asked for" if linear != "auto" else f"{problem.state.size} states are too many to factorise"),
+    }
+    search: Globalization = DualSearch() if equation.has_dual else ResidualSearch().fresh()
+    plan = Plan(
+        problem, equation, CoupledSolver(equation), search, equation.start(control, pair), choices
+    )  # fmt: skip
+    if linear == "auto":
+        plan.otherwise = lambda best: _prepare_control(problem, best, "auto", "subspace")
+    return plan
 
 
 def _prepare_state_bounds(problem: ControlProblem, control: FloatArray | None) -> Plan:

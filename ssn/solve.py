@@ -59,8 +59,8 @@ def solve(
         A plain function of NumPy arrays (or of a tuple or dict of arrays, like `start`) is traced: its Newton
         derivative and active sets follow from its operations.
     start : array, optional
-        Start of the unknown (a control for control problems); by default zero, projected onto the bounds. It is not
-        changed.
+        Start of the unknown (a control for control problems, or a pair (state, adjoint) as a tuple); by default zero,
+        projected onto the bounds. It is not changed.
     tolerance : float
         Relative accuracy of the unknown: ||u - prox(...)|| / ||u|| in the problem's norm (see the `accuracy` method of
         each problem); for an Equation the root mean square of F / scale.
@@ -70,8 +70,9 @@ def solve(
         "auto": dual search where the problem has a dual equation, envelope search for other composite problems,
         residual search and smoothing path for complementarity, residual search otherwise. What was decided, and why,
         stands in ``Solution.choices``.
-    linear : {"auto", "subspace", "reduced", "general", "full space"}
-        How Newton systems are solved; only the one that fits the equation is accepted beside "auto".
+    linear : {"auto", "subspace", "coupled", "reduced", "general", "full space", "augmented"}
+        How Newton systems are solved; only those that fit the problem are accepted beside "auto". Control problems with
+        a symmetric state operator have two: "subspace" factorises it, "coupled" is multigrid on state and adjoint.
     callback : callable, optional
         Gets each `StepRecord`; may raise `StopSolve`.
     progress : bool
@@ -111,9 +112,23 @@ def solve(
         solution = _run_penalty(plan, limits, observer, before)
     else:
         solution = _run_until_confirmed(plan, limits, observer, before)
+        left = limits.max_steps - len(solution.steps)
+        if plan.otherwise is not None and solution.outcome not in SETTLED and left > 0:
+            solution = _run_otherwise(plan, solution, replace(limits, max_steps=left), observer, before)
     if solution.outcome is Outcome.INTERRUPTED:
         raise SolveInterrupted("solve interrupted; the best iterate is attached as .solution", solution)
     return solution
+
+
+def _run_otherwise(
+    plan: Plan, first: Solution, limits: Limits, callback: Callback | None, before: Any
+) -> Solution:
+    """Go on from the best point of a failed solve with the plan kept for that case."""
+    assert plan.otherwise is not None
+    other = plan.otherwise(first.x)
+    other.choices["linear"] += f"; taken after {plan.solver.name}: {first.outcome.value}, {first.message}"
+    solution = _run_until_confirmed(other, limits, callback, before)
+    return replace(solution, steps=first.steps + solution.steps, start_norm=first.start_norm)
 
 
 def _run_until_confirmed(plan: Plan, limits: Limits, callback: Callback | None, before: Any) -> Solution:

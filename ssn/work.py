@@ -23,6 +23,8 @@ class WorkCounts:
         Solves with a factorised Newton matrix.
     proximal_maps : int
         Evaluations of the proximal map.
+    multigrid_cycles : int
+        Cycles on the pair of state and adjoint, those for the norm of a residual among them.
     """
 
     state_solves: int = 0
@@ -31,6 +33,7 @@ class WorkCounts:
     symbolic_analyses: int = 0
     linear_solves: int = 0
     proximal_maps: int = 0
+    multigrid_cycles: int = 0
 
     def copy(self) -> WorkCounts:
         """Return a snapshot."""

@@ -23,6 +23,11 @@ EPS = float(np.finfo(float).eps)
 SUBPROBLEM = 1e-5
 
 
+def _factorised(problem: Any) -> bool:
+    """Whether a problem can be solved with a factorised state operator."""
+    return isinstance(problem, ControlProblem) and problem.convex and not problem.state_bounded
+
+
 class Local:
     """An equation with its linear solver and the iterate that belongs to a point of the user's unknown.
 
@@ -66,7 +71,9 @@ class Local:
             )
         else:
             way = "envelope" if isinstance(problem, CompositeProblem) else "auto"
-            plan = prepare(problem, point, globalization=way)
+            # multigrid has no exact steps to look at: the dual equation of the same problem has
+            linear = "subspace" if _factorised(problem) else "auto"
+            plan = prepare(problem, point, globalization=way, linear=linear)
             self.equation, self.solver, self.x = plan.equation, plan.solver, plan.start
             if isinstance(self.equation, DualEquation):
                 self.note = "dual equation, in the observation norm of the dual variable"

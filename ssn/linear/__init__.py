@@ -1,6 +1,7 @@
 """Linear solvers for Newton systems, one a file; `CATALOGUE` is the explicit list."""
 
 from .augmented import AugmentedSolver
+from .coupled import CoupledSolver
 from .full_space import FullSpaceSolver
 from .general import GeneralSolver
 from .reduced import ReducedSolver
@@ -8,6 +9,7 @@ from .subspace import SubspaceSolver
 
 CATALOGUE = {
     "subspace": SubspaceSolver,
+    "coupled": CoupledSolver,
     "reduced": ReducedSolver,
     "general": GeneralSolver,
     "full space": FullSpaceSolver,
@@ -17,6 +19,7 @@ CATALOGUE = {
 __all__ = [
     "CATALOGUE",
     "AugmentedSolver",
+    "CoupledSolver",
     "FullSpaceSolver",
     "GeneralSolver",
     "ReducedSolver",
