@@ -141,7 +141,9 @@ class Iteration:
         if isinstance(self._plan.equation, DualEquation):
             return np.array(at.data.corrected if at.data is not None else self._plan.start)
         if isinstance(self._plan.equation, CoupledEquation):
-            return np.array(at.data.control if at.data is not None else self._plan.equation.residuals(at.x)[3])
+            return np.array(
+                at.data.control if at.data is not None else self._plan.equation.residuals(at.x)[3]
+            )
         return np.array(at.x)
 
     @property

@@ -38,6 +38,7 @@ from .protocols import FloatArray, Globalization, LinearSolver
 from .proximal_point import ProximalPointPath
 from .smooth import LeastSquares
 from .smoothing_path import SmoothingPath
+from .states import SteadyState
 from .sum_problem import SumProblem
 from .traced import TracedEquation
 from .validate import float_array
@@ -162,7 +163,9 @@ def _prepare_control(problem: ControlProblem, start: Any, globalization: Any, li
         return _prepare_state_bounds(problem, control)
     searched = globalization == "auto" or isinstance(globalization, DualSearch) or globalization == "dual"
     if linear == "coupled" or (linear == "auto" and searched and problem.state.size >= COUPLED_FROM):
-        reason = refusal(problem)
+        reason = (
+            refusal(problem) if isinstance(problem.state, SteadyState) else "the state is not a SteadyState"
+        )
         if reason is None and (problem.observation is None or linear == "coupled"):
             return _prepare_coupled(problem, control, pair, linear)
         if linear == "coupled":

@@ -6,15 +6,19 @@ from typing import Any, Protocol, runtime_checkable
 
 import numpy as np
 import numpy.typing as npt
+import scipy.sparse as sp
 from scipy.sparse.linalg import LinearOperator
 
 from .errors import InputError
 from .linear.boundary import as_square, is_symmetric
 from .linear.direct import Factorization, SingularMatrixError
-from .linear.multigrid import MultigridSolver
+from .linear.multigrid import MultigridError, MultigridSolver
 from .work import WorkCounts
 
 FloatArray = npt.NDArray[np.float64]
+
+# rows up to which "auto" factorises: beyond, in space, factors do not fit into memory
+DIRECT_UP_TO = 200_000
 
 
 @runtime_checkable
@@ -53,7 +57,8 @@ class SteadyState:
         Regular, symmetric or not.
     solver : {"auto", "direct", "multigrid"}
         "direct" factorises (CHOLMOD or SuperLU). "multigrid" solves to a relative residual of `accuracy` by conjugate
-        gradients with a pyamg cycle (symmetric positive definite E only). "auto" is "direct".
+        gradients with a pyamg cycle (symmetric positive definite E only). "auto" is "direct", but "multigrid" where a
+        sparse symmetric E with a positive diagonal has more than 200,000 rows; should that fail, "direct" again.
     accuracy : float
         For "multigrid".
 
@@ -81,6 +86,9 @@ class SteadyState:
         self._solver = solver
         self._accuracy = accuracy
         self._factor: Factorization | MultigridSolver | None = None
+        large = solver == "auto" and self.size > DIRECT_UP_TO and sp.issparse(self.matrix)
+        if large and self.symmetric and (self.matrix.diagonal() > 0).all():
+            self._solver = "multigrid, direct behind it"
 
     def attach(self, work: WorkCounts) -> None:
         """Count in `work` from now on."""
@@ -91,10 +99,10 @@ class SteadyState:
     def factor(self) -> Factorization | MultigridSolver:
         """Return the factorisation, computed at the first call."""
         if self._factor is None:
-            if self._solver == "multigrid":
-                self._factor = MultigridSolver(self.matrix, accuracy=self._accuracy, work=self.work)
-                return self._factor
             try:
+                if self._solver.startswith("multigrid"):
+                    self._factor = MultigridSolver(self.matrix, accuracy=self._accuracy, work=self.work)
+                    return self._factor
                 definite = self.symmetric and bool((self.matrix.diagonal() > 0).all())
                 self._factor = Factorization(
                     self.matrix, symmetric=self.symmetric, positive_definite=definite, work=self.work
@@ -107,15 +115,22 @@ class SteadyState:
 
     def solve(self, rhs: FloatArray) -> FloatArray:
         """Solve E y = rhs; one state solve."""
-        factor = self.factor()
         self.work.state_solves += 1
-        return factor.solve(rhs)
+        return self._solved(rhs, False)
 
     def adjoint_solve(self, rhs: FloatArray) -> FloatArray:
         """Solve E' p = rhs; one state solve."""
-        factor = self.factor()
         self.work.state_solves += 1
-        return factor.solve(rhs, transposed=not self.symmetric)
+        return self._solved(rhs, not self.symmetric)
+
+    def _solved(self, rhs: FloatArray, transposed: bool) -> FloatArray:
+        try:
+            return self.factor().solve(rhs, transposed=transposed)
+        except MultigridError:
+            if self._solver == "multigrid":
+                raise
+            self._solver, self._factor = "direct", None
+            return self.factor().solve(rhs, transposed=transposed)
 
     def residual(self, y: FloatArray, rhs: FloatArray) -> FloatArray:
         """Return rhs - E y."""

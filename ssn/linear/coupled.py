@@ -37,6 +37,8 @@ LOCAL = 16
 LARGE, MANY, FEW = 200_000, 12, 3
 # cycles in a row without halving the residual after which the cycle counts as no preconditioner
 IDLE = 6
+# relative residual of a Newton system from which on a direction is not asked whether it descends
+SURE = 1e-3
 
 
 class CoupledHierarchy(Protocol):
@@ -146,7 +148,7 @@ class CoupledOperators:
 
 
 def refusal(problem: Any) -> str | None:
-    """Why the coupled multigrid does not fit a control problem; None where it does."""
+    """Why the coupled multigrid does not fit a control problem with a `SteadyState`; None where it does."""
     state = problem.state
     if getattr(state, "matrix", None) is None or isinstance(state.matrix, LinearOperator):
         return "the state operator is not an explicit matrix"
@@ -202,7 +204,14 @@ class CoupledSolver:
         kept: list[tuple[FloatArray, FloatArray]] = []
         keep = FEW if size > LARGE else MANY
         inner = idle = 0
-        while norm > forcing * first and inner < self.max_inner and idle < IDLE:
+        target = forcing
+        while inner < self.max_inner and idle < IDLE:
+            if norm <= target * first:
+                if target <= SURE or self._descends(at, total):
+                    break
+                # solved too roughly for a direction of descent
+                target = max(0.1 * target, SURE)
+                continue
             # the evaluation has done the first cycle
             z = np.stack(operators.correct(left[0], left[1]) if inner else at.data.correction)
             inner += 1
@@ -230,6 +239,15 @@ class CoupledSolver:
         total[1] *= root
         status = "solved" if norm <= forcing * first else "inaccurate"
         return Direction(total.ravel(), norm / first, inner, status)
+
+    def _descends(self, at: Evaluation, scaled: FloatArray) -> bool:
+        """Whether the dual function, where there is one, falls along a direction (dy, dq)."""
+        vector = np.concatenate([scaled[0], scaled[1] * self.equation.operators.root])
+        line = self.equation.merit_line(at, vector)
+        if line is None:
+            return True
+        slope, _, noise = line(0.0)
+        return bool(slope < 0.0 or abs(slope) <= noise)
 
 
 def _share(part: FloatArray, whole: FloatArray) -> float:

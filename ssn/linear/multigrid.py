@@ -11,8 +11,13 @@ import scipy.sparse as sp
 from scipy.sparse.linalg import cg
 
 from ..work import WorkCounts
+from .direct import SingularMatrixError
 
 FloatArray = npt.NDArray[np.float64]
+
+
+# error in recovering a known vector from which on a matrix counts as singular
+LOST_DIGITS = 1e-3
 
 
 class MultigridError(ArithmeticError):
@@ -29,6 +34,8 @@ class MultigridSolver:
     ------
     MultigridError
         When the accuracy is not reached within `max_iterations`.
+    SingularMatrixError
+        From the constructor, where a known vector does not come back.
     """
 
     method = "multigrid"
@@ -57,6 +64,11 @@ class MultigridSolver:
             )
         self._cycle = hierarchy.aspreconditioner(cycle="V")
         self.work.factorizations += 1
+        known = 1.5 + np.sin(np.arange(self.matrix.shape[0]) * 0.7)
+        if float(np.linalg.norm(self.solve(self.matrix @ known) - known)) > LOST_DIGITS * float(
+            np.linalg.norm(known)
+        ):
+            raise SingularMatrixError("a known vector does not come back from the solve")
 
     def solve(self, rhs: FloatArray, *, transposed: bool = False) -> FloatArray:
         """Solve A x = rhs (A is symmetric, `transposed` changes nothing)."""
