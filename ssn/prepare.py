@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import copy
 from collections.abc import Callable
 from dataclasses import dataclass, replace
 from typing import Any
@@ -14,6 +15,7 @@ from .augmented_lagrangian import MultiplierPath
 from .complementarity import ComplementarityProblem
 from .composite import CompositeProblem, LeastSquaresMap
 from .control import ControlProblem
+from .easier_weight import TINY, Detour
 from .equations.augmented import AugmentedEquation
 from .equations.complementarity import FischerBurmeisterEquation, MidEquation, inside_bounds
 from .equations.coupled import CoupledEquation
@@ -23,6 +25,7 @@ from .equations.general import GeneralEquation
 from .equations.natural import NaturalEquation
 from .errors import InputError
 from .globalization import CATALOGUE, DualSearch, EnvelopeSearch, ResidualSearch
+from .inner import relative
 from .linear import CATALOGUE as LINEAR
 from .linear import (
     AugmentedSolver,
@@ -73,6 +76,7 @@ class Plan:
     multipliers: MultiplierPath | None = None
     unpack: Callable[[FloatArray], Any] | None = None
     otherwise: Callable[[FloatArray], Plan] | None = None
+    detour: Detour | None = None
 
 
 def prepare(
@@ -170,8 +174,6 @@ def _prepare_control(problem: ControlProblem, start: Any, globalization: Any, li
             return _prepare_coupled(problem, control, pair, linear)
         if linear == "coupled":
             raise InputError(f"linear='coupled' does not fit this problem: {reason}")
-    if pair is not None:
-        control = problem.cost.prox(problem.pull_back(pair[1]) / problem.alpha, 1.0 / problem.alpha)
     path = None if problem.alpha > 0 else ProximalPointPath()
     alpha = problem.alpha if problem.alpha > 0 else 1.0
     equation = DualEquation(problem, problem.reduced_target(), alpha, problem.cost)
@@ -183,9 +185,31 @@ def _prepare_control(problem: ControlProblem, start: Any, globalization: Any, li
     if path is not None:
         choices["path"] = "proximal point: control_weight is 0"
         x = np.zeros(problem.unknowns) if control is None else control
+    elif pair is not None:
+        x = equation.start_from(problem.observe(pair[0] - problem.offset()))
     else:
         x = equation.start(control)
-    return Plan(problem, equation, SubspaceSolver(equation), DualSearch(), x, choices, path)
+    plan = Plan(problem, equation, SubspaceSolver(equation), DualSearch(), x, choices, path)
+    if path is None:
+        plan.detour = _dual_detour(plan)
+    return plan
+
+
+def _dual_detour(plan: Plan) -> Detour:
+    """The dual equation with another weight, with the basis of the linear solver."""
+    equation: DualEquation = plan.equation
+
+    def make(factor: float) -> tuple[DualEquation, SubspaceSolver]:
+        easier = DualEquation(equation.tracking, equation.target, factor * equation.alpha, equation.cost)
+        solver = SubspaceSolver(easier)
+        solver.carry_over(plan.solver)  # type: ignore[arg-type]
+        return easier, solver
+
+    # the start knows S* q for one q: a lower bound of ||S||
+    tracking = equation.tracking
+    q, lifted = plan.start[: equation.size], plan.start[equation.size :]
+    size = relative(tracking.controls.norm(lifted), tracking.observations.norm(q))
+    return Detour(make, at_once=equation.alpha < TINY * size**2)
 
 
 def _start_pair(start: Any, size: int) -> tuple[FloatArray, FloatArray] | None:
@@ -218,9 +242,18 @@ def _prepare_coupled(
     plan = Plan(
         problem, equation, CoupledSolver(equation), search, equation.start(control, pair), choices
     )  # fmt: skip
+    if equation.has_dual:
+        plan.detour = Detour(lambda factor: _coupled_with_weight(problem, factor))
     if linear == "auto":
         plan.otherwise = lambda best: _prepare_control(problem, best, "auto", "subspace")
     return plan
+
+
+def _coupled_with_weight(problem: ControlProblem, factor: float) -> tuple[CoupledEquation, CoupledSolver]:
+    easier = copy.copy(problem)
+    easier.alpha = factor * problem.alpha
+    equation = CoupledEquation(easier)
+    return equation, CoupledSolver(equation)
 
 
 def _prepare_state_bounds(problem: ControlProblem, control: FloatArray | None) -> Plan:

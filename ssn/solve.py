@@ -10,6 +10,7 @@ from typing import Any
 import numpy as np
 
 from .augmented_lagrangian import follow_multipliers
+from .easier_weight import run_with_detour
 from .equations.dual import DualEquation
 from .equations.natural import NaturalPoint
 from .errors import InputError, SolveInterrupted
@@ -137,6 +138,10 @@ def _run_until_confirmed(plan: Plan, limits: Limits, callback: Callback | None, 
         result = _run_smoothing(plan, limits, callback)
     elif plan.plain_steps:
         result = _run_plain_first(plan, limits, callback)
+    elif plan.detour is not None and plan.globalization.name == "dual":
+        result = run_with_detour(
+            plan.detour, plan.equation, plan.solver, plan.globalization, plan.start, limits, callback
+        )
     else:
         result = run(plan.equation, plan.solver, plan.globalization, plan.start, limits, callback=callback)
     if (

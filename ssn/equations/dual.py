@@ -105,6 +105,11 @@ class DualEquation:
         q = -self.target if control is None else self.tracking.forward(control) - self.target
         return np.concatenate([q, self.tracking.adjoint(q)])
 
+    def start_from(self, observed: FloatArray) -> FloatArray:
+        """Return the iterate that belongs to an observation S u, of a control of any weight a."""
+        q = observed - self.target
+        return np.concatenate([q, self.tracking.adjoint(q)])
+
     def v_of(self, adjoint: FloatArray) -> FloatArray:
         """v = (h - S* q) / a."""
         v = adjoint * (-1.0 / self.alpha)

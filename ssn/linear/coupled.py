@@ -37,8 +37,9 @@ LOCAL = 16
 LARGE, MANY, FEW = 200_000, 12, 3
 # cycles in a row without halving the residual after which the cycle counts as no preconditioner
 IDLE = 6
-# relative residual of a Newton system from which on a direction is not asked whether it descends
-SURE = 1e-3
+# share of the curvature by which the slope along a direction may differ from it, and relative residual of the Newton
+# system from which on that is not asked any more
+NEAR, TIGHT = 0.1, 1e-10
 
 
 class CoupledHierarchy(Protocol):
@@ -207,10 +208,9 @@ class CoupledSolver:
         target = forcing
         while inner < self.max_inner and idle < IDLE:
             if norm <= target * first:
-                if target <= SURE or self._descends(at, total):
+                if self._serves(at, total) or target <= TIGHT:
                     break
-                # solved too roughly for a direction of descent
-                target = max(0.1 * target, SURE)
+                target = 0.1 * target
                 continue
             # the evaluation has done the first cycle
             z = np.stack(operators.correct(left[0], left[1]) if inner else at.data.correction)
@@ -240,14 +240,18 @@ class CoupledSolver:
         status = "solved" if norm <= forcing * first else "inaccurate"
         return Direction(total.ravel(), norm / first, inner, status)
 
-    def _descends(self, at: Evaluation, scaled: FloatArray) -> bool:
-        """Whether the dual function, where there is one, falls along a direction (dy, dq)."""
+    def _serves(self, at: Evaluation, scaled: FloatArray) -> bool:
+        """Whether the quadratic model of the dual function has its minimum along (dy, dq) near the full step.
+
+        For an exact Newton direction the slope is minus the curvature. What a cycle leaves in it is rough, and the dual
+        function magnifies what is rough: a direction with a small residual may be of no use to the search.
+        """
         vector = np.concatenate([scaled[0], scaled[1] * self.equation.operators.root])
         line = self.equation.merit_line(at, vector)
         if line is None:
             return True
-        slope, _, noise = line(0.0)
-        return bool(slope < 0.0 or abs(slope) <= noise)
+        slope, curvature, noise = line(0.0)
+        return bool(abs(slope + curvature) <= max(NEAR * curvature, noise))
 
 
 def _share(part: FloatArray, whole: FloatArray) -> float:
