@@ -1,5 +1,6 @@
 # Needs git, make and Python 3.11 or newer. Everything else goes into $(VENV); no root, no SuiteSparse required.
 #   make compare                        the main job: solve the greenhouse problem and compare with the reference
+#   make zoo                            all evidence about all problems, and the table of README.md
 #   make test PYTEST_ARGS="-k linear"   the tests
 #   make cholmod                        try again to install CHOLMOD, after installing the SuiteSparse headers
 #   make lint, make format, make clean
@@ -16,12 +17,15 @@ PIP = $(BIN)/python -m pip --disable-pip-version-check --no-input
 # Show the end of the log when a step fails.
 OR_TELL = || { tail -n 15 $(LOG); echo "Set-up failed; the whole log is $(LOG)"; exit 1; }
 
-.PHONY: help compare test lint format cholmod clean
+.PHONY: help compare zoo test lint format cholmod clean
 help:
 	@sed -n 's/^#   //p' Makefile
 
 compare: $(VENV)/ready
 	@$(BIN)/python -m ssn $(COMPARE)
+
+zoo: $(VENV)/ready-test
+	@OMP_NUM_THREADS=1 $(BIN)/python -m ssn verify problems --markdown README.md
 
 test: $(VENV)/ready-test
 	@$(BIN)/python -m pytest -q -n 2 --dist worksteal $(PYTEST_ARGS)

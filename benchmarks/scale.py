@@ -118,7 +118,7 @@ def cycles(solution: ssn.Solution) -> int:
 def structured(arguments: argparse.Namespace) -> None:
     """Against the yardstick and against the problem without cost and bounds."""
     n = arguments.n or 1024
-    matrix = load(PROBLEMS / "sparse_elliptic.py").five_point(n)
+    matrix = load(PROBLEMS / "sparse_elliptic.py").build(n=n).state.matrix
     yardstick, _ = median_of(plain_solve(matrix, np.full(n * n, 1.0 / (n + 1) ** 2)), arguments.runs)
     print(f"n = {n}: one pyamg solve {yardstick:.2f} s")
     print("   alpha  seconds  of yardstick  of linear  cycles  steps  accuracy  certificate")

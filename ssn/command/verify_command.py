@@ -36,6 +36,10 @@ budget_option = click.option(
     "--picture", "folder", metavar="FOLDER", type=click.Path(file_okay=False, path_type=Path),
     help="Draw rate and mesh study of each problem to a file in FOLDER.",
 )  # fmt: skip
+@click.option(
+    "--markdown", "document", metavar="FILE", type=click.Path(dir_okay=False, path_type=Path),
+    help="Write the overview as a Markdown table to FILE, between its marks where it exists.",
+)  # fmt: skip
 @click.pass_context
 def verify(
     context: click.Context,
@@ -45,6 +49,7 @@ def verify(
     budget: float,
     json_path: Path | None,
     folder: Path | None,
+    document: Path | None,
 ) -> int:
     """Collect all evidence about the problems of each FILE: derivatives, rate, meshes, known values, agreement.
 
@@ -83,6 +88,9 @@ def verify(
                 break
     _conclude(run, files, verified)
     write(terminal, rep.verification_document(environment, verified, run.errors), json_path)
+    if document is not None:
+        rep.write_markdown(document, rep.markdown_table(verified, run.errors))
+        run.written.append(document)
     for path in run.written:
         terminal.show(f"Written: {path}")
     return run.exit_code(all(one.verification.holds for one in verified))

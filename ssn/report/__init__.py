@@ -3,6 +3,7 @@
 from .entry import Entry, caution, setting
 from .gate_tables import GateTable, gate_conclusion, gate_document, gate_lines
 from .html import page
+from .markdown import markdown_table, write_markdown
 from .pictures import (
     check_picture_path,
     embedded,
@@ -47,6 +48,7 @@ __all__ = [
     "gate_lines",
     "history_figure",
     "is_figure",
+    "markdown_table",
     "page",
     "pairs_table",
     "pictures_available",
@@ -59,4 +61,5 @@ __all__ = [
     "verification_document",
     "verification_table",
     "verify_figure",
+    "write_markdown",
 ]

@@ -191,3 +191,44 @@ def test_ctrl_c_keeps_what_is_there(tmp_path):
     assert results["sleepy"]["failures"] == ["mesh study: not run to the end"]
     assert document["errors"] == [{"problem": "sleepy, n = 40", "message": "interrupted"}]
     assert "newton derivative" in out
+
+
+def test_the_overview_as_markdown(drift, tmp_path):
+    document = tmp_path / "about.md"
+    document.write_text("# About\n<!-- verified: begin -->\nold\n<!-- verified: end -->\nafter\n")
+    result = ssn_command("verify", drift, "--markdown", str(document))
+    assert result.exit_code == 0, result.stderr
+    lines = document.read_text().splitlines()
+    assert lines[0] == "# About" and lines[-1] == "after" and "old" not in lines
+    head, _, row = (line.strip("| ").split(" | ") for line in lines if line.startswith("|"))
+    cells = dict(zip(head, row, strict=True))
+    assert (
+        cells["problem"] == "drift"
+        and cells["evidence"] == "holds"
+        and cells["steps over meshes"].count(",") >= 1
+    )
+    fresh = tmp_path / "fresh.md"
+    assert ssn_command("verify", drift, "--markdown", str(fresh)).exit_code == 0
+    assert "| drift |" in fresh.read_text()
+
+
+def test_markdown_without_marks_is_refused(drift, tmp_path):
+    document = tmp_path / "about.md"
+    document.write_text("# About\n")
+    result = ssn_command("verify", drift, "--markdown", str(document))
+    assert result.exit_code == 2 and "no lines" in result.stderr
+    assert document.read_text() == "# About\n"
+
+
+def test_the_table_of_the_readme_has_every_problem():
+    text = (
+        (ROOT / "README.md")
+        .read_text()
+        .partition("<!-- verified: begin -->")[2]
+        .partition("<!-- verified: end -->")[0]
+    )
+    rows = [line.strip("| ").split(" | ") for line in text.splitlines() if line.startswith("|")][2:]
+    names = {path.stem.replace("_", " ") for path in (ROOT / "problems").glob("*.py")}
+    assert {row[0] for row in rows} == names
+    for row in rows:
+        assert row[-1] == "holds" or row[-1].startswith("**not: "), row
