@@ -47,8 +47,8 @@ ROUNDING = 1e-15
 FINAL_CYCLES, LEFT = 12, 0.05
 # cycles at most for state and adjoint of a control that is given as a start
 START_CYCLES = 25
-# what a cycle finds of an error, times this, is no less than the error
-CAUTION = 2.0
+# a cycle leaves a fifth of an error: what it finds, times this, is no less than the error
+CAUTION = 1.25
 # distance bound, relative to the control, from which on a solution counts as inaccurate
 DOUBTFUL = 1e-7
 
@@ -73,7 +73,7 @@ class CoupledEquation:
 
     Notes
     -----
-    The accuracy is twice the size of the first cycle of the next Newton step, in the norm of the module docstring and
+    The accuracy is 1.25 times the size of the first cycle of the next Newton step, in the norm of the module docstring and
     divided by sqrt(alpha), relative to ||u||; where u = 0, to the argument of the proximal map. The certificate at the
     end does not rely on it.
     """
