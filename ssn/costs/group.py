@@ -98,6 +98,7 @@ class GroupSparseCost:
         self._holds_zero = self.groups.sum(outside) == 0
         for array in (self.beta, self.inner_weights, self.lower, self.upper):
             array.setflags(write=False)
+        self._last: tuple[float, FloatArray, Any] | None = None
 
     def __repr__(self) -> str:
         text = f"{type(self).__name__}({self.groups.number} groups of {self.size} unknowns"
@@ -139,7 +140,19 @@ class GroupSparseCost:
         return np.broadcast_to(step * self.beta, (self.groups.number,))
 
     def _solve(self, v: FloatArray, step: float) -> tuple[FloatArray, FloatArray, npt.NDArray[np.bool_]]:
-        """r = ||u_g||, the factor r/(r + t) of each group, and which groups are zero."""
+        """r = ||u_g||, the factor r/(r + t) of each group, and which groups are zero; the last ones are remembered.
+
+        Map, derivative and pieces at one point solve the same equations.
+        """
+        known = self._last
+        if known is not None and known[0] == step and np.array_equal(known[1], v):
+            return known[2]
+        found = self._solved(v, step)
+        if self.bounded:
+            self._last = (step, v.copy(), found)
+        return found
+
+    def _solved(self, v: FloatArray, step: float) -> tuple[FloatArray, FloatArray, npt.NDArray[np.bool_]]:
         t = self._threshold(step)
         length = self.norms(self._inward(v) if self.bounded else v)
         zero = self._holds_zero & (length <= t) & (t > 0)
@@ -269,58 +282,80 @@ class GroupSparseCost:
         t, spread = self._threshold(step), self.groups.spread
         x = self.norms(v)
         if self.bounded:
-            ends = [np.where(np.isfinite(b), np.abs(b), 0.0) for b in (self.lower, self.upper)]
-            largest = self.norms(np.maximum(np.abs(v), np.maximum(*ends)))
-            room = 4.0 * eps * (1.0 + np.sqrt(self.groups.sum(self.inner_weights)))
-            low, high = np.zeros_like(x), 2.0 * largest + t + room
-            x = 0.5 * high
-            for _ in range(ITERATIONS):
-                s, ratio, _ = _shrunken_length(x, t, eps)
-                u, _ = self._barrier(v, spread(ratio), eps)
-                longer = self.norms(u) > s
-                low, high = np.where(longer, x, low), np.where(longer, high, x)
-                middle = 0.5 * (low + high)
-                if (np.abs(middle - x) <= 1e-16 * middle).all():
-                    break
-                x = middle
-        s, ratio, rise = _shrunken_length(x, t, eps)
+            r, _, zero = self._solve(v, step)
+            start = np.where(zero, self.norms(self._inward(v)), r + t)
+            x = self._smoothed_length(v, start, t, eps)
+        _, ratio, rise = _shrunken_length(x, t, eps)
         u, bend = self._barrier(v, spread(ratio), eps)
         return u, spread(ratio) + bend, rise
 
-    def _barrier(self, v: FloatArray, ratio: FloatArray, eps: float) -> tuple[FloatArray, FloatArray]:
-        """Solve ratio u - eps^2/(u - lower) + eps^2/(upper - u) = v; also the derivative of the barrier."""
-        below, above = np.isfinite(self.lower), np.isfinite(self.upper)
-        low, high = np.where(below, self.lower, 0.0), np.where(above, self.upper, 0.0)
-        centre = np.where(below, low, high)
-        # one bound: a quadratic, solved without cancellation
-        y = np.where(above & ~below, -(v - ratio * centre), v - ratio * centre)
+    def _smoothed_length(self, v: FloatArray, start: FloatArray, t: FloatArray, eps: float) -> FloatArray:
+        """The x of each group with ||u_g|| = s(x), by Newton steps within a bracket, from that of the sharp map."""
+        ends = [np.where(np.isfinite(b), np.abs(b), 0.0) for b in (self.lower, self.upper)]
+        largest = self.norms(np.maximum(np.abs(v), np.maximum(*ends)))
+        room = 4.0 * eps * (1.0 + np.sqrt(self.groups.sum(self.inner_weights)))
+        low, high = np.zeros_like(start), 2.0 * largest + t + room
+        x = np.clip(start, 1e-6 * high, high)
+        open_, labels = np.ones(x.shape, dtype=bool), self.groups.labels
+        for _ in range(ITERATIONS):
+            s, ratio, rise = _shrunken_length(x, t, eps)
+            rows = np.flatnonzero(open_[labels])  # of the groups that are not settled
+            of, spread = labels[rows], ratio[labels[rows]]
+            u, bend = self._barrier(v[rows], spread, eps, rows)
+            square = self.inner_weights[rows] * u * u
+            length = np.sqrt(np.bincount(of, square, x.size))
+            rest = length - s
+            low, high = np.where(open_ & (rest > 0), x, low), np.where(open_ & (rest <= 0), x, high)
+            # d ratio/ds = rise s, so that ds/dx = 1/(ratio + rise s^2)
+            slope = 1.0 / (ratio + rise * s * s)
+            inward = rise * s * np.bincount(of, square / (spread + bend), x.size) / np.maximum(length, 1e-300)
+            newton = x + rest / np.maximum(slope * (1.0 + inward), 1e-300)
+            inside = (newton > low) & (newton < high)
+            following = np.where(inside, newton, 0.5 * (low + high))
+            settled = (np.abs(newton - x) <= 1e-15 * x) | (np.abs(rest) <= 4e-16 * s)
+            open_ &= ~(settled | (np.abs(following - x) <= 4e-16 * x))
+            x = np.where(open_, following, x)
+            if not open_.any():
+                break
+        return x
+
+    def _barrier(
+        self, v: FloatArray, ratio: FloatArray, eps: float, rows: Any = slice(None)
+    ) -> tuple[FloatArray, FloatArray]:
+        """Solve ratio u - eps^2/(u - lower) + eps^2/(upper - u) = v in these rows; also the barrier's derivative."""
+        lower, upper = self.lower[rows], self.upper[rows]
+        below, above = np.isfinite(lower), np.isfinite(upper)
+        low, high = np.where(below, lower, 0.0), np.where(above, upper, 0.0)
+        both = below & above & (low < high)
+        # from the nearer bound, mirrored where it is the upper one; with one bound a quadratic
+        mirrored = np.where(both, v > 0.5 * ratio * (low + high), above & ~below)
+        base, force = np.where(mirrored, -high, low), np.where(mirrored, -v, v)
+        width = np.where(both, high - low, 1.0)
+        # the far barrier is at most that of the middle: the start is left of the root of a concave rising function
+        y = force - ratio * base - np.where(both, 2.0 * eps * eps / width, 0.0)
         root = np.sqrt(y * y + 4.0 * ratio * eps * eps)
         gap = np.where(y > 0, (y + root) / (2.0 * ratio), 2.0 * eps * eps / np.maximum(root - y, 1e-300))
-        u = np.where(above & ~below, high - gap, low + gap)
-        both = below & above & (low < high)
         if both.any():
-            left, right = np.where(both, low, 0.0), np.where(both, high, 1.0)
-            gap_low, gap_high = np.zeros_like(u), right - left
-            p = 0.5 * gap_high
+            p, w = gap[both], width[both]
+            r, f, b = ratio[both], force[both], base[both]
             for _ in range(ITERATIONS):
-                q = (right - left) - p
-                rest = ratio * (left + p) - eps * eps / p + eps * eps / np.maximum(q, 1e-300) - v
-                slope = ratio + (eps / p) ** 2 + (eps / np.maximum(q, 1e-300)) ** 2
-                gap_low, gap_high = np.where(rest < 0, p, gap_low), np.where(rest > 0, p, gap_high)
-                newton = p - rest / slope
-                inside = (newton > gap_low) & (newton < gap_high)
-                following = np.where(inside, newton, 0.5 * (gap_low + gap_high))
-                if (np.abs(following - p) <= 2e-16 * p)[both].all():
+                near, far = eps / p, eps / (w - p)
+                rest = f - r * (b + p) + eps * (near - far)
+                rise = np.maximum(rest, 0.0) / (r + near * near + far * far)
+                p = np.minimum(p + rise, 0.5 * w)
+                noise = 4e-16 * (np.abs(f) + r * (np.abs(b) + p) + eps * (near + far))
+                if (rest <= noise).all():
                     break
-                p = np.where(rest == 0.0, p, following)
-            u = np.where(both, left + p, u)
+            gap = gap.copy()
+            gap[both] = p
+        u = np.where(mirrored, high - gap, low + gap)
         u = np.where(below | above, u, v / ratio)
-        fixed = self.lower == self.upper
+        fixed = lower == upper
         u = np.where(fixed, low, u)
         with np.errstate(divide="ignore"):
-            bend = np.where(below, (eps / (u - low)) ** 2, 0.0) + np.where(
-                above, (eps / (high - u)) ** 2, 0.0
-            )
+            own = (eps / np.where(below | above, gap, 1.0)) ** 2
+            other = np.where(both, (eps / (width - gap)) ** 2, 0.0)
+            bend = np.where(below | above, own + other, 0.0)
         return u, np.where(fixed, np.inf, bend)
 
     def smoothed_prox(self, v: FloatArray, step: float, eps: float) -> FloatArray:

@@ -147,3 +147,58 @@ def test_many_groups_without_a_loop():
 def test_unusable_parameters_are_named(make, message):
     with pytest.raises(ssn.InputError, match=message):
         make()
+
+
+def test_map_derivative_and_pieces_solve_the_scalar_equations_once(monkeypatch):
+    """And a changed array is seen, even where it is the same object."""
+    cost = ssn.GroupSparseCost(0.5, shape=(6, 4), axis=0, lower=-0.5, upper=0.8)
+    calls = []
+    solved = cost._radius
+    monkeypatch.setattr(cost, "_radius", lambda *given: calls.append(1) or solved(*given))
+    v = np.random.default_rng(0).standard_normal(24)
+    before = cost.prox(v, 0.7)
+    cost.prox_derivative(v, 0.7), cost.pieces(v, 0.7), cost.margins(v, 0.7)
+    assert len(calls) == 1
+    cost.prox(v, 0.8)
+    assert len(calls) == 2
+    v *= 3.0
+    assert not np.array_equal(cost.prox(v, 0.8), before) and len(calls) == 3
+    again = ssn.GroupSparseCost(0.5, shape=(6, 4), axis=0, lower=-0.5, upper=0.8)
+    np.testing.assert_array_equal(cost.prox(v, 0.8), again.prox(v, 0.8))
+
+
+@pytest.mark.parametrize("eps", [1e-1, 1e-3, 1e-6])
+def test_smoothed_bounded_groups_solve_their_equation(eps):
+    """||u_g|| is the smoothed shrinkage of x and v_i = u_i x/s + barrier'(u_i): 200 random groups, few evaluations."""
+    rng = np.random.default_rng(3)
+    n, number = 1000, 200
+    lower = rng.choice([-np.inf, -1.0, 0.0, 0.5], n)
+    upper = np.where(np.isfinite(lower), lower, -1.0) + rng.choice([np.inf, 0.5, 3.0, 0.0], n)
+    inner, beta = rng.uniform(0.3, 2.0, n), rng.choice([0.3, 2.0], number)
+    labels = np.concatenate([np.arange(number), rng.integers(0, number, n - number)])
+    cost = ssn.GroupSparseCost(beta, labels, inner_weights=inner, lower=lower, upper=upper)
+    v = rng.choice([1e-3, 1.0, 30.0], n) * rng.standard_normal(n)
+    calls = []
+    barrier = cost._barrier
+    cost._barrier = lambda *given: calls.append(1) or barrier(*given)
+    u, e, _ = cost._smoothed_parts(v, 0.7, eps)
+    assert len(calls) <= 80
+    free = np.isfinite(e)
+    force = np.zeros(n)
+    for bound, sign in ((lower, -1.0), (upper, 1.0)):
+        there = np.isfinite(bound) & free
+        force[there] += sign * eps**2 / np.abs(bound - u)[there]
+    ratio = (v - force)[free] / u[free]
+    sure = (np.abs(u) > 1e-3) & (
+        np.minimum(u - lower, upper - u) > 1e-3
+    )  # else the barrier's digits are lost
+    sure = sure[free]
+    x = np.array([np.median(ratio[(labels[free] == g) & sure]) if ((labels[free] == g) & sure).any() else np.nan
+                  for g in range(number)])  # fmt: skip
+    length, t = cost.norms(u), 0.7 * beta
+    x = x * length  # x = ratio s
+    a, b = np.hypot(x - t, 2 * eps), np.hypot(x + t, 2 * eps)
+    s = 0.5 * (2 * x + a - b)
+    known = np.isfinite(x)
+    assert known.mean() > 0.2
+    np.testing.assert_allclose(s[known], length[known], rtol=1e-6, atol=1e-9)
