@@ -136,6 +136,7 @@ class ControlProblem:
         self.work = WorkCounts()
         state.attach(self.work)
         self._offset: FloatArray | None = None
+        self._curvature: float | None = None
 
     def _bound_the_state(self, lower: Any, upper: Any, tolerance: float | None, mass: Any) -> None:
         size = self.state.size
@@ -202,7 +203,7 @@ class ControlProblem:
     @property
     def strong_convexity(self) -> float:
         """A lower bound on the modulus of strong convexity of the objective, in the control product."""
-        return self.alpha
+        return self.alpha if self.convex else 0.0
 
     # S u = C E^-1 B u, and its adjoint in the weighted products
 
@@ -302,22 +303,36 @@ class ControlProblem:
         return self.smooth_value(u) + self.cost.value(u, self.weights)
 
     def accuracy(self, u: FloatArray) -> float:
-        """||u - u'|| / ||u'|| with u' the proximal map of the normal map (step 1/alpha), evaluated afresh."""
-        step = 1.0 / self.alpha if self.alpha > 0 else self.natural_step()
+        """||u - u'|| / ||u'|| with u' the proximal map of the normal map (step 1/alpha), evaluated afresh.
+
+        With a cost that is not convex, and where alpha = 0, u' is the proximal gradient point of `natural_step`.
+        """
+        step = 1.0 / self.alpha if self.alpha > 0 and self.convex else self.natural_step()
         _, gradient = self.smooth(u)
         moved = self.cost.prox(u - step * gradient, step)
         return relative(self.controls.norm(u - moved), self.controls.norm(moved))
 
     def natural_step(self) -> float:
-        """1 / ||S||^2, estimated by a few power steps, the step of the natural residual where alpha = 0."""
+        """The step of the natural residual: 1 / ||S||^2 by a few power steps; below 1/L where the cost is not convex.
+
+        There L = ||S||^2 + alpha by 20 power steps, with five percent for what they miss.
+        """
+        if not self.convex:
+            if self._curvature is None:
+                self._curvature = 1.05 * self._size_of_operator(20)
+            return 0.95 / (self._curvature + self.alpha or 1.0)
+        return 1.0 / (self._size_of_operator(5) or 1.0)
+
+    def _size_of_operator(self, steps: int) -> float:
+        """||S||^2 by power steps: a lower bound that comes near."""
         x = np.cos(np.arange(self.unknowns) * 0.7) + 1.5
-        size = 1.0
-        for _ in range(5):
+        size = 0.0
+        for _ in range(steps):
             x = self.adjoint(self.forward(x / self.controls.norm(x)))
             size = self.controls.norm(x)
             if size == 0.0:
-                return 1.0
-        return 1.0 / size
+                break
+        return size
 
     def state_and_adjoint(self, u: FloatArray) -> tuple[FloatArray, FloatArray]:
         """Y and p that belong to u; two state solves."""

@@ -11,6 +11,7 @@ from .augmented_lagrangian import MultiplierResult
 from .complementarity import ComplementarityProblem
 from .composite import CompositeProblem
 from .control import ControlProblem
+from .envelope_start import ControlMap
 from .equations.complementarity import mid_residual
 from .equations.coupled import CoupledEquation
 from .equations.dual import DualEquation
@@ -20,6 +21,7 @@ from .moreau_yosida import collect
 from .newton import Limits, LoopResult
 from .prepare import Plan
 from .protocols import FloatArray
+from .second_order import lowest_curvature
 from .solution import Solution
 from .status import Outcome
 
@@ -41,6 +43,8 @@ def finish(plan: Plan, result: LoopResult, limits: Limits, before: Any) -> Solut
         x, accuracy, fields = collect(plan.equation, best)
     elif isinstance(plan.equation, CoupledEquation):
         x, accuracy, fields = plan.equation.collect(best.x)
+    elif isinstance(plan.problem, ControlProblem):
+        x, accuracy, fields = _finish_local_control(plan.problem, result)
     elif isinstance(plan.problem, CompositeProblem):
         x, accuracy, fields = _finish_composite(plan, result)
     elif isinstance(plan.problem, ComplementarityProblem):
@@ -169,6 +173,39 @@ def _finish_dual(
     return at.x, at.accuracy, fields
 
 
+def _finish_local_control(
+    problem: ControlProblem, result: LoopResult
+) -> tuple[FloatArray, float, dict[str, Any]]:
+    """A stationary point of a control problem whose cost is not convex."""
+    best = result.best
+    if best.data is None:
+        return best.x, float("inf"), {}
+    z: FloatArray = best.data.moved
+    step = problem.natural_step()
+    value, gradient = problem.smooth(z)
+    v = z - step * gradient
+    moved = problem.cost.prox(v, step)
+    accuracy = relative(problem.controls.norm(z - moved), problem.controls.norm(moved))
+    state, adjoint = problem.state_and_adjoint(z)
+    misfit = problem.target - problem.observe(state)
+    response = problem.observe(state - problem.offset())
+    pulled = problem.pull_back(adjoint)
+    doubt = _adjoint_doubt(
+        problem.observations.dot(misfit, response),
+        problem.controls.dot(pulled, z),
+        problem.controls.norm(pulled) * problem.controls.norm(z),
+    )
+    return z, accuracy, {
+        "doubt": doubt if doubt is not None else _control_saddle(problem, z, v, step),
+        "pieces": problem.cost.pieces(v, step),
+        "margins": problem.cost.margins(v, step),
+        "multipliers": problem.cost.multipliers(z, -gradient),
+        "objective": value + problem.cost.value(z, problem.weights),
+        "state": state,
+        "adjoint": adjoint,
+    }  # fmt: skip
+
+
 def _finish_composite(plan: Plan, result: LoopResult) -> tuple[FloatArray, float, dict[str, Any]]:
     problem, best = plan.problem, result.best
     if best.data is None:
@@ -214,24 +251,35 @@ def _composite_doubt(
         if np.isfinite(twice) and twice < there + problem.cost.value(z, problem.weights) - 1e-6 * abs(twice):
             return Outcome.UNBOUNDED, f"the objective is lower still at twice the point: {twice:.3g}"
         return None
-    free = problem.cost.prox_derivative(v, step).diagonal
-    if free is None or not free.any():
+    lowest = lowest_curvature(
+        problem.derivative(z), problem.weights, problem.cost.prox_derivative(v, step), step
+    )
+    if lowest is None or not lowest.negative:
         return None
-    rows = np.flatnonzero(free > 0)
-    hessian = problem.derivative(z)
-    dense = hessian.toarray() if hasattr(hessian, "toarray") else np.asarray(hessian)
-    curvature = problem.weights[rows] * (1.0 / free[rows] - 1.0) / step  # of the cost on its piece
-    values, vectors = np.linalg.eigh(dense[np.ix_(rows, rows)] + np.diag(curvature))
-    if values[0] >= -1e-10 * np.abs(values).max():
-        return None
-    far = z.copy()
-    far[rows] += 1e8 * (1.0 + problem.controls.norm(z)) * vectors[:, 0]
+    far = z + 1e8 * (1.0 + problem.controls.norm(z)) * lowest.direction
     if problem.objective(far) < problem.objective(z):
         return (
             Outcome.UNBOUNDED,
-            f"the objective falls without bound along negative curvature {values[0]:.1e}",
+            f"the objective falls without bound along negative curvature {lowest.value:.1e}",
         )
-    return Outcome.SADDLE_POINT, f"negative curvature {values[0]:.1e} among the free components"
+    return Outcome.SADDLE_POINT, f"negative curvature {lowest.value:.1e} among the free components"
+
+
+def _control_saddle(
+    problem: ControlProblem, z: FloatArray, v: FloatArray, step: float
+) -> tuple[Outcome, str] | None:
+    """Whether the point is no minimum; asked only where the cost is concave enough to outweigh alpha."""
+    derivative = problem.cost.prox_derivative(v, step)
+    free = derivative.diagonal
+    if free is not None:
+        bend = (1.0 / free[free > 0] - 1.0) / step
+        if bend.min(initial=0.0) >= -problem.alpha:
+            return None
+    hessian = ControlMap(problem).derivative(z)
+    lowest = lowest_curvature(hessian, problem.weights, derivative, step)
+    if lowest is None or not lowest.negative:
+        return None
+    return Outcome.SADDLE_POINT, f"negative curvature {lowest.value:.1e} among the free components"
 
 
 def finish_sum(plan: Plan, result: MultiplierResult, limits: Limits, before: Any) -> Solution:

@@ -16,6 +16,7 @@ from .complementarity import ComplementarityProblem
 from .composite import CompositeProblem, LeastSquaresMap
 from .control import ControlProblem
 from .easier_weight import TINY, Detour
+from .envelope_start import EnvelopeStart, control_equation, has_relaxation
 from .equations.augmented import AugmentedEquation
 from .equations.complementarity import FischerBurmeisterEquation, MidEquation, inside_bounds
 from .equations.coupled import CoupledEquation
@@ -52,6 +53,11 @@ PLAIN_STEPS = 12
 # steps of a residual search at a point of the penalty path before a dual search takes over
 QUICK = 6
 
+LOCAL_CHOICES = {
+    "equation": "natural residual",
+    "globalization": "envelope: the forward-backward envelope falls at every step",
+}
+
 LINEAR_CHOICES = ("auto", *LINEAR)
 
 # states from which on cycles on the coupled system beat solves with a factorised state operator
@@ -74,6 +80,7 @@ class Plan:
     penalty: PenaltyPath | None = None
     plain_steps: int = 0
     multipliers: MultiplierPath | None = None
+    relaxation: EnvelopeStart | None = None
     unpack: Callable[[FloatArray], Any] | None = None
     otherwise: Callable[[FloatArray], Plan] | None = None
     detour: Detour | None = None
@@ -123,7 +130,7 @@ def prepare(
         plan.smoothing = SmoothingPath()
         plan.choices["globalization"] = "smoothing: asked for"
     elif globalization != "auto":
-        plan.smoothing, plan.plain_steps = None, 0
+        plan.smoothing, plan.plain_steps, plan.relaxation = None, 0, None
         if plan.penalty is not None:
             plan.penalty = replace(plan.penalty, quick_steps=0)
         plan.globalization = _forced(globalization, plan.equation)
@@ -157,12 +164,14 @@ def _start_array(start: Any, size: int, name: str = "start") -> FloatArray | Non
 
 
 def _prepare_control(problem: ControlProblem, start: Any, globalization: Any, linear: str) -> Plan:
-    if not problem.convex:
-        raise InputError(f"{type(problem.cost).__name__} is not convex: control problems need a convex cost")
     pair = _start_pair(start, problem.state.size)
     if pair is not None and (problem.alpha == 0.0 or problem.state_bounded):
         raise InputError("start: a pair (state, adjoint) needs control_weight > 0 and a state without bounds")
+    if pair is not None and not problem.convex:
+        raise InputError("start: a pair (state, adjoint) needs a convex cost; give a control")
     control = _start_array(start, problem.unknowns) if pair is None else None
+    if not problem.convex:
+        return _prepare_nonconvex_control(problem, control)
     if problem.state_bounded:
         return _prepare_state_bounds(problem, control)
     searched = globalization == "auto" or isinstance(globalization, DualSearch) or globalization == "dual"
@@ -256,6 +265,23 @@ def _coupled_with_weight(problem: ControlProblem, factor: float) -> tuple[Couple
     return equation, CoupledSolver(equation)
 
 
+def _prepare_nonconvex_control(problem: ControlProblem, control: FloatArray | None) -> Plan:
+    if problem.state_bounded:
+        raise InputError(f"{type(problem.cost).__name__} is not convex: state bounds need a convex cost")
+    equation = control_equation(problem)
+    x = np.zeros(problem.unknowns) if control is None else control
+    plan = Plan(problem, equation, ReducedSolver(equation), EnvelopeSearch(), x, dict(LOCAL_CHOICES))
+    return _relaxed_first(plan, control)
+
+
+def _relaxed_first(plan: Plan, start: FloatArray | None) -> Plan:
+    """The plan with the convex envelope before it, where there is one and no start was given."""
+    if start is None and has_relaxation(plan.problem):
+        plan.relaxation = EnvelopeStart()
+        plan.choices["path"] = "convex envelope: starts and a lower bound, then Newton steps on the support"
+    return plan
+
+
 def _prepare_state_bounds(problem: ControlProblem, control: FloatArray | None) -> Plan:
     if getattr(problem.state, "matrix", None) is None:
         raise InputError(
@@ -303,11 +329,15 @@ def _prepare_composite(problem: CompositeProblem, start: Any, globalization: Any
         )  # fmt: skip
     equation = _natural_equation(problem)
     x = problem.cost.prox(np.zeros(problem.unknowns) if u is None else u, 1e-300)
-    choices = {
-        "equation": "natural residual",
-        "globalization": "envelope: the forward-backward envelope falls at every step",
-    }
-    return Plan(problem, equation, ReducedSolver(equation), EnvelopeSearch(), x if u is None else u, choices)
+    plan = Plan(
+        problem,
+        equation,
+        ReducedSolver(equation),
+        EnvelopeSearch(),
+        x if u is None else u,
+        dict(LOCAL_CHOICES),
+    )
+    return plan if problem.cost.convex else _relaxed_first(plan, u)
 
 
 def _natural_equation(problem: CompositeProblem) -> NaturalEquation:

@@ -90,7 +90,7 @@ def proximal_gradient(
             "proximal_gradient needs an objective; use extragradient for complementarity without one"
         )
     controls, cost = problem.controls, problem.cost
-    mu = float(problem.strong_convexity)
+    mu = float(problem.strong_convexity) if cost.convex else 0.0  # a modulus of f alone proves nothing then
     affine = bool(getattr(problem, "affine", True))
     before = problem.work.copy()
     began = time.monotonic()

@@ -50,6 +50,9 @@ class Solution:
         Distance of each component to its nearest kink, in the unit of x: strict complementarity is the smallest one.
     certificate : Certificate or None
         Distance bound to the exact discrete solution, where the problem is strongly convex.
+    lower_bound : float or None
+        Count and power costs: no point has a lower objective than this, by the convex envelope (up to rounding of the
+        linear solves). `gap` compares it with the objective. It says nothing about the distance to a minimiser.
     state, adjoint : array or None
         Control problems: y and p with E'p = C'Wy(z - Cy), minus M l where the state has bounds.
     violation : float or None
@@ -75,6 +78,7 @@ class Solution:
     multipliers: Mapping[str, FloatArray] = field(default_factory=dict)
     margins: FloatArray | None = None
     certificate: Certificate | None = None
+    lower_bound: float | None = None
     state: FloatArray | None = None
     adjoint: FloatArray | None = None
     violation: float | None = None
@@ -108,6 +112,13 @@ class Solution:
                 self,
             )
         return self
+
+    @property
+    def gap(self) -> float | None:
+        """(objective - lower bound) / |objective|, the most that another point can gain; None without a bound."""
+        if self.lower_bound is None:
+            return None
+        return float((self.objective - self.lower_bound) / max(abs(self.objective), 1e-300))
 
     @property
     def contractions(self) -> list[float]:

@@ -11,6 +11,7 @@ import numpy as np
 
 from .augmented_lagrangian import follow_multipliers
 from .easier_weight import run_with_detour
+from .envelope_start import run_envelope_start
 from .equations.dual import DualEquation
 from .equations.natural import NaturalPoint
 from .errors import InputError, SolveInterrupted
@@ -109,6 +110,8 @@ def solve(
         solution = finish_sum(plan, path, limits, before)
     elif plan.path is not None:
         solution = _run_path(plan, limits, observer, before)
+    elif plan.relaxation is not None:
+        solution = _run_relaxed(plan, limits, observer, before)
     elif plan.penalty is not None:
         solution = _run_penalty(plan, limits, observer, before)
     else:
@@ -159,7 +162,8 @@ def _run_until_confirmed(plan: Plan, limits: Limits, callback: Callback | None, 
     solution = finish(plan, result, limits, before)
     inner = limits
     for _ in range(CONFIRMATIONS):
-        if solution.outcome is not Outcome.INACCURATE or not np.isfinite(solution.accuracy):
+        # where the accuracy is met and something else is in doubt, further steps do not help
+        if solution.outcome is not Outcome.INACCURATE or not limits.tolerance < solution.accuracy < np.inf:
             break
         left = limits.max_steps - len(result.steps)
         result.best = _at_scale(plan.equation, result.best)
@@ -287,6 +291,12 @@ def _run_path(plan: Plan, limits: Limits, callback: Callback | None, before: Any
         else result.equation
     )
     return finish(plan, result.loop, limits, before)
+
+
+def _run_relaxed(plan: Plan, limits: Limits, callback: Callback | None, before: Any) -> Solution:
+    assert plan.relaxation is not None
+    result = run_envelope_start(plan.problem, plan.equation, limits, plan.relaxation, callback)
+    return replace(finish(plan, result.loop, limits, before), lower_bound=result.lower_bound)
 
 
 def _run_penalty(plan: Plan, limits: Limits, callback: Callback | None, before: Any) -> Solution:

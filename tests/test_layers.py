@@ -58,6 +58,8 @@ LEVELS: dict[str, float] = {
     "proximal_point": 2.25,
     "smoothing_path": 2.25,
     "augmented_lagrangian": 2.25,
+    "second_order": 2.25,
+    "envelope_start": 2.27,
     # what "auto" decides, and the end of a solve
     "extragradient": 2.1,
     "prepare": 2.3,

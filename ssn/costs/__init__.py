@@ -5,6 +5,7 @@ from .bounds import Bounds
 from .count import CountCost
 from .derivative import DiagonalDerivative
 from .elastic_net import ElasticNetCost
+from .envelope import ConvexEnvelope
 from .group import GroupSparseCost
 from .halfspace import HalfSpace, Hyperplane
 from .huber import HuberCost
@@ -39,6 +40,7 @@ CATALOGUE = (
     Product,
     CountCost,
     PowerCost,
+    ConvexEnvelope,
     GroupSparseCost,
     SwitchingCost,
     MultiBangCost,
@@ -52,6 +54,7 @@ __all__ = [
     "CATALOGUE",
     "Bounds",
     "ConjugateCost",
+    "ConvexEnvelope",
     "CountCost",
     "DiagonalDerivative",
     "ElasticNetCost",

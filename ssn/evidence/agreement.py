@@ -15,6 +15,8 @@ from .method_result import MethodResult
 
 LOOSEST = 1e-3
 STRICT = 1e-9
+# accuracy from which on the point of another method counts as stationary
+STATIONARY = 1e-3
 
 
 def checked_tolerance(value: Any) -> float:
@@ -84,14 +86,18 @@ def _by_objective(solution: Solution, other: MethodResult, tolerance: float) -> 
     """Nonconvex problems compare objective and stationarity."""
     gap = other.objective - solution.objective
     scale = abs(other.objective) + abs(solution.objective)
+    if solution.lower_bound is not None and other.objective < solution.lower_bound - STRICT * scale:
+        return "fails", f"nonconvex: its objective {other.objective:.10g} lies below our lower bound"
     if not solution.accuracy <= 10.0 * solution.tolerance:
         return "undecided", f"nonconvex: our point is not stationary, accuracy {solution.accuracy:.1e}"
-    if gap >= -tolerance * scale:
-        return "holds", f"nonconvex: both stationary, its objective is {gap:+.1e} from ours"
-    return (
-        "undecided",
-        f"nonconvex: it found a lower objective, by {-gap:.1e}; our point is stationary, not the best",
-    )
+    if gap < -tolerance * scale:
+        return (
+            "undecided",
+            f"nonconvex: it found a lower objective, by {-gap:.1e}; our point is stationary, not the best",
+        )
+    if not other.accuracy <= STATIONARY:
+        return "undecided", f"nonconvex: its point is not stationary, accuracy {other.accuracy:.1e}"
+    return "holds", f"nonconvex: both stationary, its objective is {gap:+.1e} from ours"
 
 
 def objective_check(

@@ -99,6 +99,12 @@ def _convergence(solution: Solution) -> Sentence:
 
 def _certainty(solution: Solution) -> Sentence:
     certificate = solution.certificate
+    if certificate is None and solution.gap is not None:
+        text = (
+            f"No other point can have an objective lower by more than {small(max(solution.gap, 0.0))} of it "
+        )
+        text += "(bound by the convex envelope); how far a better point would be is not known."
+        return Sentence("Certainty", text)
     if certificate is None:
         text = (
             "No distance bound: the problem is not known to be strongly convex. The accuracy is a residual."

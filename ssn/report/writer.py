@@ -61,6 +61,7 @@ def solution_document(
         "accuracy": plain(solution.accuracy),
         "tolerance": plain(solution.tolerance),
         "residual_norm": plain(solution.residual_norm),
+        "lower_bound": plain(solution.lower_bound),
         "certificate": None if certificate is None else plain(certificate.as_dict()),
         "active": plain(solution.pieces.sizes()),
         "work": plain(solution.work.as_dict()),

@@ -38,3 +38,9 @@ def power_costs(draw: Any) -> tuple[Any, int]:
 
 INSTANCES = {ssn.costs.CountCost: count_costs(), ssn.costs.PowerCost: power_costs()}
 SMOOTHING = {ssn.costs.CountCost: np.inf, ssn.costs.PowerCost: np.inf}  # at the jump; see test_nonconvex.py
+
+
+@st.composite
+def envelopes(draw: Any) -> tuple[Any, int]:
+    cost, n = draw(st.one_of(count_costs(), power_costs()))
+    return ssn.costs.ConvexEnvelope(cost, draw(st.sampled_from([0.0, 0.3, 1.0, 4.0]))), n

@@ -214,6 +214,7 @@ INSTANCES = {
     ssn.TranslatedCost: translated_costs(),
     ssn.ConjugateCost: conjugate_costs(),
     **nonconvex.INSTANCES,
+    ssn.costs.ConvexEnvelope: nonconvex.envelopes(),
 }
 
 # error of the smoothed map divided by eps: each max(a, b) contributes at most 1
@@ -235,6 +236,7 @@ SMOOTHING = {
     ssn.TranslatedCost: 12.0,
     ssn.ConjugateCost: 12.0,
     **nonconvex.SMOOTHING,
+    ssn.costs.ConvexEnvelope: 4.0,
 }
 
 
@@ -739,6 +741,7 @@ EXPECTED = {
     ssn.ConjugateCost: 22,
     ssn.costs.CountCost: 14,
     ssn.costs.PowerCost: 14,
+    ssn.costs.ConvexEnvelope: 22,
 }
 
 

@@ -198,12 +198,12 @@ def test_the_objective_falls_from_step_to_step(cost):
         assert (np.diff(objectives) <= 1e-12 * abs(objectives[-1])).all()
 
 
-def test_control_problems_refuse_them_by_name():
-    with pytest.raises(ssn.InputError, match="CountCost is not convex"):
+def test_state_bounds_refuse_them_by_name():
+    with pytest.raises(ssn.InputError, match="CountCost is not convex: state bounds need a convex cost"):
         ssn.solve(
             ssn.ControlProblem(
                 state=ssn.SteadyState(np.eye(3)), state_mass=np.ones(3), target=np.ones(3), control_weight=1.0,
-                cost=ssn.CountCost(1.0),
+                cost=ssn.CountCost(1.0), state_upper=0.5,
             )
         )  # fmt: skip
 
@@ -225,3 +225,44 @@ def test_control_problems_refuse_them_by_name():
 def test_unusable_parameters_are_named(make, message):
     with pytest.raises(ssn.InputError, match=message):
         make()
+
+
+@pytest.mark.parametrize("power", [0.0, 0.5, 2.0 / 3.0, 0.3])
+@pytest.mark.parametrize(
+    ("lower", "upper", "alpha"), [(-np.inf, np.inf, 0.8), (-0.5, 2.0, 0.8), (0.0, 0.7, 0.0), (-3.0, 3.0, 5.0)]
+)
+def test_the_envelope_is_the_lower_convex_hull(power, lower, upper, alpha):
+    """Against the hull of the graph on a fine grid, by chords."""
+    cost = parts(power, 0.9, lower, upper)
+    envelope = ssn.costs.ConvexEnvelope(cost, alpha)
+    grid = np.linspace(max(lower, -4.0), min(upper, 4.0), 801)
+    grid = np.unique(np.append(grid, 0.0))
+    h = np.where(grid != 0, 0.9 * np.abs(grid) ** power, 0.0) + 0.5 * alpha * grid**2
+    hull = []
+    for point in zip(grid, h, strict=True):
+        while len(hull) > 1:
+            (a, fa), (b, fb) = hull[-2:]
+            if (fb - fa) * (point[0] - a) < (point[1] - fa) * (b - a):
+                break
+            hull.pop()
+        hull.append(point)
+    x, fx = np.transpose(hull)
+    expected = np.interp(grid, x, fx)
+    found = envelope.terms(grid)
+    np.testing.assert_allclose(
+        found, expected, atol=3e-3
+    )  # the hull of a grid lies above, near the tangent point
+    assert (found <= expected + 1e-12).all() and (found <= h + 1e-12).all()
+    above, below = envelope.tangent_sizes
+    touching = np.clip(np.array([float(above), -float(below)]), -10, 10)
+    direct = np.where(touching != 0, 0.9 * np.abs(touching) ** power, 0.0) + 0.5 * alpha * touching**2
+    np.testing.assert_allclose(envelope.terms(touching), direct, rtol=1e-12)
+
+
+def test_the_envelope_of_a_count_in_closed_form():
+    """Sqrt(2 alpha beta) |u| up to sqrt(2 beta / alpha), then beta + alpha/2 u^2."""
+    envelope = ssn.costs.ConvexEnvelope(ssn.CountCost(2.0), 4.0)
+    assert [float(t) for t in envelope.tangent_sizes] == [1.0, 1.0]
+    np.testing.assert_allclose(envelope.terms(np.array([0.0, -0.5, 1.0, 2.0])), [0.0, 2.0, 4.0, 10.0])
+    with pytest.raises(ssn.InputError, match="CountCost or PowerCost"):
+        ssn.costs.ConvexEnvelope(ssn.SparseCost(1.0), 1.0)
