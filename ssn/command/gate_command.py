@@ -22,6 +22,10 @@ def _baseline_path(context: click.Context, parameter: click.Parameter, text: str
     return output_path(context, parameter, text) if context.params.get("update") else Path(text)
 
 
+# several times what the slowest reference of the problems here needs
+ITERATIONS = 5000
+
+
 @click.command("gate")
 @click.argument("folder", metavar="FOLDER")
 @click.option(
@@ -29,6 +33,10 @@ def _baseline_path(context: click.Context, parameter: click.Parameter, text: str
 )  # fmt: skip
 @click.option("--update", is_flag=True, is_eager=True, help="Write the baseline: declares every change.")
 @budget_option
+@click.option(
+    "--iterations", metavar="NUMBER", type=click.IntRange(min=1), default=ITERATIONS, show_default=True,
+    help="For the built-in reference: unlike seconds they repeat on every machine.",
+)  # fmt: skip
 @json_option
 @click.pass_context
 def gate_problems(
@@ -37,6 +45,7 @@ def gate_problems(
     baseline_path: Path,
     update: bool,
     budget: float,
+    iterations: int,
     json_path: Path | None,
 ) -> int:
     """Compare the figures that repeat with a stored baseline, for the problem files of FOLDER.
@@ -55,7 +64,7 @@ def gate_problems(
         for job in _jobs(run, folder):
             try:
                 with run.forgiving(job.name, job.file), terminal.progress(job.name) as report:
-                    assessment = assessed(job, report, budget)
+                    assessment = assessed(job, report, budget, iterations)
                     cases.append(gate.measured(job.name, assessment, job.file.build(**job.parameters)))
             except KeyboardInterrupt:
                 terminal.complain(f"{job.name}: interrupted; the cases before it:")

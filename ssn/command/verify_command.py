@@ -114,15 +114,18 @@ def _verified(run: Run, job: Job, sizes: Sequence[int], budget: float, found: li
             found.append(Verification(assessment, studied, studied.note, True, time.perf_counter() - began))
 
 
-def assessed(job: Job, report: rep.Report, budget: float) -> Assessment:
-    """Solve the problem of a job and assess the solution; the solution is kept with the job."""
+def assessed(job: Job, report: rep.Report, budget: float, iterations: int | None = None) -> Assessment:
+    """Solve the problem of a job and assess the solution; the solution is kept with the job.
+
+    With `iterations` the built-in reference has a budget that repeats on every machine.
+    """
     problem = job.file.build(**job.parameters)
     began = time.perf_counter()
     solution = solve_job(job, problem, report)
     seconds = time.perf_counter() - began
     assessment = assess(
         problem, parameters=job.parameters, name=job.file.name, known=job.file.known, budget=budget, progress=report,
-        solution=solution, libraries=True,
+        solution=solution, libraries=True, iterations=iterations,
     )  # fmt: skip
     ours = replace(assessment.methods[0], seconds=seconds)
     return replace(assessment, methods=(ours, *assessment.methods[1:]))

@@ -12,7 +12,7 @@ import numpy as np
 
 from ..solution import Solution
 from ..solve import solve
-from ..validate import scalar
+from ..validate import count, scalar
 from . import judge
 from .agreement import checked_tolerance, decide, objective_check
 from .certificate import certificate
@@ -28,6 +28,8 @@ from .references import reference_name, references
 SLOW = 0.3
 # beyond this number of unknowns the rate is measured from two directions of each kind
 LARGE = 20_000
+# iterations of a reference at the last penalty of hard state bounds, where it does not get anywhere
+BRIEF = 500
 
 
 @dataclass(frozen=True)
@@ -129,6 +131,7 @@ def assess(
     solution: Solution | None = None,
     seed: int = 0,
     libraries: bool | None = None,
+    iterations: int | None = None,
 ) -> Assessment:
     """Solve a problem and collect the evidence for and against the solution.
 
@@ -159,6 +162,8 @@ def assess(
     libraries : bool, optional
         Whether methods of general libraries are asked too, where the problem fits them and they are installed. By
         default only for hard state bounds, where no first-order method decides about agreement. The commands ask.
+    iterations : int, optional
+        A budget of the built-in reference that repeats on every machine, in place of seconds.
 
     Returns
     -------
@@ -172,6 +177,7 @@ def assess(
     """
     agreement_tolerance = checked_tolerance(agreement_tolerance)
     budget = scalar(budget, "budget", nonnegative=True)
+    iterations = None if iterations is None else count(iterations, "iterations")
     own_methods = named(methods)
     tell = progress if progress is not None else _silent
     tell("solving")
@@ -186,7 +192,9 @@ def assess(
     own = ours(problem, solution, seconds)
     # at the last penalty of hard state bounds no first-order method gets anywhere: it may try, briefly
     patience = min(budget, 2.0) if getattr(stated, "state_bounded", False) else budget
-    others, checks = _others(problem, solution, own_methods, patience, agreement_tolerance, tell)
+    if iterations is not None and getattr(stated, "state_bounded", False):
+        iterations = min(iterations, BRIEF)
+    others, checks = _others(problem, solution, own_methods, patience, agreement_tolerance, tell, iterations)
     if getattr(stated, "state_bounded", False) if libraries is None else libraries:
         others += library_results(stated, problem, solution, set(own_methods), budget, tell)
     verdict, note = decide(problem, solution, others, agreement_tolerance)
@@ -234,12 +242,21 @@ def _others(
     budget: float,
     agreement_tolerance: float,
     tell: Callable[..., Any],
+    iterations: int | None,
 ) -> tuple[list[MethodResult], list[Check]]:
     """The built-in reference and the user's methods, and a failing check for each that raised."""
     results, checks = [], []
     tell(reference_name(problem))
     try:
-        results.extend(references(problem, solution, budget=budget, agreement_tolerance=agreement_tolerance))
+        results.extend(
+            references(
+                problem,
+                solution,
+                budget=budget,
+                agreement_tolerance=agreement_tolerance,
+                iterations=iterations,
+            )
+        )
     except Exception as error:
         checks.append(Check(reference_name(problem), False, f"raised {describe(error)}"))
     for name, method in own_methods.items():

@@ -20,6 +20,8 @@ from .residual_only import residual_only
 # relative distance bound that the reference aims at: three times below the agreement asked for
 AIM = 0.3
 LEAST_TOLERANCE = 1e-12
+# iterations of a call where the budget is in seconds
+MOST_ITERATIONS = 100_000
 ROOT_FINDER = "residual-only root finder"
 
 
@@ -31,9 +33,17 @@ def reference_name(problem: Any) -> str:
 
 
 def references(
-    problem: Any, solution: Solution, *, budget: float, agreement_tolerance: float
+    problem: Any,
+    solution: Solution,
+    *,
+    budget: float | None,
+    agreement_tolerance: float,
+    iterations: int | None = None,
 ) -> list[MethodResult]:
     """Run the built-in reference until it is near enough to decide about agreement, or out of budget.
+
+    The budget is in seconds. With `iterations` given it is in iterations instead, so that what is decided does not
+    depend on the machine; the root finder then stops by its own limits.
 
     A reference without a bound of its own that stopped by its rule but is not within the agreement tolerance goes
     on from its own point with a tenth of the tolerance. Complementarity without an objective may have several
@@ -41,11 +51,14 @@ def references(
     whether there is a solution here.
     """
     began = time.perf_counter()
+    if iterations is not None:
+        budget = None
+    most = iterations if iterations is not None else MOST_ITERATIONS
     if not judge.is_statement(problem):
         return [_root_finder(problem, problem, solution, budget)]
     tolerance = AIM * agreement_tolerance
-    result = _first_order(problem, None, tolerance, budget)
-    iterations, products, solves = result.iterations, result.work.operator_products, result.work.state_solves
+    result = _first_order(problem, None, tolerance, budget, most)
+    taken, products, solves = result.iterations, result.work.operator_products, result.work.state_solves
 
     def seconds() -> float:
         return time.perf_counter() - began
@@ -58,17 +71,19 @@ def references(
         and result.bound is None
         and apart() > agreement_tolerance
         and tolerance > LEAST_TOLERANCE
-        and seconds() < budget
+        and (budget is None or seconds() < budget)
+        and taken < most
     ):
         tolerance *= 0.1
-        result = _first_order(problem, result.x, tolerance, budget - seconds())
-        iterations += result.iterations
+        left = None if budget is None else budget - seconds()
+        result = _first_order(problem, result.x, tolerance, left, most - taken)
+        taken += result.iterations
         products += result.work.operator_products
         solves += result.work.state_solves
     found = [
         MethodResult(
             reference_name(problem), result.converged, result.outcome, judge.objective(problem, result.x),
-            judge.accuracy(problem, result.x), iterations, solves, products, seconds(), apart(),
+            judge.accuracy(problem, result.x), taken, solves, products, seconds(), apart(),
             own_bound(problem, result.x, result.bound), "", result.x,
         )
     ]  # fmt: skip
@@ -92,13 +107,14 @@ class MidResidual:
         return x - moved
 
 
-def _first_order(problem: Any, start: FloatArray | None, tolerance: float, budget: float) -> ReferenceResult:
-    if judge.has_objective(problem):
-        return proximal_gradient(problem, start, tolerance=tolerance, budget=budget)
-    return extragradient(problem, start, tolerance=tolerance, budget=budget)
+def _first_order(
+    problem: Any, start: FloatArray | None, tolerance: float, budget: float | None, most: int
+) -> ReferenceResult:
+    method = proximal_gradient if judge.has_objective(problem) else extragradient
+    return method(problem, start, tolerance=tolerance, budget=budget, max_iterations=most)
 
 
-def _root_finder(problem: Any, residual: Any, solution: Solution, budget: float) -> MethodResult:
+def _root_finder(problem: Any, residual: Any, solution: Solution, budget: float | None) -> MethodResult:
     began = time.perf_counter()
     result = residual_only(residual, solution.x, tolerance=min(1e-9, solution.tolerance), budget=budget)
     seconds = time.perf_counter() - began

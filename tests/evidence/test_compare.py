@@ -244,9 +244,9 @@ def test_complementarity_with_two_solutions_is_confirmed_locally():
 
 
 def test_a_reference_that_stops_too_early_goes_on(monkeypatch):
-    def early(problem, start, *, tolerance, budget):
+    def early(problem, start, *, tolerance, **budget):
         tolerances.append(tolerance)
-        return ssn.proximal_gradient(problem, start, tolerance=min(1e3 * tolerance, 0.1), budget=budget)
+        return ssn.proximal_gradient(problem, start, tolerance=min(1e3 * tolerance, 0.1), **budget)
 
     tolerances = []
     monkeypatch.setattr("ssn.evidence.references.proximal_gradient", early)
@@ -439,3 +439,20 @@ def test_the_root_finder_starts_elsewhere():
     )
     solution = ssn.solve(line)
     assert assess(line, solution=solution).agreement == "undecided"
+
+
+def test_a_budget_of_iterations_repeats_whatever_the_seconds():
+    """Seconds of almost nothing do not cut it short; the counts repeat, and too few iterations decide nothing."""
+    verdicts = [assess(cases.control(), budget=1e-9, iterations=5000) for _ in range(2)]
+    assert [v.agreement for v in verdicts] == ["holds", "holds"]
+    assert verdicts[0].methods[1].steps == verdicts[1].methods[1].steps > 3
+    few = assess(cases.control(), iterations=3)
+    assert few.agreement == "undecided" and few.methods[1].steps == 3
+    assert assess(cases.control(), budget=1e-9).agreement == "undecided"
+    with pytest.raises(ssn.InputError, match="iterations"):
+        assess(cases.control(), iterations=0)
+
+
+@pytest.mark.parametrize("make", [cases.complementarity, cases.obstacle, cases.least_squares, cases.kinked])
+def test_every_kind_of_reference_takes_a_budget_of_iterations(make):
+    assert assess(make(), budget=1e-9, iterations=20_000).agreement == "holds"

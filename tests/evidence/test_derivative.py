@@ -188,3 +188,48 @@ def test_nothing_given_is_changed():
     check_derivative(equation, at)
     assert (at == 0.9).all()
     assert (equation.start == 3.0).all()
+
+
+class GroupWithOneLabelSwapped(ssn.GroupSparseCost):
+    """A component of a vanishing group carries the label of the others."""
+
+    def pieces(self, v, step):
+        found = super().pieces(v, step)
+        labels = found["control"].copy()
+        labels[int(np.argmax(labels == 0))] = 1
+        return ssn.Pieces({"control": labels}, found.legend)
+
+
+class SwitchingWithOneLabelSwapped(ssn.SwitchingCost):
+    """An actuator that is off carries the label of one that is on."""
+
+    def pieces(self, v, step):
+        found = super().pieces(v, step)
+        labels = found["control"].copy()
+        labels[int(np.argmax(labels == 1))] = 2
+        return ssn.Pieces({"control": labels}, found.legend)
+
+
+def coupled(cost):
+    rng = np.random.default_rng(4)
+    a = rng.standard_normal((30, 12))
+    a *= np.repeat([1.0, 0.1], 6)  # the second half is hardly worth its price
+    return ssn.CompositeProblem(smooth=ssn.LeastSquares(a, a @ np.ones(12)), cost=cost)
+
+
+@pytest.mark.parametrize(
+    ("right", "wrong"),
+    [
+        (ssn.GroupSparseCost, GroupWithOneLabelSwapped), (ssn.SwitchingCost, SwitchingWithOneLabelSwapped),
+    ],
+)  # fmt: skip
+def test_labels_of_coupled_components_are_checked(right, wrong):
+    """The derivative is no diagonal there: rows of zeros are told from others."""
+    given = {"groups": np.repeat(np.arange(4), 3)} if right is ssn.GroupSparseCost else {"shape": (4, 3)}
+    solution = ssn.solve(coupled(right(2.0, **given))).require()
+    sizes = solution.pieces.sizes()["control"]
+    assert 0 < sizes["zero" if right is ssn.GroupSparseCost else "off"] < 12
+    for kind, names in ((right, set()), (wrong, {"pieces"})):
+        checks = check_derivative(coupled(kind(2.0, **given)), solution.x)
+        assert {c.name for c in checks} >= {"pieces"}
+        assert cases.names(checks) == names, [c for c in checks if not c.holds]
