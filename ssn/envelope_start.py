@@ -10,6 +10,9 @@ because h* = (h**)*: a lower bound whatever the accuracy of the path. The compon
 are rounded at several levels, and the points of least objective are starts of Newton steps for a fixed point of the
 proximal gradient map with a step just below 1/L, each of which lowers the objective.
 
+The gap between the two is small where the supports are many mesh points wide: it belongs to the undecided components
+along their edges. A support of a few points, or a price far above what a component can gain, leaves it wide.
+
 Source: Fenchel-Rockafellar duality; the proximal map as iterative hard thresholding: T. Blumensath and M. Davies, J.
 Fourier Anal. Appl. 14 (2008) 629-654; for control problems D. Wachsmuth, 2019 (all from memory). The roundings are
 ours.

@@ -13,6 +13,8 @@ from ssn.envelope_start import EnvelopeStart, Relaxation, relaxation, run_envelo
 from ssn.evidence import assess
 from ssn.newton import Limits
 from ssn.prepare import prepare
+from ssn.report.words import assessment_sentences
+from ssn.report.writer import solution_document
 from tests.problems.loading import load
 
 SPARSE_ELLIPTIC = load("sparse_elliptic")
@@ -244,6 +246,16 @@ def test_a_bound_that_is_too_high_is_found():
     assert assess(problem, solution=solution, budget=2.0).agreement == "holds"
     verdict = assess(problem, solution=wrong, methods=ours, budget=0.5)
     assert verdict.agreement == "fails" and "below our lower bound" in verdict.agreement_note
+
+
+def test_the_gap_is_told_in_words_and_as_data():
+    problem = elliptic(ssn.CountCost(1e-2, -30, 30), n=10)
+    solution = ssn.solve(problem).require()
+    told = {s.topic: s.text for s in assessment_sentences(assess(problem, solution=solution, budget=2.0))}
+    assert "No other point can have an objective lower by more than" in told["Certainty"]
+    assert solution_document({}, "name", {}, solution)["lower_bound"] == solution.lower_bound
+    plain = ssn.solve(elliptic(ssn.SparseCost(1e-3), n=10))
+    assert plain.gap is None and solution_document({}, "name", {}, plain)["lower_bound"] is None
 
 
 def test_the_wrong_conjugate_is_no_bound(monkeypatch):
