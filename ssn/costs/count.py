@@ -49,8 +49,9 @@ class CountCost:
     A problem with this cost is solved for a fixed point of the proximal gradient map with a step just below 1/L: the
     objective falls from step to step, and every point returned is stationary (a local minimum on its support), no more.
     It depends on the start. Without a given one, least squares and control problems start from their convex envelope
-    (`ConvexEnvelope`), and ``Solution.lower_bound`` and ``Solution.gap`` say how much another point could gain. Other
-    problems are solved from zero; take several starts and keep the best::
+    (`ConvexEnvelope`), and ``Solution.lower_bound`` and ``Solution.gap`` say how much another point could gain. Least
+    squares with more unknowns than rows and no bounds have a flat envelope, which says nothing (gap near 1), and other
+    problems are solved from zero; there take several starts and keep the best::
 
         starts = [np.zeros(n), unpenalised, *(rng.standard_normal(n) for _ in range(8))]
         best = min((ssn.solve(problem, s) for s in starts), key=lambda found: found.objective)
