@@ -73,9 +73,9 @@ class CoupledEquation:
 
     Notes
     -----
-    The accuracy is 1.25 times the size of the first cycle of the next Newton step, in the norm of the module docstring and
-    divided by sqrt(alpha), relative to ||u||; where u = 0, to the argument of the proximal map. The certificate at the
-    end does not rely on it.
+    The accuracy is 1.25 times the size of the first cycle of the next Newton step, in the norm of the module docstring
+    and divided by sqrt(alpha), relative to ||u||; where u = 0, to the argument of the proximal map. The certificate at
+    the end does not rely on it.
     """
 
     def __init__(self, problem: Any) -> None:
