@@ -15,6 +15,7 @@ PUBLIC = {
         CountCost DualSearch ElasticNetCost EnvelopeSearch Equation EuclideanBall FullStep GroupSparseCost HalfSpace
         HingeLoss HuberCost Hyperplane InputError InsensitiveLoss Iteration L1Ball LeastSquares Linearization
         Logistic MissingExtraError MultiBangCost NotConverged Outcome Pieces PiecewiseQuadraticCost
+        PlanarMultiBangCost
         PositiveSemidefiniteCone PowerCost ProblemFileError Product Quadratic QuantileLoss ResidualSearch ScaledCost
         SecondOrderCone Simplex SmoothMap SmoothPart Solution SolveInterrupted SparseCost StateModel SteadyState
         StepRecord StopSolve SumProblem SumWithQuadratic SwitchingCost Term TimeDependentState TracedEquation

@@ -13,6 +13,7 @@ from .losses import HingeLoss, InsensitiveLoss, QuantileLoss
 from .multibang import MultiBangCost
 from .operations import ConjugateCost, ScaledCost, SumWithQuadratic, TranslatedCost
 from .piecewise import PiecewiseQuadraticCost
+from .planar import PlanarMultiBangCost
 from .power import PowerCost
 from .product import Product
 from .second_order_cone import SecondOrderCone
@@ -44,6 +45,7 @@ CATALOGUE = (
     GroupSparseCost,
     SwitchingCost,
     MultiBangCost,
+    PlanarMultiBangCost,
     SumWithQuadratic,
     ScaledCost,
     TranslatedCost,
@@ -68,6 +70,7 @@ __all__ = [
     "L1Ball",
     "MultiBangCost",
     "PiecewiseQuadraticCost",
+    "PlanarMultiBangCost",
     "PositiveSemidefiniteCone",
     "PowerCost",
     "Product",

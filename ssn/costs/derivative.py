@@ -16,6 +16,10 @@ FloatArray = npt.NDArray[np.float64]
 
 # components of a group from which on its block is not written out
 LARGEST_BLOCK = 8
+# entries of all blocks together up to which they are written out for their eigenvectors
+MOST_ENTRIES = 5_000_000
+# eigenvalues of a block of a derivative that are rounding
+EIGENVALUE_ROUNDING = 1e-12
 
 
 class DiagonalDerivative:
@@ -71,6 +75,15 @@ class BlockDerivative:
             self.diagonal = np.concatenate(
                 [np.broadcast_to(d, (n,)) for d, n in zip(diagonals, sizes, strict=True) if d is not None]
             )
+
+    def modes(self, weights: FloatArray) -> tuple[sp.csc_array, FloatArray] | None:
+        """Those of the parts; None where one of them has none."""
+        pairs = zip(self.parts, np.split(weights, self.ends), strict=True)
+        found = [pair for pair in (modes(part, w) for part, w in pairs) if pair is not None]
+        if len(found) < len(self.parts):
+            return None
+        basis = sp.block_diag([basis for basis, _ in found], format="csc")
+        return sp.csc_array(basis), np.concatenate([d for _, d in found])
 
     def apply(self, directions: FloatArray) -> FloatArray:
         """Multiply a vector (n,) or the columns of (n, k)."""
@@ -162,6 +175,26 @@ class GroupDerivative:
             d, p, q = d[:, None], p[:, None], q[:, None]
         return d * directions + p * self._groups.spread(self._groups.sum(q * directions))
 
+    def modes(self, weights: FloatArray) -> tuple[sp.csc_array, FloatArray] | None:
+        """Eigenvectors and eigenvalues above zero, by group; None where groups are too large or differ in size."""
+        groups = self._groups
+        size = int(groups.counts[0])
+        if size * groups.size > MOST_ENTRIES or (groups.counts != size).any():
+            return None
+        members = np.argsort(groups.labels, kind="stable").reshape(-1, size)
+        root = np.sqrt(weights)[members]
+        blocks = self._left[members][:, :, None] * self._right[members][:, None, :]
+        blocks[:, np.arange(size), np.arange(size)] += self._entries[members]
+        blocks *= root[:, :, None] / root[:, None, :]
+        values, vectors = np.linalg.eigh(0.5 * (blocks + blocks.transpose(0, 2, 1)))
+        group, which = np.nonzero(values > EIGENVALUE_ROUNDING)
+        columns = vectors[group, :, which] / root[group]
+        shape = (weights.size, group.size)
+        starts = size * np.arange(group.size + 1)
+        basis = sp.csc_array((columns.ravel(), members[group].ravel(), starts), shape=shape)
+        basis.eliminate_zeros()
+        return basis, np.minimum(values[group, which], 1.0)
+
     def as_sparse(self) -> sp.csr_array | None:
         """The matrix where groups are small, for solvers that factorise; None where its blocks would be large."""
         if self._groups.counts.max() > LARGEST_BLOCK:
@@ -177,6 +210,11 @@ class ScaledDerivative:
     def __init__(self, inside: Any, factor: float) -> None:
         self._inside, self._factor = inside, factor
         self.diagonal: FloatArray | None = None if inside.diagonal is None else factor * inside.diagonal
+
+    def modes(self, weights: FloatArray) -> tuple[sp.csc_array, FloatArray] | None:
+        """The eigenvectors of the derivative inside."""
+        inside = modes(self._inside, weights)
+        return None if inside is None else (inside[0], self._factor * inside[1])
 
     def apply(self, directions: FloatArray) -> FloatArray:
         """Multiply a vector (n,) or the columns of (n, k)."""
@@ -195,3 +233,27 @@ class ComplementDerivative:
         """Multiply a vector (n,) or the columns of (n, k)."""
         result: FloatArray = directions - self._inside.apply(directions)
         return result
+
+
+def modes(derivative: Any, weights: FloatArray) -> tuple[sp.csc_array, FloatArray] | None:
+    """Eigenvectors of a derivative with eigenvalues above zero, where it is made of small blocks; None where not.
+
+    Parameters
+    ----------
+    derivative : ProxDerivative
+    weights : array, shape (n,)
+        W, the inner product.
+
+    Returns
+    -------
+    (B, d) : sparse array (n, r) and array (r,)
+        D = B diag(d) B' W with B' W B = I and 0 < d <= 1.
+    """
+    if derivative.diagonal is not None:
+        diagonal = np.broadcast_to(derivative.diagonal, weights.shape)
+        rows = np.flatnonzero(diagonal)
+        shape = (weights.size, rows.size)
+        entries = (1.0 / np.sqrt(weights[rows]), (rows, np.arange(rows.size)))
+        return sp.csc_array(entries, shape=shape), diagonal[rows]
+    own = getattr(derivative, "modes", None)
+    return None if own is None else own(weights)

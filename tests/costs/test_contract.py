@@ -151,6 +151,23 @@ def multibang_costs(draw: Any) -> tuple[ssn.MultiBangCost, int]:
     return ssn.MultiBangCost(settings, draw(WEIGHTS)), draw(st.integers(1, 5))
 
 
+SQUARE = [[-1.0, -1.0], [1.0, -1.0], [1.0, 1.0], [-1.0, 1.0]]
+# with and without more than three settings on a circle, on the border of the hull, in it
+PLANES = (
+    SQUARE,
+    [[0.0, 0.0], *SQUARE],
+    [[0.0, 0.0], [1.5, 0.0], [-0.75, 1.25], [-0.75, -1.25]],
+    [[0.0, 0.0], [1.0, 0.0], [2.0, 0.0], [0.0, 1.0], [1.0, 1.5]],
+    [[2.0, 1.0], [3.0, 2.5], [1.25, 2.0]],
+)
+
+
+@st.composite
+def planar_costs(draw: Any) -> tuple[ssn.PlanarMultiBangCost, int]:
+    settings = np.array(draw(st.sampled_from(PLANES)))
+    return ssn.PlanarMultiBangCost(settings, draw(WEIGHTS)), 2 * draw(st.integers(1, 2))
+
+
 INSIDE = st.one_of(piecewise_costs(), group_costs())
 
 
@@ -209,6 +226,7 @@ INSTANCES = {
     ssn.GroupSparseCost: group_costs(),
     ssn.SwitchingCost: switching_costs(),
     ssn.MultiBangCost: multibang_costs(),
+    ssn.PlanarMultiBangCost: planar_costs(),
     ssn.SumWithQuadratic: sums_with_quadratic(),
     ssn.ScaledCost: scaled_costs(),
     ssn.TranslatedCost: translated_costs(),
@@ -231,6 +249,7 @@ SMOOTHING = {
     ssn.GroupSparseCost: 12.0,
     ssn.SwitchingCost: 12.0,
     ssn.MultiBangCost: 2.0,
+    ssn.PlanarMultiBangCost: 8.0,
     ssn.SumWithQuadratic: 12.0,
     ssn.ScaledCost: 12.0,
     ssn.TranslatedCost: 12.0,
@@ -244,10 +263,19 @@ def within_bounds(cost: Any, x: np.ndarray) -> np.ndarray:
     return np.minimum(np.maximum(x, getattr(cost, "lower", -np.inf)), getattr(cost, "upper", np.inf))
 
 
+def towards_the_settings(settings: np.ndarray, x: np.ndarray) -> np.ndarray:
+    """For each point a mean of the nearest setting and the mean of all, in shares that vary from point to point."""
+    points = x.reshape(2, -1).T
+    nearest = settings[np.argmin(((points[:, None] - settings) ** 2).sum(axis=2), axis=1)]
+    share = 0.5 + 0.5 * np.cos(points.sum(axis=1, keepdims=True))
+    return (share * nearest + (1 - share) * settings.mean(axis=0)).T.ravel()
+
+
 # a point of finite cost near x, for costs whose domain is no box: (cost, x) -> point
 FEASIBLE: dict[type, Any] = {
     **sets.FEASIBLE,
     ssn.ConjugateCost: lambda cost, x: x - cost.cost.prox(x, 1.0),  # subgradients of the cost inside
+    ssn.PlanarMultiBangCost: lambda cost, x: towards_the_settings(cost.settings, x),
 }
 
 # labels of eigenvalues or blocks instead of components
@@ -709,6 +737,7 @@ NEEDS_CONVEXITY = {
 # properties a family cannot have, for a reason that stands beside it
 KEEPS_OUT: dict[type, set[Any]] = {
     ssn.costs.SecondOrderCone: {wrong_size_is_refused},  # any multiple of the block: see test_cones.py
+    ssn.PlanarMultiBangCost: {wrong_size_is_refused},  # any even number: see test_planar.py
     ssn.costs.Product: {multipliers_have_their_signs},  # those of the parts: see test_product.py
     **{kind: NEEDS_CONVEXITY for kind in nonconvex.INSTANCES},  # see test_nonconvex.py
 }
@@ -735,6 +764,7 @@ EXPECTED = {
     ssn.GroupSparseCost: 22,
     ssn.SwitchingCost: 22,
     ssn.MultiBangCost: 22,
+    ssn.PlanarMultiBangCost: 21,
     ssn.SumWithQuadratic: 22,
     ssn.ScaledCost: 22,
     ssn.TranslatedCost: 22,

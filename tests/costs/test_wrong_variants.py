@@ -105,6 +105,25 @@ class JumpsAtTheSettings(ssn.MultiBangCost):
         return wrong.prox(v, step)
 
 
+class EdgesThatDoNotSlope(ssn.PlanarMultiBangCost):
+    """On an edge the projection of v: the slope of the envelope along it is left out."""
+
+    def prox(self, v, step):
+        level = [edge._replace(slope=0.0) for edge in self._edges]
+        right, self._edges = self._edges, level
+        wrong = super().prox(v, step)
+        self._edges = right
+        return wrong
+
+
+class EdgesAsCells(ssn.PlanarMultiBangCost):
+    """The derivative on an edge is that of a cell."""
+
+    def prox_derivative(self, v, step):
+        on_edge, in_cell, _ = self._kind(self._located(v, step)[0])
+        return ssn.costs.DiagonalDerivative(np.tile(1.0 * (on_edge | in_cell), 2))
+
+
 class QuadraticWithoutItsCentre(ssn.SumWithQuadratic):
     """The centre is left out of the proximal map."""
 
@@ -156,6 +175,8 @@ WRONG = {
     ThresholdOverAllActuators: contract.prox_is_optimal,
     SwitchingDerivativeWithoutTheOthers: contract.derivative_is_the_difference_quotient,
     JumpsAtTheSettings: contract.prox_is_optimal,
+    EdgesThatDoNotSlope: contract.prox_is_optimal,
+    EdgesAsCells: contract.derivative_is_the_difference_quotient,
     QuadraticWithoutItsCentre: contract.prox_is_the_brute_force_minimiser,
     StretchNotSquared: contract.prox_is_optimal,
     MarginsOfTheUnshifted: contract.no_kink_within_the_margin,
@@ -178,12 +199,13 @@ def test_every_cost_of_these_files_has_a_wrong_variant():
         "group",
         "switching",
         "multibang",
+        "planar",
         "operations",
         "envelope",
     )
     costs = [c for c in ssn.costs.CATALOGUE if c.__module__.rsplit(".", 1)[1] in here]
     assert {w.__base__ for w in WRONG} == set(costs)
-    assert len(WRONG) == 17
+    assert len(WRONG) == 19
 
 
 def test_the_right_twin_is_not_caught():

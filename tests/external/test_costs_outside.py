@@ -122,6 +122,25 @@ def squared_sums(shape, beta, inner):
     return add
 
 
+def mixtures(settings, beta):
+    """u at each of three points a mean of the settings at the least mean of beta/2 |u_i|^2."""
+
+    def add(model, step):
+        d = len(settings)
+        shares = model.n + np.arange(3 * d).reshape(3, d)
+        for point in range(3):
+            model.q[shares[point]] += step * 0.5 * beta * (settings**2).sum(axis=1)
+            for k in range(2):
+                u = selection(np.array([3 * k + point]), model.total)
+                mean = sp.csr_array((settings[:, k], (np.zeros(d, int), shares[point])), (1, model.total))
+                model.add("zero", u - mean, np.zeros(1))
+            whole = sp.csr_array((np.ones(d), (np.zeros(d, int), shares[point])), (1, model.total))
+            model.add("zero", whole, np.ones(1))
+        model.add("nonnegative", selection(shares.ravel(), model.total, -1.0), np.zeros(3 * d))
+
+    return add
+
+
 def instances(seed):
     rng = np.random.default_rng(seed)
     n = 6
@@ -132,6 +151,7 @@ def instances(seed):
     across = rng.uniform(0.4, 2.0, 3)
     settings = np.sort(rng.uniform(-2, 2, 4))
     ones = np.ones(3)
+    plane = rng.uniform(-1.5, 1.5, (5, 2))
     return [
         (
             ssn.PiecewiseQuadraticCost(points, slopes, np.full(4, 0.7), lower=lower, upper=upper),
@@ -160,6 +180,7 @@ def instances(seed):
             n,
             quadratic_pieces(beta / 2 * (settings[1:] + settings[:-1]), settings[1:-1], 0.0, n),
         ),
+        (ssn.PlanarMultiBangCost(plane, beta), 15, mixtures(plane, beta)),
         (ssn.GroupSparseCost(beta, labels, inner_weights=inner), 3, norms(labels, beta, ones, inner)),
         (
             ssn.GroupSparseCost(beta, labels, inner_weights=inner, lower=-0.3, upper=upper),
@@ -207,7 +228,17 @@ def test_proximal_maps(kind, seed):
 
 def test_every_convex_family_is_there():
     seen = {type(cost) for cost, _, _ in instances(0)}
-    here = ("piecewise", "elastic_net", "huber", "losses", "group", "switching", "multibang", "operations")
+    here = (
+        "piecewise",
+        "elastic_net",
+        "huber",
+        "losses",
+        "group",
+        "switching",
+        "multibang",
+        "planar",
+        "operations",
+    )
     ours = {c for c in ssn.costs.CATALOGUE if c.__module__.rsplit(".", 1)[1] in here}
     assert ours - seen == {ssn.ConjugateCost}  # below, as the dual of a support vector machine
 
@@ -221,7 +252,7 @@ def data(seed, shape=(12, 6)):
 
 
 @pytest.mark.parametrize("seed", range(3))
-@pytest.mark.parametrize("kind", [0, 1, 6, 7, 8, 9])
+@pytest.mark.parametrize("kind", [0, 1, 6, 7, 8, 9, 10])
 @pytest.mark.parametrize("shape", [(12, 6), (4, 6)])
 def test_least_squares_with_a_cost(kind, shape, seed):
     cost, extra, add = instances(seed)[kind]
