@@ -9,6 +9,7 @@ import numpy as np
 import numpy.typing as npt
 import scipy.sparse as sp
 
+from .duality import Gap, duality_gap, has_gap
 from .errors import InputError
 from .inner import InnerProduct, relative
 from .linear.boundary import as_matrix, as_square, product, transpose_product
@@ -65,6 +66,12 @@ class ControlProblem:
     -----
     ``Solution.state`` is y, ``Solution.adjoint`` is p with E' p = C' Wy (z - C y), so that without g
     alpha Wu u = B' p.
+
+    *Measures.* Sources on points and lines, minimise 1/2 ||C y - z||^2 + beta ||u||_M, are the vector of the strengths
+    at the nodes: control_weight 0, cost ``SparseCost(beta)``, control_operator the identity (strengths are nodal
+    loads), no control_mass. Where control_weight is 0 the problem need not be strongly convex:
+    ``Solution.certificate`` then bounds the objective by a duality gap (kind "gap"), where the conjugate of the cost is
+    known.
 
     State bounds are solved for by a path in the penalty gamma/2 (||max(0, y - upper)||^2_M + ||max(0, lower -
     y)||^2_M), M the lumped state mass or ones. ``Solution.multipliers["state"]`` is the density l = gamma max(0, y
@@ -302,11 +309,24 @@ class ControlProblem:
         """The objective; inf outside the domain of the cost."""
         return self.smooth_value(u) + self.cost.value(u, self.weights)
 
+    def duality_gap(self, u: FloatArray, misfit: FloatArray, p: FloatArray) -> Gap:
+        """The duality gap of u where alpha = 0, with misfit = z - S u and p = S* misfit; see `ssn.duality`."""
+        return duality_gap(self, u, misfit, p)
+
+    @property
+    def has_gap(self) -> bool:
+        """Whether accuracy is a duality gap: alpha = 0, and a cost that is bounded below with a known conjugate."""
+        return self.alpha == 0.0 and has_gap(self)
+
     def accuracy(self, u: FloatArray) -> float:
         """||u - u'|| / ||u'|| with u' the proximal map of the normal map (step 1/alpha), evaluated afresh.
 
-        With a cost that is not convex, and where alpha = 0, u' is the proximal gradient point of `natural_step`.
+        With a cost that is not convex, and where alpha = 0, u' is the proximal gradient point of `natural_step`. Where
+        alpha = 0 and the conjugate of the cost is known: the duality gap relative to the scale of the objective.
         """
+        if self.has_gap:
+            misfit = self.reduced_target() - self.forward(u)
+            return self.duality_gap(u, misfit, self.adjoint(misfit)).relative
         step = 1.0 / self.alpha if self.alpha > 0 and self.convex else self.natural_step()
         _, gradient = self.smooth(u)
         moved = self.cost.prox(u - step * gradient, step)

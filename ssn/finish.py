@@ -16,6 +16,8 @@ from .equations.complementarity import mid_residual
 from .equations.coupled import CoupledEquation
 from .equations.dual import DualEquation
 from .equations.full_space import FullSpaceEquation
+from .equations.settled import SettledEquation
+from .gap_path import collect_gap
 from .inner import relative
 from .moreau_yosida import collect
 from .newton import Limits, LoopResult
@@ -43,6 +45,9 @@ def finish(plan: Plan, result: LoopResult, limits: Limits, before: Any) -> Solut
         x, accuracy, fields = collect(plan.equation, best)
     elif isinstance(plan.equation, CoupledEquation):
         x, accuracy, fields = plan.equation.collect(best.x)
+    elif isinstance(plan.equation, SettledEquation):
+        x, accuracy, fields = collect_gap(plan.equation, result)
+        fields["doubt"] = _gap_doubt(fields)
     elif isinstance(plan.problem, ControlProblem):
         x, accuracy, fields = _finish_local_control(plan.problem, result)
     elif isinstance(plan.problem, CompositeProblem):
@@ -230,6 +235,16 @@ def _adjoint_doubt(one: float, other: float, scale: float) -> tuple[Outcome, str
     if abs(one - other) <= ADJOINT_ERROR * max(scale, abs(one)):
         return None
     return Outcome.INACCURATE, f"S* is not the adjoint of S: <r, S u> = {one:.10g}, <S* r, u> = {other:.10g}"
+
+
+def _gap_doubt(fields: dict[str, Any]) -> tuple[Outcome, str] | None:
+    """Whether the gap of a control problem says what it seems to say."""
+    images, rounding = fields.pop("images", None), fields.pop("rounding", 0.0)
+    doubt = None if images is None else _adjoint_doubt(*images)
+    if doubt is None and rounding > SOLVE_ERROR:
+        told = f"the state and adjoint solves leave an error of {rounding:.1e} in the objective"
+        doubt = Outcome.INACCURATE, told
+    return doubt
 
 
 def _composite_doubt(

@@ -100,7 +100,7 @@ class Iteration:
         self._plan: Plan = prepare(problem, start, globalization=self._globalization)
         plan = self._plan
         if plan.path is not None:
-            raise InputError("this problem is solved along a proximal point path; use ssn.solve for it")
+            raise InputError("this problem is solved along a path of weights; use ssn.solve for it")
         if self._norm is not None or self._linear is not None:
             if not isinstance(plan.equation, GeneralEquation):
                 raise InputError("linear and norm are for objects with residual and linearize")

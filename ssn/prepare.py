@@ -25,6 +25,7 @@ from .equations.full_space import FullSpaceEquation, has_dual
 from .equations.general import GeneralEquation
 from .equations.natural import NaturalEquation
 from .errors import InputError
+from .gap_path import GapPath
 from .globalization import CATALOGUE, DualSearch, EnvelopeSearch, ResidualSearch
 from .inner import relative
 from .linear import CATALOGUE as LINEAR
@@ -74,7 +75,7 @@ class Plan:
     globalization: Globalization
     start: FloatArray
     choices: dict[str, str]
-    path: ProximalPointPath | None = None
+    path: GapPath | ProximalPointPath | None = None
     polish: NaturalEquation | None = None
     smoothing: SmoothingPath | None = None
     penalty: PenaltyPath | None = None
@@ -183,7 +184,7 @@ def _prepare_control(problem: ControlProblem, start: Any, globalization: Any, li
             return _prepare_coupled(problem, control, pair, linear)
         if linear == "coupled":
             raise InputError(f"linear='coupled' does not fit this problem: {reason}")
-    path = None if problem.alpha > 0 else ProximalPointPath()
+    path = _path_without_quadratic(problem)
     alpha = problem.alpha if problem.alpha > 0 else 1.0
     equation = DualEquation(problem, problem.reduced_target(), alpha, problem.cost)
     choices = {
@@ -192,7 +193,11 @@ def _prepare_control(problem: ControlProblem, start: Any, globalization: Any, li
         "linear": "subspace: one factorisation of the state operator, basis kept between steps",
     }
     if path is not None:
-        choices["path"] = "proximal point: control_weight is 0"
+        choices["path"] = (
+            "Moreau-Yosida, ended on the active sets of the problem itself by the duality gap: control_weight is 0"
+            if isinstance(path, GapPath)
+            else "proximal point: control_weight is 0, and no duality gap is known"
+        )
         x = np.zeros(problem.unknowns) if control is None else control
     elif pair is not None:
         x = equation.start_from(problem.observe(pair[0] - problem.offset()))
@@ -280,6 +285,12 @@ def _relaxed_first(plan: Plan, start: FloatArray | None) -> Plan:
         plan.relaxation = EnvelopeStart()
         plan.choices["path"] = "convex envelope: starts and a lower bound, then Newton steps on the support"
     return plan
+
+
+def _path_without_quadratic(problem: ControlProblem) -> GapPath | ProximalPointPath | None:
+    if problem.alpha > 0:
+        return None
+    return GapPath() if problem.has_gap else ProximalPointPath()
 
 
 def _prepare_state_bounds(problem: ControlProblem, control: FloatArray | None) -> Plan:

@@ -67,25 +67,29 @@ class StepRecord:
 
 @dataclass(frozen=True)
 class Certificate:
-    """A proven bound on the distance of the returned point to the exact solution of the discrete problem.
+    """A proven bound for the returned point and the discrete problem: on a distance, or on an excess of the objective.
 
     Attributes
     ----------
     bound : float
-        ||x - x*|| <= bound, in the weighted norm of the unknown.
+        ||x - x*|| <= bound, in the weighted norm of the unknown; for kind "gap" objective(x) - minimum <= bound.
     relative : float
-        The bound divided by ||x||.
+        The bound divided by ||x||; for kind "gap" by the scale of the objective, the sum of the absolute values of its
+        parts at x (and a ten-thousandth of 1/2 ||z||^2).
     method : str
         Which inequality gives it.
     solve_error : float
         The part of the bound that accounts for rounding in the linear solves; estimated by one step of
         iterative refinement, times two.
+    kind : {"distance", "gap"}
+        "gap" where the problem is not strongly convex: a duality gap bounds no distance.
     """
 
     bound: float
     relative: float
     method: str
     solve_error: float = 0.0
+    kind: str = "distance"
 
     def as_dict(self) -> dict[str, Any]:
         """Return plain data for JSON."""

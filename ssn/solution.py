@@ -49,7 +49,8 @@ class Solution:
     margins : array or None
         Distance of each component to its nearest kink, in the unit of x: strict complementarity is the smallest one.
     certificate : Certificate or None
-        Distance bound to the exact discrete solution, where the problem is strongly convex.
+        Distance bound to the exact discrete solution, where the problem is strongly convex; bound on the objective by
+        the duality gap (kind "gap") for control problems with control_weight 0.
     lower_bound : float or None
         Count and power costs: no point has a lower objective than this, by the convex envelope (up to rounding of the
         linear solves). `gap` compares it with the objective. It says nothing about the distance to a minimiser.
@@ -97,7 +98,9 @@ class Solution:
         if self.certificate is not None:
             bound = self.certificate
             certified = f", certified to {bound.relative:.1e}"
-            if not np.isfinite(bound.relative):
+            if bound.kind == "gap":
+                certified = f", objective certified to {bound.relative:.1e}"
+            elif not np.isfinite(bound.relative):
                 certified = f", zero within {bound.bound:.1e}"
         return (
             f"Solution({self.outcome.value}, {len(self.steps)} steps, accuracy {self.accuracy:.1e}{certified}, "

@@ -16,13 +16,14 @@ from .equations.dual import DualEquation
 from .equations.natural import NaturalPoint
 from .errors import InputError, SolveInterrupted
 from .finish import finish, finish_sum
+from .gap_path import GapPath, follow_gap
 from .globalization import EnvelopeSearch, FullStep, ResidualSearch
 from .linear import ReducedSolver, SubspaceSolver
 from .moreau_yosida import first_penalty, follow_penalty
 from .newton import Limits, LoopResult, run
 from .prepare import Plan, prepare
 from .protocols import Evaluation, FloatArray, Globalization
-from .proximal_point import follow, operator_size
+from .proximal_point import ProximalPointPath, follow, operator_size
 from .records import StepRecord
 from .smoothing_path import SmoothingPath, follow_smoothing
 from .solution import Solution
@@ -65,7 +66,8 @@ def solve(
         projected onto the bounds. It is not changed.
     tolerance : float
         Relative accuracy of the unknown: ||u - prox(...)|| / ||u|| in the problem's norm (see the `accuracy` method of
-        each problem); for an Equation the root mean square of F / scale.
+        each problem); for an Equation the root mean square of F / scale; for a control problem with control_weight 0
+        the duality gap relative to the scale of the objective, where the conjugate of the cost is known.
     max_steps : int
         Newton steps at most, over a whole path.
     globalization : {"auto", "full", "dual", "residual", "envelope", "smoothing"} or a Globalization
@@ -108,6 +110,8 @@ def solve(
             plan.problem, type(plan.solver), plan.start, limits, plan.multipliers, observer
         )
         solution = finish_sum(plan, path, limits, before)
+    elif isinstance(plan.path, GapPath):
+        solution = _run_gap_path(plan, limits, observer, before)
     elif plan.path is not None:
         solution = _run_path(plan, limits, observer, before)
     elif plan.relaxation is not None:
@@ -247,7 +251,7 @@ def _joined(first: LoopResult, then: LoopResult) -> LoopResult:
 
 
 def _run_path(plan: Plan, limits: Limits, callback: Callback | None, before: Any) -> Solution:
-    assert plan.path is not None
+    assert isinstance(plan.path, ProximalPointPath)
     base: DualEquation = plan.equation
 
     def make_equation(alpha: float, linear: FloatArray) -> DualEquation:
@@ -297,6 +301,15 @@ def _run_relaxed(plan: Plan, limits: Limits, callback: Callback | None, before: 
     assert plan.relaxation is not None
     result = run_envelope_start(plan.problem, plan.equation, limits, plan.relaxation, callback)
     return replace(finish(plan, result.loop, limits, before), lower_bound=result.lower_bound)
+
+
+def _run_gap_path(plan: Plan, limits: Limits, callback: Callback | None, before: Any) -> Solution:
+    assert isinstance(plan.path, GapPath)
+    kind = type(plan.globalization)
+    result = follow_gap(plan.problem, plan.start, kind, limits, plan.path, callback)
+    plan.equation = result.equation
+    plan.choices["path"] += f"; {result.points} points"
+    return finish(plan, result.loop, limits, before)
 
 
 def _run_penalty(plan: Plan, limits: Limits, callback: Callback | None, before: Any) -> Solution:

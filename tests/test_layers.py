@@ -41,6 +41,7 @@ LEVELS: dict[str, float] = {
     "states": 1.5,
     "time_state": 1.5,
     "environment": 1.5,
+    "duality": 1.5,
     # statements, and the loop
     "complementarity": 2,
     "composite": 2,
@@ -53,6 +54,7 @@ LEVELS: dict[str, float] = {
     "weight_path": 3.2,
     "user_equation": 2,
     # the loop over a path of equations
+    "gap_path": 2.27,
     "moreau_yosida": 2.25,
     "easier_weight": 2.25,
     "proximal_point": 2.25,

@@ -14,6 +14,9 @@ from .derivative import DiagonalDerivative
 
 FloatArray = npt.NDArray[np.float64]
 
+# a slope that differs from beta by less than this fraction of both does not differ
+ROUNDING = 1e-12
+
 LEGEND = ("lower", "negative", "zero", "positive", "upper", "free")
 LOWER, NEGATIVE, ZERO, POSITIVE, UPPER, FREE = range(6)
 
@@ -76,6 +79,25 @@ class SparseCost:
         if (u < self.lower).any() or (u > self.upper).any():
             return float("inf")
         terms = self.beta * np.abs(u)
+        return float(terms.sum() if weights is None else weights @ terms)
+
+    def conjugate_value(self, y: FloatArray, weights: FloatArray | None = None) -> float:
+        """Return the sum of sup u y_i - beta_i |u| over the bounds; inf where an open end slopes upwards.
+
+        A slope that equals beta up to rounding on a piece without end is no reason for infinity.
+        """
+        slack = ROUNDING * (np.abs(y) + self.beta)
+        best = np.full(y.shape, -np.inf)
+        for bound, outwards in ((self.lower, -1.0), (self.upper, 1.0)):
+            rise = outwards * y - self.beta  # of u y - beta |u| on the way out
+            end = np.where(np.isfinite(bound), bound, 0.0)
+            there = np.where(rise > slack, np.inf, -np.inf)
+            best = np.maximum(best, np.where(np.isfinite(bound), end * y - self.beta * np.abs(end), there))
+        zero = (self.lower <= 0.0) & (self.upper >= 0.0)
+        # with an open end and without zero inside the other bound is the best point
+        terms = np.where(zero, np.maximum(best, 0.0), best)
+        if (terms == -np.inf).any() or not np.isfinite(terms).all():
+            return float("inf")
         return float(terms.sum() if weights is None else weights @ terms)
 
     def _shrink(self, v: FloatArray, step: float) -> FloatArray:

@@ -53,6 +53,8 @@ def _one(problem: Any, solution: Solution, other: MethodResult, tolerance: float
         return "holds", f"distance {other.distance:.1e}"
     if _nonconvex(problem):
         return _by_objective(solution, other, tolerance)
+    if solution.certificate is not None and solution.certificate.kind == "gap":
+        return _by_gap(problem, solution, other, tolerance)
     if other.bound is not None:
         own = 0.0 if solution.certificate is None else solution.certificate.relative
         if other.bound + own < other.distance / (1.0 + 1e-6):
@@ -75,6 +77,23 @@ def _one(problem: Any, solution: Solution, other: MethodResult, tolerance: float
         "undecided",
         f"distance {other.distance:.1e}, accuracies {other.accuracy:.1e} and ours {mine:.1e}: {kind}",
     )
+
+
+def _by_gap(problem: Any, solution: Solution, other: MethodResult, tolerance: float) -> tuple[str, str]:
+    """Without strong convexity points may differ and both be minimisers: their objectives are compared.
+
+    The unit is what the solution gains over the point that a method begins with, or where that is nothing the
+    objective itself.
+    """
+    ours = float(problem.objective(solution.x))
+    gain = float(problem.objective(judge.start(problem, solution.x.size))) - ours
+    unit = gain if 0.0 < gain < float("inf") else abs(ours)
+    above = other.objective - ours
+    text = f"objective {above:+.1e} from ours, {above / unit if unit > 0.0 else above:+.1e} of what the control gains"
+    text += f", distance {other.distance:.1e} (the problem is not strongly convex)"
+    if abs(above) <= tolerance * unit:
+        return "holds", text
+    return ("fails" if above < 0.0 else "undecided"), text
 
 
 def _nonconvex(problem: Any) -> bool:

@@ -27,6 +27,8 @@ def certificate(problem: Any, solution: Solution, *, seed: int = 0) -> Check | N
     own = solution.certificate
     if own is None:
         return None
+    if own.kind == "gap":
+        return _gap(problem, solution, seed)
     norm = problem.controls.norm
     rounding = 1e-13 * norm(solution.x)
     tighter = solve(problem, solution.x, tolerance=max(1e-2 * solution.tolerance, 1e-14))
@@ -62,6 +64,35 @@ def certificate(problem: Any, solution: Solution, *, seed: int = 0) -> Check | N
     sharp = f", at best {tightest:.1f} times the distance" if np.isfinite(tightest) else ""
     detail = f"bound {own.relative:.1e} relative; true against a tighter solve and at {tried} points{sharp}"
     return Check("certificate", True, detail)
+
+
+def _gap(problem: Any, solution: Solution, seed: int) -> Check:
+    """The gap against the objectives of a tighter solve and of seeded points, which it has to bound, too."""
+    own = solution.certificate
+    assert own is not None
+    tighter = solve(problem, solution.x, tolerance=max(1e-2 * solution.tolerance, 1e-14))
+    least = min(problem.objective(solution.x), problem.objective(tighter.x))
+    excess = problem.objective(solution.x) - least
+    if excess > own.bound:
+        detail = f"a tighter solve lowered the objective by {excess:.1e}, the gap is {own.bound:.1e}"
+        return Check("certificate", False, detail)
+    rng = np.random.default_rng(seed)
+    size, sharpest = problem.controls.norm(solution.x) or 1.0, float("inf")
+    rounding = 1e-13 * abs(least)
+    for part, _ in TRIALS:
+        h = rng.standard_normal(problem.unknowns)
+        u = problem.cost.prox(solution.x + part * size * h / problem.controls.norm(h), 1e-300)
+        misfit = problem.reduced_target() - problem.forward(u)
+        gap = problem.duality_gap(u, misfit, problem.adjoint(misfit)).value
+        excess = problem.objective(u) - least
+        if excess > gap + own.bound + rounding:
+            detail = f"at a perturbation of {part:.0e} the objective is {excess:.1e} above ours and the gap {gap:.1e}"
+            return Check("certificate", False, detail + ": it is too small")
+        if excess > 100.0 * (own.bound + rounding):
+            sharpest = min(sharpest, gap / excess)
+    sharp = f", at best {sharpest:.1f} times the excess" if np.isfinite(sharpest) else ""
+    detail = f"gap {own.relative:.1e} of the objective's scale; true against a tighter solve"
+    return Check("certificate", True, f"{detail} and at {len(TRIALS)} points{sharp}")
 
 
 def _smoothed(problem: Any, u: FloatArray, steps: int) -> FloatArray:

@@ -57,8 +57,12 @@ class MethodResult:
 
     @property
     def bound(self) -> float | None:
-        """The method's own relative bound, if any."""
-        return None if self.certificate is None else float(self.certificate["relative"])
+        """The method's own relative bound on a distance, if any."""
+        return (
+            None
+            if self.certificate is None or self.certificate.get("kind") == "gap"
+            else float(self.certificate["relative"])
+        )
 
     def as_dict(self) -> dict[str, Any]:
         """Return plain data for JSON, without the point and the note."""

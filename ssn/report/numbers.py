@@ -20,6 +20,11 @@ def small(value: Any) -> str:
     return f"{number:.1e}" if number else "0"
 
 
+def certified(relative: Any, kind: str = "distance") -> str:
+    """Write a certified bound; that of an objective says so."""
+    return small(relative) + (" (gap)" if kind == "gap" and not _absent(relative) else "")
+
+
 def objective(value: Any) -> str:
     """Write a value whose leading digits are to be compared."""
     return NOTHING if _absent(value) else f"{float(value):.9g}"

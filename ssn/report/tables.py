@@ -13,7 +13,7 @@ from ..evidence import Assessment
 from ..solution import Solution
 from .entry import Entry
 from .grid import figure_table, fits, label_table
-from .numbers import counted, objective, plainly, seconds, small, whole
+from .numbers import NOTHING, certified, counted, objective, plainly, seconds, small, whole
 from .words import FAILS, HOLDS, UNDECIDED, Sentence, assessment_sentences, solution_sentences, weak_points
 
 STYLES = {HOLDS: "green", FAILS: "bold red", UNDECIDED: "yellow"}
@@ -113,7 +113,7 @@ def overview_row(entry: Entry) -> list[Text]:
         Text(entry.heading),
         Text(whole(len(a.solution.steps))),
         Text(small(a.solution.accuracy)),
-        Text(small(None if certificate is None else certificate.relative)),
+        Text(NOTHING if certificate is None else certified(certificate.relative, certificate.kind)),
         Text(a.agreement, style=STYLES.get(a.agreement, "")),
         Text(rate),
         Text(f"{held} of {len(a.known)}" if a.known else "-"),
@@ -180,7 +180,7 @@ def method_row(method: Any) -> list[str]:
     return [
         method.name, method.outcome, objective(method.objective), small(method.accuracy), whole(method.steps),
         whole(method.state_solves), whole(method.operator_products), seconds(method.seconds), small(method.distance),
-        small(None if certificate is None else certificate.get("relative")),
+        NOTHING if certificate is None else certified(certificate.get("relative"), certificate.get("kind", "")),
     ]  # fmt: skip
 
 

@@ -16,7 +16,7 @@ from ..plotting import new_figure
 from ..verification import Verification
 from .entry import Entry
 from .grid import figure_table, fits
-from .numbers import counted, objective, seconds, small
+from .numbers import NOTHING, certified, counted, objective, seconds, small
 from .pictures import ROUNDING
 from .tables import STYLES
 from .words import FAILS, HOLDS, UNDECIDED
@@ -162,7 +162,7 @@ def _row(verified: Verified) -> list[Text]:
         Text(steps),
         Text(independent, STYLES[FAILS] if independent == "no" else ""),
         Text(a.agreement, STYLES.get(a.agreement, "")),
-        Text(small(None if certificate is None else certificate.relative)),
+        Text(NOTHING if certificate is None else certified(certificate.relative, certificate.kind)),
         Text(f"{held} of {known}" if known else "-", STYLES[FAILS] if held < known else ""),
         Text(seconds(v.seconds)),
         conclusion,

@@ -110,6 +110,11 @@ def _certainty(solution: Solution) -> Sentence:
             "No distance bound: the problem is not known to be strongly convex. The accuracy is a residual."
         )
         return Sentence("Certainty", text)
+    if certificate.kind == "gap":
+        text = f"Objective within {small(certificate.bound)} of the least one, "
+        text += f"{small(certificate.relative)} of its scale ({certificate.method}; it bounds no distance: the problem "
+        text += "is not strongly convex)."
+        return Sentence("Certainty", text, HOLDS if math.isfinite(certificate.relative) else FAILS)
     text = f"Within {small(certificate.relative)} of the exact discrete solution, relative to its size"
     text += f" ({small(certificate.bound)} in the unit of the unknown's norm; bound: {certificate.method})."
     return Sentence("Certainty", text, HOLDS if math.isfinite(certificate.relative) else FAILS)

@@ -155,6 +155,14 @@ class SmallCertificate(ssn.ControlProblem):
         return replace(right, bound=small * right.bound, relative=small * right.relative)
 
 
+class SmallGap(ssn.ControlProblem):
+    """The gap leaves out nine tenths of what it is."""
+
+    def duality_gap(self, u, misfit, p):
+        right = super().duality_gap(u, misfit, p)
+        return replace(right, value=0.1 * right.value)
+
+
 class OverstatedConvexity(ssn.CompositeProblem):
     """Claims the mean eigenvalue for the smallest one."""
 
@@ -244,6 +252,10 @@ def _easy() -> ssn.ControlProblem:
     return cases.control(alpha=1e-2)
 
 
+def _bang(kind: type = ssn.ControlProblem) -> ssn.ControlProblem:
+    return cases.control(alpha=0.0, kind=kind)
+
+
 MUTANTS = (
     Mutant("derivative scaled", cases.kinked, _derivative(_scaled)),
     Mutant("derivative of wrong sign", cases.kinked, _derivative(_negative)),
@@ -270,6 +282,8 @@ MUTANTS = (
         lambda: assess(_with_source(OffsetOfWrongSign), known=_known_state), known=_known_state,
     ),
     Mutant("certificate too small", cases.control, lambda: assess(cases.control(kind=SmallCertificate))),
+    Mutant("gap too small", _bang, lambda: assess(_bang(SmallGap))),
+    Mutant("another point returned, by its objective", _bang, _claims(lambda s: replace(s, x=0.9 * s.x), _bang)),
     Mutant("convexity overstated", cases.least_squares, lambda: assess(cases.least_squares(kind=OverstatedConvexity))),
     Mutant("steps always halved", cases.control, _halved_run),
     Mutant("unscaled residual", lambda: cases.control(alpha=1e-6), _unscaled_residual),

@@ -26,6 +26,11 @@ CAUGHT: dict[str, tuple[str, set[str]]] = {
     "inexact state solve": ("holds", {"state solve"}),
     "reference that shares the error": ("holds", {"known values"}),
     "certificate too small": ("holds", {"certificate"}),
+    "gap too small": ("holds", {"certificate"}),
+    "another point returned, by its objective": (
+        "fails",
+        {"agreement", "residual", "certificate", "objective"},
+    ),
     "convexity overstated": ("holds", {"certificate"}),
     "steps always halved": ("holds", {"run"}),
     "unscaled residual": ("holds", {"residual"}),
