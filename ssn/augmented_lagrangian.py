@@ -82,7 +82,7 @@ def follow_multipliers(
         )
         loop = run(
             equation, make_solver(equation), DualSearch(), u, inner,
-            callback=callback, first_index=len(steps) + 1, stage=f"penalty {sigma:.1e}",
+            callback=callback, first_index=len(steps) + 1, stage=f"point {point}, penalty {sigma:.1e}",
         )  # fmt: skip
         steps = steps + loop.steps
         start_norm = loop.start_norm if point == 1 else start_norm

@@ -11,6 +11,7 @@ from .augmented_lagrangian import MultiplierResult
 from .complementarity import ComplementarityProblem
 from .composite import CompositeProblem
 from .control import ControlProblem
+from .duality_gap import certify
 from .envelope_start import ControlMap
 from .equations.complementarity import mid_residual
 from .equations.coupled import CoupledEquation
@@ -22,6 +23,7 @@ from .inner import relative
 from .moreau_yosida import collect
 from .newton import Limits, LoopResult
 from .prepare import Plan
+from .primal_dual_path import PrimalDualResult
 from .protocols import FloatArray
 from .second_order import lowest_curvature
 from .solution import Solution
@@ -297,7 +299,9 @@ def _control_saddle(
     return Outcome.SADDLE_POINT, f"negative curvature {lowest.value:.1e} among the free components"
 
 
-def finish_sum(plan: Plan, result: MultiplierResult, limits: Limits, before: Any) -> Solution:
+def finish_sum(
+    plan: Plan, result: MultiplierResult | PrimalDualResult, limits: Limits, before: Any
+) -> Solution:
     """Collect the end of a method of multipliers; both relative errors are computed afresh."""
     problem, loop = plan.problem, result.loop
     stationarity, terms = problem.accuracy_of(result.u, result.multipliers)
@@ -306,7 +310,15 @@ def finish_sum(plan: Plan, result: MultiplierResult, limits: Limits, before: Any
     if outcome is Outcome.CONVERGED and not accuracy <= limits.tolerance:
         outcome, message = Outcome.INACCURATE, f"accuracy {accuracy:.1e} when computed afresh"
     work = problem.work.since(before) if before is not None else problem.work.copy()
-    prices = {f"term {k}": problem.part_of(result.multipliers, k) for k in range(len(problem.costs))}
+    gap, certificate = certify(problem, result.u, result.multipliers)
+    if np.isfinite(gap.relative):
+        plan.choices["gap"] = (
+            f"relative duality gap {gap.relative:.1e} of the problem itself, evaluated afresh"
+        )
+    state = adjoint = None
+    if problem.control is not None:
+        state, adjoint = problem.control.state_and_adjoint(result.u)
+    prices = {name: problem.part_of(result.multipliers, k) for k, name in enumerate(problem.names)}
     return Solution(
         x=result.u,
         converged=outcome is Outcome.CONVERGED,
@@ -323,7 +335,10 @@ def finish_sum(plan: Plan, result: MultiplierResult, limits: Limits, before: Any
         objective=problem.objective(result.u, slack=10 * limits.tolerance),
         choices=plan.choices,
         problem=problem,
-        iterate=result.u,
+        certificate=certificate,
+        state=state,
+        adjoint=adjoint,
+        iterate=np.concatenate([result.u, result.multipliers]),
     )
 
 

@@ -101,6 +101,8 @@ class Iteration:
         plan = self._plan
         if plan.path is not None:
             raise InputError("this problem is solved along a path of weights; use ssn.solve for it")
+        if plan.multipliers is not None or plan.primal_dual is not None:
+            raise InputError("several terms are solved along a path of multipliers; use ssn.solve for them")
         if self._norm is not None or self._linear is not None:
             if not isinstance(plan.equation, GeneralEquation):
                 raise InputError("linear and norm are for objects with residual and linearize")

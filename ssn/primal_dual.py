@@ -8,6 +8,7 @@ from typing import Any
 
 import numpy as np
 
+from .duality_gap import certify
 from .errors import InputError
 from .reference import ReferenceResult
 from .sum_problem import SumProblem
@@ -95,4 +96,6 @@ def primal_dual(
                 outcome = "budget used up"
                 break
     objective = problem.objective(u, slack=1e-4)
-    return ReferenceResult(u, converged, outcome, iteration, objective, None, problem.work.since(before))
+    _, certificate = certify(problem, u, y) if np.isfinite(u).all() else (None, None)
+    bound = None if certificate is None else certificate.bound
+    return ReferenceResult(u, converged, outcome, iteration, objective, bound, problem.work.since(before))

@@ -22,6 +22,7 @@ from .linear import ReducedSolver, SubspaceSolver
 from .moreau_yosida import first_penalty, follow_penalty
 from .newton import Limits, LoopResult, run
 from .prepare import Plan, prepare
+from .primal_dual_path import follow_primal_dual
 from .protocols import Evaluation, FloatArray, Globalization
 from .proximal_point import ProximalPointPath, follow, operator_size
 from .records import StepRecord
@@ -58,7 +59,7 @@ def solve(
 
     Parameters
     ----------
-    problem : ControlProblem, CompositeProblem, ComplementarityProblem, function, or object with the Equation protocol
+    problem : ControlProblem, CompositeProblem, ComplementarityProblem, SumProblem, function, or Equation
         A plain function of NumPy arrays (or of a tuple or dict of arrays, like `start`) is traced: its Newton
         derivative and active sets follow from its operations.
     start : array, optional
@@ -67,14 +68,15 @@ def solve(
     tolerance : float
         Relative accuracy of the unknown: ||u - prox(...)|| / ||u|| in the problem's norm (see the `accuracy` method of
         each problem); for an Equation the root mean square of F / scale; for a control problem with control_weight 0
-        the duality gap relative to the scale of the objective, where the conjugate of the cost is known.
+        the duality gap relative to the scale of the objective, where the conjugate of the cost is known; for a
+        SumProblem the larger of its two optimality errors, see `SumProblem.accuracy_of`.
     max_steps : int
         Newton steps at most, over a whole path.
     globalization : {"auto", "full", "dual", "residual", "envelope", "smoothing"} or a Globalization
         "auto": dual search where the problem has a dual equation, envelope search for other composite problems,
-        residual search and smoothing path for complementarity, residual search otherwise. What was decided, and why,
-        stands in ``Solution.choices``.
-    linear : {"auto", "subspace", "coupled", "reduced", "general", "full space", "augmented"}
+        residual search and smoothing path for complementarity, dual search along a path of multipliers for several
+        terms, residual search otherwise. What was decided, and why, stands in ``Solution.choices``.
+    linear : {"auto", "subspace", "coupled", "reduced", "general", "full space", "augmented", "primal-dual"}
         How Newton systems are solved; only those that fit the problem are accepted beside "auto". Control problems with
         a symmetric state operator have two: "subspace" factorises it, "coupled" is multigrid on state and adjoint.
     callback : callable, optional
@@ -112,6 +114,10 @@ def solve(
         solution = finish_sum(plan, path, limits, before)
     elif isinstance(plan.path, GapPath):
         solution = _run_gap_path(plan, limits, observer, before)
+    elif plan.primal_dual is not None:
+        start_control = plan.start[: plan.problem.unknowns]
+        pair = follow_primal_dual(plan.problem, start_control, limits, plan.primal_dual, observer)
+        solution = finish_sum(plan, pair, limits, before)
     elif plan.path is not None:
         solution = _run_path(plan, limits, observer, before)
     elif plan.relaxation is not None:

@@ -1,7 +1,8 @@
-"""The equation of an augmented Lagrangian: grad f(u) + sum_i K_i' sigma (w_i - prox_{g_i/sigma}(w_i)) + nu (u - c) = 0.
+"""The equation of an augmented Lagrangian: grad f(u) + sum_i K_i' W_i sigma (w_i - prox_i(w_i)) + nu (u - c) = 0.
 
-w_i = K_i u - c_i + y_i/sigma. It is the gradient of a convex, once continuously differentiable function of u, with
-Newton derivative f'' + sigma sum K_i' (I - D_i) K_i + nu I; the search along a direction needs products with K only.
+w_i = K_i u - c_i + y_i/sigma, prox_i that of g_i/sigma, W_i the weights of the terms. It is the gradient of a convex,
+once continuously differentiable function of u, with Newton derivative f'' + sigma sum K_i' W_i (I - D_i) K_i + nu I;
+the search along a direction needs products with K only.
 
 Source: R. T. Rockafellar, Math. Oper. Res. 1 (1976) 97-116; with semismooth Newton steps X. Li, D. Sun and K.-C. Toh,
 SIAM J. Optim. 28 (2018) 433-458 (both from memory).
@@ -9,15 +10,17 @@ SIAM J. Optim. 28 (2018) 433-458 (both from memory).
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 import numpy.typing as npt
+from scipy.sparse.linalg import LinearOperator
 
+from ..linear.boundary import product
 from ..pieces import Pieces
-from ..protocols import Evaluation, FallbackStep
+from ..protocols import Evaluation, FallbackStep, Linearization
 
 FloatArray = npt.NDArray[np.float64]
 
@@ -66,10 +69,10 @@ class AugmentedEquation:
         prices = self.sigma * (w - problem.prox(w, 1.0 / self.sigma))
         gradient, pulled = problem.gradient(x), problem.adjoint(prices)
         residual = gradient + pulled + self.nu * (x - self.centre)
-        norm = float(np.linalg.norm(residual)) if np.isfinite(residual).all() else np.inf
+        norm = problem.dual_norm(residual) if np.isfinite(residual).all() else np.inf
         if not np.isfinite(norm):
             return Evaluation(x, residual, np.inf, np.inf, Pieces())
-        size = float(np.linalg.norm(gradient) + np.linalg.norm(pulled))
+        size = problem.dual_norm(gradient) + problem.dual_norm(pulled)
         step = 1.0 / self.sigma
         parts = [problem.part_of(w, k) for k in range(len(problem.costs))]
         derivatives = tuple(
@@ -78,17 +81,27 @@ class AugmentedEquation:
         accuracy = norm / size if size > 0 else 0.0
         return Evaluation(x, residual, norm, accuracy, self.pieces(w), AugmentedPoint(w, prices, derivatives))
 
+    def linearize(self, x: FloatArray) -> Linearization:
+        """The gradient with its Newton derivative as an operator."""
+        at = self.evaluate(x)
+        problem, hessian = self.problem, self.problem.part.hessian(x)
+
+        def apply(d: FloatArray) -> FloatArray:
+            d = np.ravel(d)
+            image = problem.forward(d)
+            parts = [problem.part_of(image, k) for k in range(len(problem.costs))]
+            bent = [
+                part - derivative.apply(part)
+                for part, derivative in zip(parts, at.data.derivatives, strict=True)
+            ]
+            return product(hessian, d) + self.sigma * problem.adjoint(np.concatenate(bent)) + self.nu * d
+
+        operator = LinearOperator((self.size, self.size), matvec=apply, dtype=np.float64)
+        return Linearization(at.residual, operator, at.pieces, symmetric=True)
+
     def pieces(self, w: FloatArray) -> Pieces:
         """The active sets of all terms, named by term."""
-        labels: dict[str, Any] = {}
-        legend: dict[str, tuple[str, ...]] = {}
-        for k, cost in enumerate(self.problem.costs):
-            found = cost.pieces(self.problem.part_of(w, k), 1.0 / self.sigma)
-            for name in found:
-                labels[f"term {k}: {name}"] = found[name]
-                if name in found.legend:
-                    legend[f"term {k}: {name}"] = found.legend[name]
-        return Pieces(labels, legend)
+        return named_pieces(self.problem, w, [1.0 / self.sigma] * len(self.problem.costs))
 
     def merit_line(
         self, at: Evaluation, direction: FloatArray
@@ -96,6 +109,7 @@ class AugmentedEquation:
         """Slope, curvature and rounding error of t -> merit(u + t d)."""
         problem, point = self.problem, at.data
         image = problem.forward(direction)
+        weighted = problem.term_weights * image
         step = 1.0 / self.sigma
         own = float(direction @ direction) * self.nu
         pull = float((at.x - self.centre) @ direction) * self.nu
@@ -111,13 +125,13 @@ class AugmentedEquation:
                 if problem.affine
                 else float(problem.gradient(at.x + t * direction) @ direction)
             )
-            priced = float(prices @ image)
+            priced = float(prices @ weighted)
             curvature = bent + own
             for k, cost in enumerate(problem.costs):
                 part = problem.part_of(image, k)
                 bend = part - cost.prox_derivative(problem.part_of(w, k), step).apply(part)
-                curvature += self.sigma * float(part @ bend)
-            noise = ROUNDING * (abs(smooth) + float(np.linalg.norm(prices) * np.linalg.norm(image)))
+                curvature += self.sigma * float(problem.part_of(weighted, k) @ bend)
+            noise = ROUNDING * (abs(smooth) + float(np.linalg.norm(prices) * np.linalg.norm(weighted)))
             return smooth + priced + pull + t * own, curvature, noise
 
         return slope_and_curvature
@@ -125,3 +139,16 @@ class AugmentedEquation:
     def fallback(self, at: Evaluation) -> FallbackStep | None:
         """None: the directions descend."""
         return None
+
+
+def named_pieces(problem: Any, w: FloatArray, steps: Sequence[float]) -> Pieces:
+    """The active sets of the proximal maps of all terms at w, with a step each, by the names of the terms."""
+    labels: dict[str, Any] = {}
+    legend: dict[str, tuple[str, ...]] = {}
+    for k, (cost, step) in enumerate(zip(problem.costs, steps, strict=True)):
+        found = cost.pieces(problem.part_of(w, k), step)
+        for name in found:
+            labels[f"{problem.names[k]}: {name}"] = found[name]
+            if name in found.legend:
+                legend[f"{problem.names[k]}: {name}"] = found.legend[name]
+    return Pieces(labels, legend)

@@ -4,6 +4,7 @@ from .augmented import AugmentedSolver
 from .coupled import CoupledSolver
 from .full_space import FullSpaceSolver
 from .general import GeneralSolver
+from .primal_dual import PrimalDualSolver
 from .reduced import ReducedSolver
 from .subspace import SubspaceSolver
 
@@ -14,6 +15,7 @@ CATALOGUE = {
     "general": GeneralSolver,
     "full space": FullSpaceSolver,
     "augmented": AugmentedSolver,
+    "primal-dual": PrimalDualSolver,
 }
 
 __all__ = [
@@ -22,6 +24,7 @@ __all__ = [
     "CoupledSolver",
     "FullSpaceSolver",
     "GeneralSolver",
+    "PrimalDualSolver",
     "ReducedSolver",
     "SubspaceSolver",
 ]

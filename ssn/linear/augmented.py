@@ -1,4 +1,4 @@
-"""Newton systems of an augmented Lagrangian: f'' + sigma sum K'(I - D)K + nu I, by Cholesky or conjugate gradients."""
+"""Newton systems of an augmented Lagrangian: f'' + sigma sum K'W(I - D)K + nu I, by Cholesky or conjugate gradients."""
 
 from __future__ import annotations
 
@@ -37,12 +37,13 @@ class AugmentedSolver:
         hessian = problem.part.hessian(at.x)
         explicit = not isinstance(hessian, LinearOperator)
         parts = []
-        for operator, derivative in zip(problem.operators, at.data.derivatives, strict=True):
+        for k, (operator, derivative) in enumerate(zip(problem.operators, at.data.derivatives, strict=True)):
             matrix = explicit_complement(derivative)
             if matrix is None or isinstance(operator, LinearOperator):
                 explicit = False
                 break
-            parts.append(equation.sigma * (operator.T @ (matrix @ operator)))
+            weighted = sp.diags_array(problem.part_of(problem.term_weights, k)) @ matrix
+            parts.append(equation.sigma * (operator.T @ (weighted @ operator)))
         if explicit:
             return self._direct(hessian, parts, at)
         return self._iterative(hessian, at, forcing)

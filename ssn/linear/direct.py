@@ -218,7 +218,10 @@ def _power_of_two(scale: FloatArray) -> FloatArray:
 
 def _scaled(matrix: Any, left: FloatArray, right: FloatArray) -> Any:
     if sp.issparse(matrix):
-        return sp.csc_array(sp.diags_array(left) @ matrix @ sp.diags_array(right))
+        # by entries: a sparse product drops those that are zero, and the pattern with them
+        scaled = sp.csc_array(matrix, copy=True)
+        scaled.data *= left[scaled.indices] * np.repeat(right, np.diff(scaled.indptr))
+        return scaled
     return left[:, None] * matrix * right
 
 

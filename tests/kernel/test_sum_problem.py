@@ -52,8 +52,8 @@ def test_two_levels_move_together(n1, n2, share, seed):
     meet = (high - low) / (1 / n1 + 1 / n2)
     weight = max(share, 1e-3) * meet
     solution = ssn.solve(denoising([low] * n1 + [high] * n2, weight)).require()
-    np.testing.assert_allclose(solution.x[:n1], low + weight / n1, atol=1e-7)
-    np.testing.assert_allclose(solution.x[n1:], high - weight / n2, atol=1e-7)
+    np.testing.assert_allclose(solution.x[:n1], low + weight / n1, atol=1e-8)
+    np.testing.assert_allclose(solution.x[n1:], high - weight / n2, atol=1e-8)
 
 
 def test_total_variation_on_a_grid_agrees_with_the_first_order_method():
