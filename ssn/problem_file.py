@@ -19,6 +19,7 @@ from .complementarity import ComplementarityProblem
 from .composite import CompositeProblem
 from .control import ControlProblem
 from .errors import InputError, MissingExtraError, ProblemFileError
+from .sum_problem import SumProblem
 
 HOOKS = ("transfer", "known", "picture", "summary")
 # Distributions whose absence is answered by an extra of ours.
@@ -113,7 +114,7 @@ class ProblemFile:
 
         Returns
         -------
-        ControlProblem, CompositeProblem, ComplementarityProblem, or object with residual and linearize
+        ControlProblem, CompositeProblem, ComplementarityProblem, SumProblem, or object with residual and linearize
 
         Raises
         ------
@@ -126,14 +127,14 @@ class ProblemFile:
             problem = self.builder(**values)
         if problem is None:
             raise self._error("build returned None; it must return the problem")
-        if isinstance(problem, (ControlProblem, CompositeProblem, ComplementarityProblem)):
+        if isinstance(problem, (ControlProblem, CompositeProblem, ComplementarityProblem, SumProblem)):
             return problem
         if not isinstance(problem, type) and hasattr(problem, "residual") and hasattr(problem, "linearize"):
             return problem
         what = "a class, not an object" if isinstance(problem, type) else f"a {type(problem).__name__}"
         raise self._error(
             f"build returned {what}; it must return a ControlProblem, CompositeProblem, ComplementarityProblem, "
-            "or an object with residual(x) and linearize(x)"
+            "SumProblem, or an object with residual(x) and linearize(x)"
         )
 
     @contextlib.contextmanager

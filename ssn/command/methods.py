@@ -14,6 +14,7 @@ import click
 import numpy as np
 
 from ..problem_file import load_module
+from ..sum_problem import SumProblem
 
 Method = Callable[..., Any]
 
@@ -63,6 +64,8 @@ def _with_start(function: Method) -> Method:
 
 def start_of(problem: Any) -> Any:
     """Where our own methods start: zero, within the bounds; for an equation its own start."""
+    if isinstance(problem, SumProblem):
+        return problem.inside(np.zeros(problem.unknowns))
     if hasattr(problem, "cost"):
         return problem.cost.prox(np.zeros(problem.unknowns), 1e-300)
     start = getattr(problem, "start", None)

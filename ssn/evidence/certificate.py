@@ -8,9 +8,11 @@ import numpy as np
 
 from ..composite import CompositeProblem
 from ..control import ControlProblem
+from ..duality_gap import certify
 from ..protocols import FloatArray
 from ..solution import Solution
 from ..solve import solve
+from ..sum_problem import SumProblem
 from .check import Check
 
 # relative size of a perturbation, and proximal gradient steps after it: they leave what the problem feels least,
@@ -48,7 +50,7 @@ def certificate(problem: Any, solution: Solution, *, seed: int = 0) -> Check | N
         h = rng.standard_normal(problem.unknowns)
         u = best + size * (norm(best) or 1.0) * h / norm(h)
         u = _smoothed(problem, u, smoothing)
-        certified = _certify(problem, u)
+        certified = _certify(problem, u, solution)
         if certified is None:
             continue
         z, bound = certified
@@ -105,7 +107,7 @@ def _smoothed(problem: Any, u: FloatArray, steps: int) -> FloatArray:
     return u
 
 
-def _certify(problem: Any, u: FloatArray) -> tuple[FloatArray, float] | None:
+def _certify(problem: Any, u: FloatArray, solution: Solution) -> tuple[FloatArray, float] | None:
     """The certified point that belongs to u and its bound, by the problem's own inequality."""
     if isinstance(problem, ControlProblem):
         observed = problem.forward(u)
@@ -117,4 +119,9 @@ def _certify(problem: Any, u: FloatArray) -> tuple[FloatArray, float] | None:
     if isinstance(problem, CompositeProblem):
         z, found = problem.certify(problem.cost.prox(u, 1e-300))
         return None if found is None else (z, found.bound)
+    if isinstance(problem, SumProblem):
+        # with the multipliers of the solution the gap at u is that of its objective alone
+        multipliers = np.concatenate([solution.multipliers[name] for name in problem.names])
+        gap, found = certify(problem, problem.inside(u), multipliers)
+        return None if found is None else (gap.u, found.bound)
     return None

@@ -12,12 +12,13 @@ import numpy as np
 
 from ..solution import Solution
 from ..solve import solve
+from ..sum_problem import SumProblem
 from ..validate import count, scalar
 from . import judge
 from .agreement import checked_tolerance, decide, objective_check
 from .certificate import certificate
 from .check import Check, describe, plain
-from .derivative import check_derivative
+from .derivative import derivative_checks
 from .known import KnownValue, known_values
 from .library_methods import library_methods
 from .method_result import MethodResult, ours
@@ -103,7 +104,7 @@ def compare(problem: Any, methods: Methods | None = None, **options: Any) -> Ass
 
     Parameters
     ----------
-    problem : ControlProblem, CompositeProblem, ComplementarityProblem, or object with the Equation protocol
+    problem : ControlProblem, CompositeProblem, ComplementarityProblem, SumProblem, or object with the Equation protocol
     methods : mapping of str to callable, or iterable of callables, optional
         Each gets the problem, and ``budget`` in seconds if it has such an argument; it returns the point, or an
         object with a member ``x`` (and converged, outcome, iterations, bound, work where it has them).
@@ -137,7 +138,7 @@ def assess(
 
     Parameters
     ----------
-    problem : ControlProblem, CompositeProblem, ComplementarityProblem, or object with the Equation protocol
+    problem : ControlProblem, CompositeProblem, ComplementarityProblem, SumProblem, or object with the Equation protocol
     parameters : mapping, optional
         What the problem was built with; goes into the result.
     name : str, optional
@@ -161,7 +162,8 @@ def assess(
         Of all random directions.
     libraries : bool, optional
         Whether methods of general libraries are asked too, where the problem fits them and they are installed. By
-        default only for hard state bounds, where no first-order method decides about agreement. The commands ask.
+        default only for hard state bounds and for several terms with a control problem, where no first-order method
+        decides about agreement. The commands ask.
     iterations : int, optional
         A budget of the built-in reference that repeats on every machine, in place of seconds.
 
@@ -190,12 +192,14 @@ def assess(
     stated = problem
     problem = judge.judged(problem, solution)
     own = ours(problem, solution, seconds)
-    # at the last penalty of hard state bounds no first-order method gets anywhere: it may try, briefly
-    patience = min(budget, 2.0) if getattr(stated, "state_bounded", False) else budget
-    if iterations is not None and getattr(stated, "state_bounded", False):
+    # at the last penalty of hard state bounds, and for several terms with a state equation, no first-order method gets
+    # far: it may try, briefly
+    slow_reference = getattr(stated, "state_bounded", False) or getattr(stated, "control", None) is not None
+    patience = min(budget, 2.0) if slow_reference else budget
+    if iterations is not None and slow_reference:
         iterations = min(iterations, BRIEF)
     others, checks = _others(problem, solution, own_methods, patience, agreement_tolerance, tell, iterations)
-    if getattr(stated, "state_bounded", False) if libraries is None else libraries:
+    if slow_reference if libraries is None else libraries:
         others += library_results(stated, problem, solution, set(own_methods), budget, tell)
     verdict, note = decide(problem, solution, others, agreement_tolerance)
     tell("measuring the rate")
@@ -311,7 +315,9 @@ def _residual(solution: Solution, own: MethodResult) -> Check | None:
 def _run(solution: Solution) -> Check | None:
     """The end of the actual run: three last steps that all contract slowly are not those of a Newton method."""
     last = [step.contraction for step in solution.steps[-3:]]
-    if not solution.converged or len(last) < 3:
+    # the last points of a path of multipliers only sharpen the distance bound, at rounding level
+    sharpened = isinstance(solution.problem, SumProblem)
+    if not solution.converged or len(last) < 3 or sharpened:
         return None
     holds = min(last) <= SLOW
     detail = "last contractions " + ", ".join(f"{q:.1e}" for q in last)
@@ -328,7 +334,7 @@ def _rate(problem: Any, solution: Solution, seed: int) -> RateVerdict:
 def _derivatives(problem: Any, solution: Solution, seed: int) -> list[Check]:
     at = solution.x if np.isfinite(solution.x).all() else None
     try:
-        return list(check_derivative(problem, at, seed=seed))
+        return list(derivative_checks(problem, at, solution.iterate, seed))
     except Exception as error:
         return [Check("derivative check", False, f"raised {describe(error)}")]
 

@@ -10,8 +10,10 @@ import numpy as np
 from ..complementarity import ComplementarityProblem
 from ..composite import CompositeProblem
 from ..control import ControlProblem
+from ..inner import InnerProduct
 from ..protocols import FloatArray
 from ..smooth import LeastSquares
+from ..sum_problem import SumProblem
 from ..validate import float_array
 from . import adjoints, proximal, quotient, taylor
 from .check import Check
@@ -23,7 +25,7 @@ def check_derivative(problem: Any, at: Any = None, *, seed: int = 0) -> tuple[Ch
 
     Parameters
     ----------
-    problem : ControlProblem, CompositeProblem, ComplementarityProblem, or object with the Equation protocol
+    problem : ControlProblem, CompositeProblem, ComplementarityProblem, SumProblem, or object with the Equation protocol
     at : array, optional
         Where; a control for control problems. By default the problem's own start; a second point is drawn near it,
         and a third on the nearest kink.
@@ -44,9 +46,15 @@ def check_derivative(problem: Any, at: Any = None, *, seed: int = 0) -> tuple[Ch
     InputError
         For a point of the wrong shape, or an Equation without ``start`` and without `at`.
     """
-    point = None if at is None else float_array(at, "at", ndim=1)
+    return derivative_checks(problem, None if at is None else float_array(at, "at", ndim=1), None, seed)
+
+
+def derivative_checks(
+    problem: Any, point: FloatArray | None, iterate: FloatArray | None, seed: int
+) -> tuple[Check, ...]:
+    """`check_derivative` at a point and, for several terms, the multipliers of the iterate that led to it."""
     rng = np.random.default_rng(seed)
-    local = Local(problem, point)
+    local = Local(problem, point, iterate if isinstance(problem, SumProblem) else None)
     checks = [quotient.newton_derivative(local, rng)]
     step = quotient.newton_step(local)
     if step is not None:
@@ -56,6 +64,8 @@ def check_derivative(problem: Any, at: Any = None, *, seed: int = 0) -> tuple[Ch
         checks.append(labels)
     if hasattr(problem, "cost"):
         checks.append(_proximal(local, rng))
+    if isinstance(problem, SumProblem):
+        checks += _several_terms(local, rng)
     if isinstance(problem, ControlProblem | CompositeProblem | ComplementarityProblem):
         own = not isinstance(problem, ControlProblem)  # whose iterate is the user's unknown
         u = local.x if own else np.zeros(problem.unknowns) if point is None else point
@@ -65,6 +75,29 @@ def check_derivative(problem: Any, at: Any = None, *, seed: int = 0) -> tuple[Ch
     elif isinstance(problem, CompositeProblem) and isinstance(problem.part, LeastSquares):
         checks.append(adjoints.least_squares(problem, rng))
     return tuple(checks)
+
+
+def _several_terms(local: Local, rng: np.random.Generator) -> list[Check]:
+    """The proximal map and the operator of every term, and the smooth part."""
+    problem: SumProblem = local.problem
+    n = problem.unknowns
+    u, at = local.x[:n], local.evaluate(local.x)
+    made = []
+    for k, cost in enumerate(problem.costs):
+        weights = problem.part_of(problem.term_weights, k)
+        gamma = local.equation.gammas[k] if hasattr(local.equation, "gammas") else 1.0 / local.equation.sigma
+        made.append(proximal.proximal_map(cost, problem.part_of(at.data.w, k), gamma, weights, rng))
+    terms = InnerProduct(problem.term_weights)
+    plain = InnerProduct(np.ones(n))
+    hint = "an operator and its transpose do not belong together"
+    checks = [
+        _worse(made),
+        adjoints.pair("adjoint", problem.forward, problem.adjoint, terms, plain, rng, hint=hint),
+    ]
+    checks += _smooth(problem, u, float(problem.controls.norm(u)) or 1.0, rng)
+    if problem.control is not None:
+        checks += [c for c in adjoints.control(problem.control, rng) if c.name != "adjoint"]
+    return checks
 
 
 def _size(local: Local, u: FloatArray) -> float:
@@ -108,7 +141,7 @@ def _smooth(problem: Any, u: FloatArray, size: float, rng: np.random.Generator) 
 
     if not isinstance(problem, ComplementarityProblem) or problem.symmetric:
         checks.append(_worse(taylor.gradient(problem, x, size, rng, few=few) for x, few in points))
-    if isinstance(problem, CompositeProblem):
+    if isinstance(problem, CompositeProblem | SumProblem):
         checks.append(jacobian("hessian", "hessian() is not the derivative of gradient()"))
         checks.append(_worse(taylor.symmetry(problem.derivative(x), x.size, rng) for x, _ in points))
     if isinstance(problem, ComplementarityProblem):

@@ -24,6 +24,8 @@ from ..costs import SparseCost
 from ..protocols import FloatArray
 from ..smooth import LeastSquares, Quadratic
 from ..states import SteadyState
+from ..sum_problem import SumProblem
+from .conic_program import ConicProgram, can_state, solve_conic
 
 # variables from which on an interior-point factorisation is too much for a comparison in passing
 LARGEST = 20_000
@@ -43,6 +45,10 @@ class LibraryResult:
 def library_methods(problem: Any) -> dict[str, Callable[..., LibraryResult]]:
     """The library methods that can state the problem, by name; none for equations and other statements."""
     found: dict[str, Callable[..., LibraryResult]] = {}
+    if isinstance(problem, SumProblem):
+        if conic_program(problem) is not None and _installed("clarabel"):
+            found["interior point"] = conic_interior_point
+        return found
     cost = getattr(problem, "cost", None)
     convex = isinstance(problem, ControlProblem | CompositeProblem) or (
         isinstance(problem, ComplementarityProblem) and problem.symmetric
@@ -56,6 +62,28 @@ def library_methods(problem: Any) -> dict[str, Callable[..., LibraryResult]]:
     if _is_lasso(problem) and _installed("sklearn"):
         found["coordinate descent"] = coordinate_descent
     return found
+
+
+def conic_program(problem: SumProblem) -> ConicProgram | None:
+    """Several terms as a conic program, or None where there are no matrices, other costs, or too many variables."""
+    if not can_state(problem):
+        return None
+    smooth = (
+        _part_blocks(problem.part, problem.unknowns)
+        if problem.control is None
+        else _control_blocks(problem.control)
+    )
+    if smooth is None or smooth[0].shape[0] + int(problem.splits[-1]) > 3 * LARGEST:
+        return None
+    return ConicProgram(problem, smooth)
+
+
+def conic_interior_point(problem: SumProblem, *, budget: float) -> LibraryResult:
+    """clarabel's primal-dual interior-point method on the conic program."""
+    program = conic_program(problem)
+    assert program is not None
+    x, solved, status, iterations = solve_conic(program, budget)
+    return LibraryResult(problem.inside(x), solved, status, iterations)
 
 
 def _installed(name: str) -> bool:
@@ -188,16 +216,19 @@ def _smooth_blocks(problem: Any) -> tuple[Any, FloatArray, Any, FloatArray] | No
             np.zeros(0),
         )
     if isinstance(problem, CompositeProblem):
-        part = problem.part
-        if isinstance(part, Quadratic) and not isinstance(part.H, LinearOperator):
-            return sp.csc_array(part.H), -part.b, none, np.zeros(0)
-        if isinstance(part, LeastSquares) and not isinstance(part.A, LinearOperator):
-            m = part.b.size
-            hessian = sp.block_diag([sp.csc_array((n, n)), sp.diags_array(part.weights)], format="csc")
-            rows = sp.hstack([sp.csr_array(part.A), -sp.eye_array(m)])  # r = A u - b
-            return hessian, np.zeros(n + m), rows, part.b
-        return None
+        return _part_blocks(problem.part, n)
     return _control_blocks(problem)
+
+
+def _part_blocks(part: Any, n: int) -> tuple[Any, FloatArray, Any, FloatArray] | None:
+    if isinstance(part, Quadratic) and not isinstance(part.H, LinearOperator):
+        return sp.csc_array(part.H), -part.b, sp.csr_array((0, n)), np.zeros(0)
+    if isinstance(part, LeastSquares) and not isinstance(part.A, LinearOperator):
+        m = part.b.size
+        hessian = sp.block_diag([sp.csc_array((n, n)), sp.diags_array(part.weights)], format="csc")
+        rows = sp.hstack([sp.csr_array(part.A), -sp.eye_array(m)])  # r = A u - b
+        return hessian, np.zeros(n + m), rows, part.b
+    return None
 
 
 def _control_blocks(problem: ControlProblem) -> tuple[Any, FloatArray, Any, FloatArray] | None:

@@ -8,19 +8,29 @@ import numpy as np
 
 from ..composite import CompositeProblem
 from ..control import ControlProblem
+from ..equations.augmented import AugmentedEquation
 from ..equations.dual import DualEquation
 from ..equations.full_space import FullSpaceEquation
 from ..equations.natural import NaturalEquation
+from ..equations.primal_dual import PrimalDualEquation
+from ..globalization import DualSearch
 from ..linear.boundary import product
+from ..linear.primal_dual import PrimalDualSolver
 from ..linear.subspace import SubspaceSolver
-from ..newton import TIGHT
+from ..newton import TIGHT, Limits, run
+from ..norm_terms import NormRows
 from ..prepare import prepare
+from ..primal_dual_path import first_gammas
 from ..protocols import Direction, Evaluation, FloatArray
 from ..proximal_point import operator_size
+from ..sum_problem import SumProblem
 
 EPS = float(np.finfo(float).eps)
 # weight of the proximal point subproblem that is looked at where control_weight is 0, relative to ||S||^2
 SUBPROBLEM = 1e-5
+# several terms: share of the multipliers that further points of the path begin with, how many, how they are solved
+SPREAD = 1e3  # of gamma about the balance of f and the term: the arguments of an equation are all but zero
+INWARD, POINTS, ROOT, POINT_STEPS = 0.9, 3, 1e-13, 30
 
 
 def _factorised(problem: Any) -> bool:
@@ -58,7 +68,9 @@ class Local:
         self.problem = problem
         self.equation: Any
         self.solver: Any
-        if isinstance(problem, ControlProblem) and problem.alpha == 0.0:
+        if isinstance(problem, SumProblem):
+            self._several_terms(problem, point, iterate)
+        elif isinstance(problem, ControlProblem) and problem.alpha == 0.0:
             weight = SUBPROBLEM * operator_size(problem)
             control = np.zeros(problem.unknowns) if point is None else point
             target = problem.reduced_target()
@@ -92,6 +104,60 @@ class Local:
         self.dual = isinstance(self.equation, DualEquation)
         self.reference = self._reference()
 
+    def _several_terms(
+        self, problem: SumProblem, point: FloatArray | None, iterate: FloatArray | None
+    ) -> None:
+        """The equation of one point of the path, with the multipliers at hand as the centre and moderate gammas.
+
+        The solution is its root whatever gamma, so gamma is that at which arguments and multipliers of a term weigh
+        alike.
+        """
+        plan = prepare(problem, point)
+        n = problem.unknowns
+        u = np.zeros(n) if point is None else point
+        y = iterate[n:] if iterate is not None else np.zeros(int(problem.splits[-1]))
+        x = problem.arguments(u)
+        gammas = []
+        for k, first in enumerate(first_gammas(problem)):
+            length, price = (float(np.linalg.norm(problem.part_of(a, k))) for a in (x, y))
+            balance = length / price if length > 0.0 and price > 0.0 else first
+            gammas.append(float(np.clip(balance, first / SPREAD, first * SPREAD)))
+        if isinstance(plan.equation, PrimalDualEquation):
+            self.x = np.concatenate([u, y])
+            if iterate is not None:
+                y = self._inner_multipliers(problem, plan.equation.rows, gammas)
+            self.equation = PrimalDualEquation(problem, plan.equation.rows, gammas, y)
+            kind = "primal-dual equation, in the norm of unknown and multipliers"
+        else:
+            gamma = float(np.median(gammas))
+            self.equation = AugmentedEquation(problem, y, 1.0 / gamma, u, 0.0)
+            self.x = u
+            kind = "stationarity of the augmented Lagrangian, in the norm of the unknown"
+        kind_of_solver: Any = type(plan.solver)
+        self.solver = kind_of_solver(self.equation)
+        self.note = f"{kind}, about multipliers of the solution, at the gamma that balances each term"
+
+    def _inner_multipliers(self, problem: SumProblem, rows: NormRows, gammas: list[float]) -> FloatArray:
+        """Multipliers of the solution away from the edge of their balls where they are not unique; x moves along.
+
+        The path projects multipliers into their balls, and where several are right it may stop on the edge of a ball,
+        which is a kink of the equation. Points of the path begun with smaller multipliers lead to others.
+        """
+        n = problem.unknowns
+        y = INWARD * self.x[n:]
+        for _ in range(POINTS):
+            equation = PrimalDualEquation(problem, rows, gammas, y)
+            loop = run(
+                equation,
+                PrimalDualSolver(equation),
+                DualSearch(),
+                self.x,
+                Limits(ROOT, POINT_STEPS, exact=True),
+            )
+            self.x = loop.best.x
+            y = rows.into_balls(self.x[n:])
+        return y
+
     def _reference(self) -> float:
         size = self.norm(self.x)
         if size == 0.0 and self.dual:
@@ -109,7 +175,10 @@ class Local:
         inner = getattr(self.equation, "inner", None)
         return float(np.linalg.norm(x)) if inner is None else float(inner.norm(x))
 
-    residual_norm = norm
+    def residual_norm(self, residual: FloatArray) -> float:
+        """Norm of a residual, where the equation has one of its own."""
+        own = getattr(self.equation, "residual_norm", None)
+        return self.norm(residual) if own is None else float(own(residual))
 
     def evaluate(self, x: FloatArray) -> Evaluation:
         """Evaluate the equation; overflow shows as an infinite norm, not as a warning."""

@@ -10,6 +10,7 @@ from typing import Any
 from ..errors import InputError
 from ..solution import Solution
 from ..solve import solve
+from ..sum_problem import SumProblem
 from . import judge
 from .check import Check, plain
 from .known import KnownValue, known_values
@@ -148,7 +149,7 @@ def mesh_study(
         problem = build(n=n, **others)
         solution = solve(problem, tolerance=tolerance)
         values, checks = known_values(known, problem, solution)
-        if getattr(problem, "state_bounded", False):
+        if getattr(problem, "state_bounded", False) or isinstance(problem, SumProblem):
             points.append(len({record.stage for record in solution.steps}))
         rows.append(
             MeshRow(
@@ -168,10 +169,11 @@ def mesh_study(
     solved = [row.converged for row in rows]
     independent, note = mesh_independent(counts, solved)
     if independent is False and points and all(solved):
-        # hard state bounds: a finer mesh needs a larger last penalty, and so more points of the path
+        # hard state bounds: a finer mesh needs a larger last penalty, and so more points of the path; several terms:
+        # a finer mesh needs a smaller gamma
         each = [-(-steps // max(1, p)) for steps, p in zip(counts, points, strict=True)]
         independent, own = mesh_independent(each, solved)
-        note = f"{note}; over {', '.join(map(str, points))} penalties, at each of them: {own}"
+        note = f"{note}; over {', '.join(map(str, points))} points of the path, at each of them: {own}"
     if independent is not False or transfer is None or not all(row.converged for row in rows):
         return MeshStudy(tuple(rows), independent, note)
     nested = _nested_steps(build, sizes, others, transfer, progress, tolerance)

@@ -69,9 +69,10 @@ def newton_derivative(local: Local, rng: np.random.Generator) -> Check:
 
 def newton_step(local: Local) -> Check | None:
     """Whether the step of the linear solver solves G d = -F, G applied by its definition."""
-    at = local.evaluate(
-        local.x + 0.1 * local.reference * local.direction(np.random.default_rng(1), smooth=False)
-    )
+    x = local.x + 0.1 * local.reference * local.direction(np.random.default_rng(1), smooth=False)
+    # primal-dual steps are safeguarded: they solve the system of G where the multipliers belong to the unknown
+    consistent = getattr(local.equation, "consistent", None)
+    at = local.evaluate(x if consistent is None else consistent(x))
     if not at.finite or at.norm == 0.0:
         return None
     direction = local.step(at)

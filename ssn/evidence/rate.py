@@ -98,7 +98,7 @@ def rate(
 
     Parameters
     ----------
-    problem : ControlProblem, CompositeProblem, ComplementarityProblem, or object with the Equation protocol
+    problem : ControlProblem, CompositeProblem, ComplementarityProblem, SumProblem, or object with the Equation protocol
     solution : Solution, optional
         Of `problem`; solved for by default (an Equation then needs a ``start``).
     seed : int
@@ -125,8 +125,11 @@ def rate(
     The solution is first polished by full Newton steps to rounding level, so the verdict depends neither on the
     tolerance nor on the number of steps of the solve. Dual equations are perturbed in the dual variable q, with
     S* q kept consistent, and measured in the observation norm. Composite problems are measured on the natural
-    residual, whatever way they were solved. Where control_weight is 0 the equation of one proximal point
-    subproblem about the solution is measured, with a weight of 1e-5 ||S||^2.
+    residual, whatever way they were solved. Several terms are measured on the equation of one point of their path, with
+    multipliers of the solution as its centre and the gamma at which arguments and multipliers of a term weigh alike:
+    the primal-dual equation, in unknown and multipliers together, or stationarity of the augmented Lagrangian. The
+    solution is its root for every gamma; the rate says nothing about the number of points. Where control_weight is 0
+    the equation of one proximal point subproblem about the solution is measured, with a weight of 1e-5 ||S||^2.
     """
     sizes = [scalar(d, "deltas", positive=True) for d in deltas]
     if len(sizes) < 3 or any(b >= a for a, b in pairwise(sizes)) or sizes[0] >= 1.0:

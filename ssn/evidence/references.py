@@ -10,9 +10,11 @@ import numpy as np
 
 from ..complementarity import ComplementarityProblem
 from ..extragradient import extragradient
+from ..primal_dual import primal_dual
 from ..protocols import FloatArray
 from ..reference import ReferenceResult, proximal_gradient
 from ..solution import Solution
+from ..sum_problem import SumProblem
 from . import judge
 from .method_result import MethodResult, own_bound
 from .residual_only import residual_only
@@ -29,6 +31,8 @@ def reference_name(problem: Any) -> str:
     """The name of the built-in reference for a problem."""
     if not judge.is_statement(problem):
         return ROOT_FINDER
+    if isinstance(problem, SumProblem):
+        return "first-order primal-dual"
     return "proximal gradient" if judge.has_objective(problem) else "extragradient"
 
 
@@ -68,7 +72,7 @@ def references(
 
     while (
         result.converged
-        and result.bound is None
+        and (result.bound is None or isinstance(problem, SumProblem))
         and apart() > agreement_tolerance
         and tolerance > LEAST_TOLERANCE
         and (budget is None or seconds() < budget)
@@ -111,6 +115,8 @@ def _first_order(
     problem: Any, start: FloatArray | None, tolerance: float, budget: float | None, most: int
 ) -> ReferenceResult:
     method = proximal_gradient if judge.has_objective(problem) else extragradient
+    if isinstance(problem, SumProblem):
+        method = primal_dual
     return method(problem, start, tolerance=tolerance, budget=budget, max_iterations=most)
 
 

@@ -11,7 +11,7 @@ import numpy as np
 
 from ..complementarity import ComplementarityProblem
 from ..evidence import Assessment
-from ..evidence.judge import is_statement
+from ..evidence.judge import is_statement, project
 from ..problem_file import ProblemFile
 
 # meshes of the gate: the smallest ones of SIZES
@@ -119,7 +119,7 @@ def _value(problem: Any, x: Any) -> float | None:
                 start = getattr(problem, "start", None)
                 value = float(np.linalg.norm(problem.residual(x if start is None else np.asarray(start) + x)))
             else:
-                inside = problem.cost.prox(x, 1e-300)
+                inside = project(problem, x)
                 complementarity = isinstance(problem, ComplementarityProblem)
                 value = (
                     float(np.linalg.norm(problem.value(inside))) + float(np.linalg.norm(inside))
