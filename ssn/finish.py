@@ -336,6 +336,7 @@ def finish_sum(
         choices=plan.choices,
         problem=problem,
         certificate=certificate,
+        lower_bound=gap.objective - gap.value - gap.rounding if np.isfinite(gap.value) else None,
         state=state,
         adjoint=adjoint,
         iterate=np.concatenate([result.u, result.multipliers]),

@@ -53,7 +53,8 @@ class Solution:
         the duality gap (kind "gap") for control problems with control_weight 0.
     lower_bound : float or None
         Count and power costs: no point has a lower objective than this, by the convex envelope (up to rounding of the
-        linear solves). `gap` compares it with the objective. It says nothing about the distance to a minimiser.
+        linear solves). `gap` compares it with the objective. It says nothing about the distance to a minimiser. Several
+        terms: the same by the duality gap, where it is finite.
     state, adjoint : array or None
         Control problems: y and p with E'p = C'Wy(z - Cy), minus M l where the state has bounds.
     violation : float or None

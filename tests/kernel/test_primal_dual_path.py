@@ -33,6 +33,7 @@ def test_few_steps_to_a_small_duality_gap(n, weight, isotropic):
         problem, solution.x, np.concatenate([solution.multipliers[k] for k in problem.names])
     )
     assert gap.relative <= 1e-9 and certificate is not None
+    assert solution.lower_bound <= solution.objective and solution.gap <= 1e-9
     assert certificate.relative == pytest.approx(solution.certificate.relative)
     assert solution.work.symbolic_analyses == 1  # the pattern of the Newton matrix stays
 
