@@ -39,6 +39,7 @@ LEVELS: dict[str, float] = {
     "smooth": 1.5,
     "solution": 1.5,
     "states": 1.5,
+    "time_grid": 1.2,
     "time_state": 1.5,
     "environment": 1.5,
     "duality": 1.5,
