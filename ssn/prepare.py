@@ -39,7 +39,9 @@ from .linear import (
 )
 from .linear.coupled import refusal
 from .moreau_yosida import PenaltyPath, first_penalty
+from .nonlinear_control import NonlinearControlProblem
 from .protocols import FloatArray, Globalization, LinearSolver
+from .proximal_newton import ControlEquation, ObjectiveSearch, ProximalNewtonSolver
 from .proximal_point import ProximalPointPath
 from .smooth import LeastSquares
 from .smoothing_path import SmoothingPath
@@ -98,6 +100,8 @@ def prepare(
         raise InputError(f"globalization must be 'auto', {names} or 'smoothing', got {globalization!r}")
     if isinstance(problem, ControlProblem):
         plan = _prepare_control(problem, start, globalization, linear)
+    elif isinstance(problem, NonlinearControlProblem):
+        plan = _prepare_nonlinear(problem, start, globalization)
     elif isinstance(problem, CompositeProblem):
         plan = _prepare_composite(problem, start, globalization)
     elif isinstance(problem, SumProblem):
@@ -114,8 +118,8 @@ def prepare(
         plan.unpack = traced.unpack
     else:
         raise InputError(
-            f"cannot solve a {type(problem).__name__}: give a ControlProblem, CompositeProblem, "
-            "ComplementarityProblem, "
+            f"cannot solve a {type(problem).__name__}: give a ControlProblem, NonlinearControlProblem, "
+            "CompositeProblem, ComplementarityProblem, "
             "a function of NumPy arrays, or an object with residual(x) and linearize(x)"
         )
     if linear not in ("auto", plan.solver.name):
@@ -320,6 +324,24 @@ def _prepare_state_bounds(problem: ControlProblem, control: FloatArray | None) -
     path = PenaltyPath(control, quick_steps=QUICK if has_dual(problem) else 0)
     x = equation.start(control)
     return Plan(problem, equation, FullSpaceSolver(equation), search, x, choices, penalty=path)
+
+
+def _prepare_nonlinear(problem: NonlinearControlProblem, start: Any, globalization: Any) -> Plan:
+    if globalization != "auto":
+        raise InputError(
+            f"globalization={globalization!r} does not fit a nonlinear state: the search is on the objective"
+        )
+    control = _start_array(start, problem.unknowns)
+    equation = ControlEquation(problem)
+    solver = ProximalNewtonSolver(equation)
+    choices = {
+        "equation": "u = prox(B* p / alpha) with the state and adjoint of u",
+        "globalization": "objective: every step lowers it; steps to where there is no state are shortened",
+        "linear": "proximal Newton: Gauss-Newton models by their dual equation, then the full Hessian by GMRES",
+    }
+    x = problem.cost.prox(np.zeros(problem.unknowns) if control is None else control, 1e-300)
+    search = ObjectiveSearch(lambda at: solver.gauss_newton(at, 1e-6))
+    return Plan(problem, equation, solver, search, x, choices)
 
 
 def _prepare_composite(problem: CompositeProblem, start: Any, globalization: Any) -> Plan:

@@ -19,6 +19,7 @@ from .complementarity import ComplementarityProblem
 from .composite import CompositeProblem
 from .control import ControlProblem
 from .errors import InputError, MissingExtraError, ProblemFileError
+from .nonlinear_control import NonlinearControlProblem
 
 HOOKS = ("transfer", "known", "picture", "summary")
 # Distributions whose absence is answered by an extra of ours.
@@ -126,14 +127,15 @@ class ProblemFile:
             problem = self.builder(**values)
         if problem is None:
             raise self._error("build returned None; it must return the problem")
-        if isinstance(problem, (ControlProblem, CompositeProblem, ComplementarityProblem)):
+        statements = (ControlProblem, NonlinearControlProblem, CompositeProblem, ComplementarityProblem)
+        if isinstance(problem, statements):
             return problem
         if not isinstance(problem, type) and hasattr(problem, "residual") and hasattr(problem, "linearize"):
             return problem
         what = "a class, not an object" if isinstance(problem, type) else f"a {type(problem).__name__}"
         raise self._error(
-            f"build returned {what}; it must return a ControlProblem, CompositeProblem, ComplementarityProblem, "
-            "or an object with residual(x) and linearize(x)"
+            f"build returned {what}; it must return a ControlProblem, NonlinearControlProblem, CompositeProblem, "
+            "ComplementarityProblem, or an object with residual(x) and linearize(x)"
         )
 
     @contextlib.contextmanager

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from functools import cached_property
+from itertools import pairwise
 from typing import Any
 
 import numpy as np
@@ -86,9 +87,10 @@ class TimeGrid:
 
         Parameters
         ----------
-        shapes : sparse array or array, shape (N, m), optional
+        shapes : sparse array or array, shape (N, m), or function, optional
             S, column j the load of unit control j, integrated over space: the lumped mass times the indicator of a
-            patch, for instance. By default diag(lumped mass), a control at every point.
+            patch, for instance. By default diag(lumped mass), a control at every point. A function t -> array (N, m) is
+            taken at both ends of each step with the weights of the scheme.
         amplitudes : sparse array or array, shape (K, q), optional
             T, column i the values of amplitude i on the K steps. By default the identity, a value a step. ``np.ones((K,
             1))`` makes controls that are constant in time.
@@ -97,17 +99,25 @@ class TimeGrid:
         -------
         sparse array, shape (K * N, q * m)
         """
-        S = (
-            sp.diags_array(self.lumped_mass)
-            if shapes is None
-            else _explicit_matrix(shapes, "shapes", self.points)
-        )
         T = (
             sp.eye_array(self.steps)
             if amplitudes is None
             else _explicit_matrix(amplitudes, "amplitudes", self.steps)
         )
-        return sp.csr_array(sp.kron(sp.diags_array(self.step_sizes) @ T, S, format="csr"))
+        time = sp.csr_array(sp.diags_array(self.step_sizes) @ T)
+        if callable(shapes):
+            at = [
+                sp.csr_array(_explicit_matrix(shapes(t), f"shapes({t:.6g})", self.points))
+                for t in self.times.tolist()
+            ]
+            mixed = [self.theta * b + (1.0 - self.theta) * a for a, b in pairwise(at)]
+            return sp.csr_array(sp.vstack([sp.kron(time[[k]], part) for k, part in enumerate(mixed)]))
+        S = (
+            sp.diags_array(self.lumped_mass)
+            if shapes is None
+            else _explicit_matrix(shapes, "shapes", self.points)
+        )
+        return sp.csr_array(sp.kron(time, S, format="csr"))
 
     def control_mass(self, mass: Any = None, amplitudes: Any = None) -> FloatArray:
         """Lumped mass of the controls of `control_operator`, shape (q * m,).

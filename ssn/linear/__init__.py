@@ -4,6 +4,7 @@ from .augmented import AugmentedSolver
 from .coupled import CoupledSolver
 from .full_space import FullSpaceSolver
 from .general import GeneralSolver
+from .normal import NormalSolver
 from .reduced import ReducedSolver
 from .subspace import SubspaceSolver
 
@@ -22,6 +23,7 @@ __all__ = [
     "CoupledSolver",
     "FullSpaceSolver",
     "GeneralSolver",
+    "NormalSolver",
     "ReducedSolver",
     "SubspaceSolver",
 ]
