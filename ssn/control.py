@@ -135,6 +135,12 @@ class ControlStatement:
         other.state_penalty = scalar(gamma, "gamma", positive=True)
         return other
 
+    def unbounded(self) -> Self:
+        """The same problem without its state bounds."""
+        other = copy.copy(self)
+        other.state_bounded, other.state_penalty = False, None
+        return other
+
     def with_cost(self, cost: Cost) -> Self:
         """Return the same problem with another cost; operators, factors and work counters are shared."""
         if not isinstance(cost, Cost):

@@ -341,8 +341,8 @@ class OrdinaryDifferentialSystem(NonlinearTimeState):
     Notes
     -----
     Meant for up to some dozens of components: the Jacobians are dense. The linearised system is factorised as one
-    sparse matrix. ``control_operator(shapes)`` makes the B of m controls with a value a step, `shapes` an array (N, m) or
-    a function t -> array (N, m).
+    sparse matrix. ``control_operator(shapes)`` makes the B of m controls with a value a step, `shapes` an array (N, m)
+    or a function t -> array (N, m).
 
     Examples
     --------
@@ -417,7 +417,7 @@ class OrdinaryDifferentialSystem(NonlinearTimeState):
     def step_solver(self, t: float, y: FloatArray, scale: float) -> Solve:
         """The function that solves with I - scale times the Jacobian."""
         matrix = self._eye - scale * self.jacobian(t, y)
-        return lambda r: np.linalg.solve(matrix, r)
+        return lambda r: np.asarray(np.linalg.solve(matrix, r), dtype=np.float64)
 
     def linearize(self, y: FloatArray) -> StateModel:
         """E'(y) as a linear state model, block bidiagonal."""

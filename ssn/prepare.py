@@ -24,7 +24,7 @@ from .equations.dual import DualEquation
 from .equations.full_space import FullSpaceEquation, has_dual
 from .equations.general import GeneralEquation
 from .equations.natural import NaturalEquation
-from .errors import InputError
+from .errors import InputError, StateSolveError
 from .gap_path import GapPath
 from .globalization import CATALOGUE, DualSearch, EnvelopeSearch, ResidualSearch
 from .inner import relative
@@ -101,7 +101,7 @@ def prepare(
     if isinstance(problem, ControlProblem):
         plan = _prepare_control(problem, start, globalization, linear)
     elif isinstance(problem, NonlinearControlProblem):
-        plan = _prepare_nonlinear(problem, start, globalization)
+        plan = _prepare_nonlinear(problem, start)
     elif isinstance(problem, CompositeProblem):
         plan = _prepare_composite(problem, start, globalization)
     elif isinstance(problem, SumProblem):
@@ -124,6 +124,10 @@ def prepare(
         )
     if linear not in ("auto", plan.solver.name):
         raise InputError(f"linear={linear!r} does not fit this problem; it is solved by {plan.solver.name!r}")
+    if isinstance(plan.equation, ControlEquation) and globalization != "auto":
+        raise InputError(
+            f"globalization={globalization!r} does not fit a nonlinear state; use 'auto': a search on the objective"
+        )
     if plan.multipliers is not None and globalization not in ("auto", "dual"):
         raise InputError(f"globalization={globalization!r} does not fit several terms; use 'auto'")
     if isinstance(globalization, str) and globalization == "smoothing":
@@ -297,8 +301,10 @@ def _path_without_quadratic(problem: ControlProblem) -> GapPath | ProximalPointP
     return GapPath() if problem.has_gap else ProximalPointPath()
 
 
-def _prepare_state_bounds(problem: ControlProblem, control: FloatArray | None) -> Plan:
-    if getattr(problem.state, "matrix", None) is None:
+def _prepare_state_bounds(
+    problem: ControlProblem | NonlinearControlProblem, control: FloatArray | None
+) -> Plan:
+    if getattr(problem.state, "matrix", None) is None and not hasattr(problem.state, "derivative_matrix"):
         raise InputError(
             f"state bounds need the explicit matrix of the state equation, which {type(problem.state).__name__} hides"
         )
@@ -312,26 +318,28 @@ def _prepare_state_bounds(problem: ControlProblem, control: FloatArray | None) -
         raise InputError(f"state bounds need a separable cost; {type(problem.cost).__name__} is not")
     gamma = problem.state_penalty if problem.state_penalty is not None else first_penalty(problem)
     equation = FullSpaceEquation(problem, gamma)
+    first = "proximal Newton" if equation.nonlinear else "dual search"
     choices = {
         "equation": "state and adjoint, control eliminated, state bounds penalised",
         "globalization": "residual search, and dual search behind it: the dual function of each point is convex"
         if has_dual(problem)
         else "residual search at each point of the path, which goes back where it fails",
         "linear": "full space: one sparse factorisation a step, pattern kept",
-        "path": "Moreau-Yosida: the penalty rises from 0 (dual search) by a model of the value function",
+        "path": f"Moreau-Yosida: the penalty rises from 0 ({first}) by a model of the value function",
     }
     search = ResidualSearch().fresh()
     path = PenaltyPath(control, quick_steps=QUICK if has_dual(problem) else 0)
-    x = equation.start(control)
+    try:
+        x = equation.start(control)
+    except StateSolveError:
+        x = np.zeros(2 * equation.size)  # the path says why it cannot begin
     return Plan(problem, equation, FullSpaceSolver(equation), search, x, choices, penalty=path)
 
 
-def _prepare_nonlinear(problem: NonlinearControlProblem, start: Any, globalization: Any) -> Plan:
-    if globalization != "auto":
-        raise InputError(
-            f"globalization={globalization!r} does not fit a nonlinear state: the search is on the objective"
-        )
+def _prepare_nonlinear(problem: NonlinearControlProblem, start: Any) -> Plan:
     control = _start_array(start, problem.unknowns)
+    if problem.state_bounded:
+        return _prepare_state_bounds(problem, control)
     equation = ControlEquation(problem)
     solver = ProximalNewtonSolver(equation)
     choices = {

@@ -59,9 +59,9 @@ LEVELS: dict[str, float] = {
     "user_equation": 2,
     # the loop over a path of equations
     "gap_path": 2.27,
+    "proximal_newton": 2.2,
     "moreau_yosida": 2.25,
     "easier_weight": 2.25,
-    "proximal_newton": 2.25,
     "proximal_point": 2.25,
     "smoothing_path": 2.25,
     "augmented_lagrangian": 2.25,

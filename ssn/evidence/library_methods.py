@@ -21,6 +21,7 @@ from ..complementarity import ComplementarityProblem
 from ..composite import CompositeProblem
 from ..control import ControlProblem
 from ..costs import SparseCost
+from ..nonlinear_control import NonlinearControlProblem
 from ..protocols import FloatArray
 from ..smooth import LeastSquares, Quadratic
 from ..states import SteadyState
@@ -44,10 +45,10 @@ def library_methods(problem: Any) -> dict[str, Callable[..., LibraryResult]]:
     """The library methods that can state the problem, by name; none for equations and other statements."""
     found: dict[str, Callable[..., LibraryResult]] = {}
     cost = getattr(problem, "cost", None)
-    convex = isinstance(problem, ControlProblem | CompositeProblem) or (
+    stated = isinstance(problem, ControlProblem | NonlinearControlProblem | CompositeProblem) or (
         isinstance(problem, ComplementarityProblem) and problem.symmetric
     )
-    if not isinstance(cost, SparseCost) or not convex:
+    if not isinstance(cost, SparseCost) or not stated:
         return found
     if not getattr(problem, "state_bounded", False):
         found["L-BFGS-B"] = lbfgsb

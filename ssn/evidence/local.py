@@ -73,7 +73,7 @@ class Local:
                 f"dual equation of the proximal point subproblem with weight {weight:.1e} about the point, "
                 "in the observation norm"
             )
-        elif isinstance(problem, NonlinearControlProblem) and not hard_bounds(problem):
+        elif isinstance(problem, NonlinearControlProblem) and not problem.state_bounded:
             u = np.zeros(problem.unknowns) if point is None else point
             self.equation = normal_equation(problem)
             self.solver = NormalSolver(self.equation)
