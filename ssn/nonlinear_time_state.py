@@ -22,6 +22,9 @@ from .work import WorkCounts
 
 FloatArray = npt.NDArray[np.float64]
 
+# small steps in place of one, where a start for its equation is wanted
+SMALL_STEPS = (8, 64, 512)
+
 
 class NonlinearTimeState(TimeGrid):
     """M y' + G(t, y) = load on a time grid; the base of the two models below.
@@ -86,16 +89,47 @@ class NonlinearTimeState(TimeGrid):
                 result[k] = damped_newton(
                     residual, linearised, before if guesses is None else guesses[k], where
                 )
-            except StateSolveError:
-                if guesses is None:
-                    raise
-                result[k] = damped_newton(
-                    residual, linearised, before, where
-                )  # a start is no more than a hint
+            except StateSolveError as error:
+                guess = self._by_small_steps(k, before, loads[k], linearised, error)
+                result[k] = damped_newton(residual, linearised, guess, where)
             before = result[k]
         # a sweep is a state solve: K levels make one
         self.work.state_solves += -(-done // self.steps)
         return result.ravel()
+
+    def _by_small_steps(
+        self,
+        k: int,
+        before: FloatArray,
+        load: FloatArray,
+        linearised: Callable[..., Solve],
+        error: StateSolveError,
+    ) -> FloatArray:
+        """The state at the end of a step by many small ones of implicit Euler: a start where the plain one fails.
+
+        During an ignition the equation of a large step has several solutions, or none near the level before.
+        """
+        begin, tau = float(self.times[k]), float(self.step_sizes[k])
+        for parts in SMALL_STEPS:
+            y, small = before, tau / parts
+            try:
+                for j in range(1, parts + 1):
+                    t = begin + j * small
+                    known = load / parts + self.M @ y
+
+                    def residual(
+                        x: FloatArray, t: float = t, known: FloatArray = known, small: float = small
+                    ) -> FloatArray:
+                        return np.asarray(known - self.M @ x - small * self.term(t, x))
+
+                    def solver(x: FloatArray, t: float = t, small: float = small) -> Solve:
+                        return linearised(x, t, small)
+
+                    y = damped_newton(residual, solver, y, f" at t = {t:.6g}")
+                return y
+            except StateSolveError as again:
+                error = again
+        raise error
 
     def residual(self, y: FloatArray, load: FloatArray) -> FloatArray:
         """Return load - E(y)."""
