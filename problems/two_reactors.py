@@ -261,7 +261,7 @@ def picture(problem: ssn.NonlinearControlProblem, solution: ssn.Solution) -> Any
         bottom.set_title("yellow: dear hours", fontsize=9)
     bottom.set(ylabel="feed", xlabel="time")
     figure.suptitle(
-        rf"Two reactors, one coolant supply ({mesh.tariff} tariff): n = {mesh.steps}, $\alpha$ = {mesh.alpha:g}; "
-        f"exactly one valve open at {one_open(solution):.0%} of the instants"
+        f"Two reactors, one coolant supply, {mesh.tariff} tariff, n = {mesh.steps}: "
+        f"one valve open {one_open(solution):.0%} of the time"
     )
     return figure
