@@ -44,7 +44,7 @@ from ssn.plotting import new_figure
 
 FloatArray = npt.NDArray[np.float64]
 
-SIZES = (80, 160, 320)
+SIZES = (80, 120, 240)
 
 RATE = np.array([0.12, 0.10])
 HEAT, ACTIVATION, LOSS = 10.0, 20.0, 1.6
@@ -88,9 +88,10 @@ def jacobian(t: float, y: FloatArray) -> FloatArray:
     """The derivative of `balance`."""
     c, temperature = y[:2], y[2:]
     k, dk, _ = rates(temperature)
-    return np.block(
-        [[np.diag(-1.0 - k), np.diag(-dk * c)], [np.diag(HEAT * k), np.diag(HEAT * dk * c - LOSS)]]
-    )
+    matrix, i = np.zeros((4, 4)), np.arange(2)
+    matrix[i, i], matrix[i, i + 2] = -1.0 - k, -dk * c
+    matrix[i + 2, i], matrix[i + 2, i + 2] = HEAT * k, HEAT * dk * c - LOSS
+    return matrix
 
 
 def hessian(t: float, y: FloatArray, q: FloatArray) -> FloatArray:
@@ -98,13 +99,14 @@ def hessian(t: float, y: FloatArray, q: FloatArray) -> FloatArray:
     c, temperature = y[:2], y[2:]
     _, dk, ddk = rates(temperature)
     weight = HEAT * q[2:] - q[:2]
-    return np.block(
-        [[np.zeros((2, 2)), np.diag(weight * dk)], [np.diag(weight * dk), np.diag(weight * ddk * c)]]
-    )
+    matrix, i = np.zeros((4, 4)), np.arange(2)
+    matrix[i, i + 2] = matrix[i + 2, i] = weight * dk
+    matrix[i + 2, i + 2] = weight * ddk * c
+    return matrix
 
 
 def build(
-    n: int = 160, alpha: float = 0.01, beta: float = 0.3, tariff: str = "even"
+    n: int = 120, alpha: float = 0.02, beta: float = 0.4, tariff: str = "even"
 ) -> ssn.NonlinearControlProblem:
     """Build the control problem.
 
@@ -153,7 +155,7 @@ def build(
         control_operator=state.control_operator(-np.eye(4)[:, 2:]),
         control_mass=state.control_mass([1.0, 1.0]),
     )
-    standard = alpha == 0.01 and beta == 0.3
+    standard = alpha == 0.02 and beta == 0.4
     problem.mesh_data = MeshData(int(n), float(alpha), price, tariff, standard)
     return problem
 

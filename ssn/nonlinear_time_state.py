@@ -85,10 +85,9 @@ class NonlinearTimeState(TimeGrid):
                 return self.step_solver(t, y, scale)
 
             where = f" at t = {t:.6g}"
+            guess = before if guesses is None else guesses[k]
             try:
-                result[k] = damped_newton(
-                    residual, linearised, before if guesses is None else guesses[k], where
-                )
+                result[k] = damped_newton(residual, linearised, guess, where)
             except StateSolveError as error:
                 guess = self._by_small_steps(k, before, loads[k], linearised, error)
                 result[k] = damped_newton(residual, linearised, guess, where)
@@ -451,7 +450,8 @@ class OrdinaryDifferentialSystem(NonlinearTimeState):
     def step_solver(self, t: float, y: FloatArray, scale: float) -> Solve:
         """The function that solves with I - scale times the Jacobian."""
         matrix = self._eye - scale * self.jacobian(t, y)
-        return lambda r: np.asarray(np.linalg.solve(matrix, r), dtype=np.float64)
+        inverse: FloatArray = np.linalg.inv(matrix)  # small, and used a few times
+        return lambda r: inverse @ r
 
     def linearize(self, y: FloatArray) -> StateModel:
         """E'(y) as a linear state model, block bidiagonal."""
@@ -484,7 +484,7 @@ class OrdinaryDifferentialSystem(NonlinearTimeState):
         if self._hessian is not None:
             value = self._called(self._hessian, "hessian", shape, t, y.copy(), q.copy())
         else:
-            value = np.empty(shape)
+            value = np.zeros(shape)
             for i in range(self.points):
                 move = self._eye[i] * np.finfo(float).eps ** (1 / 3) * (1.0 + abs(y[i]))
                 change = self.jacobian(t, y + move) - self.jacobian(t, y - move)

@@ -19,7 +19,7 @@ from scipy.sparse.linalg import LinearOperator
 from ..complementarity import ComplementarityProblem
 from ..composite import CompositeProblem
 from ..control import ControlProblem
-from ..costs import SparseCost
+from ..costs import SparseCost, SwitchingCost
 from ..nonlinear_control import NonlinearControlProblem
 from ..protocols import FloatArray
 from ..smooth import LeastSquares
@@ -34,6 +34,8 @@ def library_methods(problem: Any) -> dict[str, Callable[..., LibraryResult]]:
     stated = isinstance(problem, ControlProblem | NonlinearControlProblem | CompositeProblem) or (
         isinstance(problem, ComplementarityProblem) and problem.symmetric
     )
+    if isinstance(cost, SwitchingCost) and stated:
+        found["L-BFGS-B"] = lbfgsb
     if not isinstance(cost, SparseCost) or not stated:
         return found
     if not getattr(problem, "state_bounded", False):
@@ -60,7 +62,7 @@ class _OutOfTime(Exception):
 
 
 def lbfgsb(problem: Any, *, budget: float) -> LibraryResult:
-    """SciPy's L-BFGS-B; where there is an L1 cost the unknown is split into its positive and negative part.
+    """SciPy's L-BFGS-B; an L1 or switching cost is smooth in the positive and negative parts of the unknown.
 
     The unknown is scaled by the square roots of the weights, so that the method works in the problem's inner product.
     """
@@ -68,9 +70,11 @@ def lbfgsb(problem: Any, *, budget: float) -> LibraryResult:
     n = problem.unknowns
     weights = getattr(problem, "weights", np.ones(n))
     root = np.sqrt(weights)
-    beta = np.broadcast_to(cost.beta, (n,))
-    lower, upper = (np.broadcast_to(b, (n,)) for b in (cost.lower, cost.upper))
-    split = bool(beta.any())
+    lower, upper = (
+        np.broadcast_to(getattr(cost, name, b), (n,)) for name, b in (("lower", -np.inf), ("upper", np.inf))
+    )
+    split = bool(np.any(cost.beta))
+    price_of = _switching_price if isinstance(cost, SwitchingCost) else _sparse_price
     began = time.monotonic()
     best: dict[str, Any] = {"value": np.inf, "u": None}
 
@@ -85,8 +89,9 @@ def lbfgsb(problem: Any, *, budget: float) -> LibraryResult:
         scaled = root * gradient
         if not split:
             return value, scaled
-        price = beta * root
-        value += float(price @ (v[:n] + v[n:]))
+        paid, price = price_of(cost, (v[:n] + v[n:]) / root, weights)
+        price = price / root
+        value += paid
         if value < best["value"]:
             best.update(value=value, u=u)
         return value, np.concatenate([scaled + price, -scaled + price])
@@ -108,6 +113,20 @@ def lbfgsb(problem: Any, *, budget: float) -> LibraryResult:
     u = np.clip(unknown(result.x), lower, upper)
     outcome = "converged" if result.success else str(result.message).lower()[:40]
     return LibraryResult(u, bool(result.success), outcome, int(result.nit))
+
+
+def _sparse_price(cost: SparseCost, size: FloatArray, weights: FloatArray) -> tuple[float, FloatArray]:
+    """The L1 cost of |u| = size, and its derivatives."""
+    price = np.broadcast_to(cost.beta, size.shape) * weights
+    return float(price @ size), price
+
+
+def _switching_price(cost: SwitchingCost, size: FloatArray, weights: FloatArray) -> tuple[float, FloatArray]:
+    """The switching cost of |u| = size, and its derivatives."""
+    inner, groups = cost.inner_weights, cost.groups
+    strength = cost.beta * groups.outer(weights, inner)
+    total = groups.sum(inner * size)
+    return float(0.5 * np.sum(strength * total**2)), groups.spread(strength * total) * inner
 
 
 def interior_point(problem: Any, *, budget: float) -> LibraryResult:
