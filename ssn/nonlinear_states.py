@@ -23,8 +23,9 @@ Solve = Callable[[FloatArray], FloatArray]
 
 # Newton steps and halvings of one state solve
 MAX_STEPS, MAX_HALVINGS = 60, 20
-# the last correction, with the matrix of the one before, leaves itself times the ratio of the two: below this
-LEFT = 1e-16
+# a correction with the matrix of the one before leaves itself times the ratio of the two: the last one where that is
+# below LEFT, relative to the state, or where corrections of less than SMALL no longer fall, which is rounding
+LEFT, SMALL = 1e-16, 1e-8
 ROUNDING = 1e-14
 
 
@@ -95,6 +96,9 @@ class LinearisedState(SteadyState):
             ) from error
 
 
+@np.errstate(
+    over="ignore", invalid="ignore"
+)  # what is not finite shortens a step, or ends the solve with a reason
 def damped_newton(
     residual: Callable[[FloatArray], FloatArray],
     linearised: Callable[[FloatArray], Solve],
@@ -146,8 +150,7 @@ def damped_newton(
             if np.isfinite(r).all():
                 correction = solve(r)
                 left = _norm(correction)
-                # the second half: nothing but rounding is left of the correction
-                if left <= (1.0 - 0.25 * t) * size or left <= 100 * ROUNDING * scale:
+                if left <= (1.0 - 0.25 * t) * size or max(left, size) <= SMALL * scale:
                     break
             t *= 0.5
         else:
@@ -156,8 +159,11 @@ def damped_newton(
                 "none for this load, or its derivative is wrong"
             )
         y = trial
-        if t == 1.0 and left * left <= LEFT * _norm(y) * size:
+        scale = _norm(y)
+        if t == 1.0 and left * left <= LEFT * scale * size:
             return y + correction
+        if t == 1.0 and left <= SMALL * scale and left > 0.1 * size:
+            return y
     raise StateSolveError(f"{MAX_STEPS} Newton steps did not solve the state equation{where}")
 
 
@@ -202,7 +208,7 @@ class Reaction:
 
 
 def _at(function: Any, name: str, y: FloatArray) -> FloatArray:
-    with np.errstate(all="ignore"):  # what is not finite shortens a step, or ends it with a reason
+    with np.errstate(all="ignore"):
         value = np.asarray(function(y.copy()), dtype=np.float64)
     if value.shape not in ((), y.shape):
         raise InputError(f"{name}(y) has shape {value.shape}, expected {y.shape}")

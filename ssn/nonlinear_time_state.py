@@ -126,8 +126,8 @@ class NonlinearTimeState(TimeGrid):
 
                     y = damped_newton(residual, solver, y, f" at t = {t:.6g}")
                 return y
-            except StateSolveError as again:
-                error = again
+            except StateSolveError:
+                continue
         raise error
 
     def residual(self, y: FloatArray, load: FloatArray) -> FloatArray:
@@ -429,7 +429,7 @@ class OrdinaryDifferentialSystem(NonlinearTimeState):
         return np.eye(self.points)
 
     def _called(self, function: Any, name: str, shape: tuple[int, ...], *arguments: Any) -> FloatArray:
-        with np.errstate(all="ignore"):  # what is not finite shortens a step, or ends it with a reason
+        with np.errstate(all="ignore"):
             value = np.asarray(function(*arguments), dtype=np.float64)
         if value.shape != shape:
             raise InputError(f"{name} has shape {value.shape} at t = {arguments[0]:.6g}, expected {shape}")

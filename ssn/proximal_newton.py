@@ -50,6 +50,8 @@ DESCENT = 1e-3
 ROUNDING = 1e-13
 # products with the Hessian that look for negative curvature at the end
 CURVATURE_STEPS = 15
+# and at the solution of each full model
+MODEL_CURVATURE_STEPS = 5
 
 
 @dataclass(frozen=True)
@@ -190,7 +192,7 @@ class ProximalNewtonSolver:
             return Direction(None, np.inf, 0, "singular", str(error))
         if result.best.data is None:
             return Direction(None, np.inf, len(result.steps), "singular", result.message)
-        return _direction(at, result.best.data.corrected, result.best.accuracy, len(result.steps), tolerance)
+        return _direction(at, result.best.data.control, result.best.accuracy, len(result.steps), tolerance)
 
     def full(self, at: Evaluation, tolerance: float) -> Direction:
         """Through the normal map of the model with the full Hessian; none where it is not to be trusted."""
@@ -209,11 +211,13 @@ class ProximalNewtonSolver:
             return Direction(
                 None, np.inf, inner, "singular", f"the full model was not solved ({result.outcome.value})"
             )
-        direction = _direction(at, result.best.data.corrected, result.best.accuracy, inner, tolerance)
+        direction = _direction(at, result.best.data.control, result.best.accuracy, inner, tolerance)
         assert direction.vector is not None
         length = equation.inner.norm(direction.vector)
         slope = equation.slope(at, at.x + direction.vector)
         noise = ROUNDING * abs(at.data.objective)
+        if least_curvature(normal, result.best, MODEL_CURVATURE_STEPS) < 0.0:
+            return Direction(None, np.inf, inner, "singular", "the full model has negative curvature here")
         if slope > -DESCENT * equation.alpha * length**2 + noise:
             return Direction(None, np.inf, inner, "singular", "the full model is not convex enough here")
         return direction
@@ -224,6 +228,8 @@ def _inner_tolerance(accuracy: float, forcing: float) -> float:
     return max(min(1e-3, forcing * accuracy), 1e-13)
 
 
+# The control of an inner solve, not prox of its gradient: the accuracy was measured there, and what is left of the
+# residual is multiplied by ||T||/alpha in the other.
 def _direction(at: Evaluation, u: FloatArray, left: float, inner: int, tolerance: float) -> Direction:
     return Direction(u - at.x, left, inner, "solved" if left <= tolerance else "inaccurate")
 
