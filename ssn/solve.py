@@ -58,7 +58,8 @@ def solve(
 
     Parameters
     ----------
-    problem : ControlProblem, CompositeProblem, ComplementarityProblem, function, or object with the Equation protocol
+    problem : a statement, function, or object with the Equation protocol
+        ControlProblem, NonlinearControlProblem, CompositeProblem, ComplementarityProblem, SumProblem.
         A plain function of NumPy arrays (or of a tuple or dict of arrays, like `start`) is traced: its Newton
         derivative and active sets follow from its operations.
     start : array, optional
@@ -71,7 +72,7 @@ def solve(
     max_steps : int
         Newton steps at most, over a whole path.
     globalization : {"auto", "full", "dual", "residual", "envelope", "smoothing"} or a Globalization
-        "auto": dual search where the problem has a dual equation, envelope search for other composite problems,
+        "auto": dual search where the problem has a dual equation, a search on the objective where the state is nonlinear, envelope search for other composite problems,
         residual search and smoothing path for complementarity, residual search otherwise. What was decided, and why,
         stands in ``Solution.choices``.
     linear : {"auto", "subspace", "coupled", "reduced", "general", "full space", "augmented"}
