@@ -450,7 +450,9 @@ class OrdinaryDifferentialSystem(NonlinearTimeState):
     def step_solver(self, t: float, y: FloatArray, scale: float) -> Solve:
         """The function that solves with I - scale times the Jacobian."""
         matrix = self._eye - scale * self.jacobian(t, y)
-        inverse: FloatArray = np.linalg.inv(matrix)  # small, and used a few times
+        inverse: FloatArray = np.asarray(
+            np.linalg.inv(matrix), dtype=np.float64
+        )  # small, and used a few times
         return lambda r: inverse @ r
 
     def linearize(self, y: FloatArray) -> StateModel:

@@ -72,7 +72,8 @@ def solve(
     max_steps : int
         Newton steps at most, over a whole path.
     globalization : {"auto", "full", "dual", "residual", "envelope", "smoothing"} or a Globalization
-        "auto": dual search where the problem has a dual equation, a search on the objective where the state is nonlinear, envelope search for other composite problems,
+        "auto": dual search where the problem has a dual equation, a search on the objective where the state is
+        nonlinear, envelope search for other composite problems,
         residual search and smoothing path for complementarity, residual search otherwise. What was decided, and why,
         stands in ``Solution.choices``.
     linear : {"auto", "subspace", "coupled", "reduced", "general", "full space", "augmented"}
