@@ -105,7 +105,7 @@ class TimeGrid:
             else _explicit_matrix(amplitudes, "amplitudes", self.steps)
         )
         time = sp.csr_array(sp.diags_array(self.step_sizes) @ T)
-        if callable(shapes):
+        if callable(shapes) and not isinstance(shapes, LinearOperator):
             at = [
                 sp.csr_array(_explicit_matrix(shapes(t), f"shapes({t:.6g})", self.points))
                 for t in self.times.tolist()
