@@ -23,9 +23,9 @@ from .moreau_yosida import collect
 from .newton import Limits, LoopResult
 from .prepare import Plan
 from .protocols import FloatArray
-from .second_order import lowest_curvature
 from .proximal_newton import ControlEquation
 from .proximal_newton import collect as collect_nonlinear
+from .second_order import lowest_curvature
 from .solution import Solution
 from .status import Outcome
 

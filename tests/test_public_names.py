@@ -19,7 +19,8 @@ PUBLIC = {
         PositiveSemidefiniteCone PowerCost ProblemFileError Product Quadratic QuantileLoss ResidualSearch ScaledCost
         SecondOrderCone SemilinearState Simplex SmoothMap SmoothPart Solution SolveInterrupted SparseCost StateModel
         StateSolveError SteadyState StepRecord StopSolve SumProblem SumWithQuadratic SwitchingCost Term
-        TimeDependentSemilinearState TimeDependentState TracedEquation TranslatedCost WorkCounts costs custom_operation declare_continuous follow follow_meshes placements
+        TimeDependentSemilinearState TimeDependentState TracedEquation TranslatedCost WorkCounts costs
+        custom_operation declare_continuous follow follow_meshes placements
         primal_dual proximal_gradient refit solve solve_many vanishing_weight weight_path
     """,
     "ssn.evidence": """

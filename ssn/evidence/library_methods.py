@@ -38,7 +38,8 @@ def library_methods(problem: Any) -> dict[str, Callable[..., LibraryResult]]:
         found["L-BFGS-B"] = lbfgsb
     if not isinstance(cost, SparseCost) or not stated:
         return found
-    if not getattr(problem, "state_bounded", False):
+    hard_bounds = getattr(problem, "state_bounded", False) and problem.state_penalty is None
+    if not hard_bounds:
         found["L-BFGS-B"] = lbfgsb
     if quadratic_program(problem) is not None and _installed("clarabel"):
         found["interior point"] = interior_point

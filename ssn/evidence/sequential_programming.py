@@ -36,6 +36,8 @@ def applies(problem: Any) -> bool:
     if not isinstance(problem, NonlinearControlProblem) or not isinstance(problem.state, SemilinearState):
         return False
     explicit = not any(isinstance(operator, LinearOperator) for operator in operators)
+    if problem.state_bounded and problem.state_penalty is not None:
+        return False  # the bounds are hard here
     return explicit and problem.state.size + 2 * problem.unknowns <= LARGEST
 
 
