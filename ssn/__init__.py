@@ -33,10 +33,21 @@ from .costs import (
     SwitchingCost,
     TranslatedCost,
 )
-from .errors import InputError, MissingExtraError, NotConverged, ProblemFileError, SolveInterrupted, StopSolve
+from .errors import (
+    InputError,
+    MissingExtraError,
+    NotConverged,
+    ProblemFileError,
+    SolveInterrupted,
+    StateSolveError,
+    StopSolve,
+)
 from .follow import follow, follow_meshes
 from .globalization import DualSearch, EnvelopeSearch, FullStep, ResidualSearch
 from .iteration import Iteration
+from .nonlinear_control import NonlinearControlProblem
+from .nonlinear_states import NonlinearStateModel, SemilinearState
+from .nonlinear_time_state import OrdinaryDifferentialSystem, TimeDependentSemilinearState
 from .pieces import Pieces
 from .primal_dual import primal_dual
 from .protocols import Cost, Equation, Linearization, SmoothPart
@@ -85,7 +96,10 @@ __all__ = [
     "Logistic",
     "MissingExtraError",
     "MultiBangCost",
+    "NonlinearControlProblem",
+    "NonlinearStateModel",
     "NotConverged",
+    "OrdinaryDifferentialSystem",
     "Outcome",
     "Pieces",
     "PiecewiseQuadraticCost",
@@ -99,6 +113,7 @@ __all__ = [
     "ResidualSearch",
     "ScaledCost",
     "SecondOrderCone",
+    "SemilinearState",
     "Simplex",
     "SmoothMap",
     "SmoothPart",
@@ -106,6 +121,7 @@ __all__ = [
     "SolveInterrupted",
     "SparseCost",
     "StateModel",
+    "StateSolveError",
     "SteadyState",
     "StepRecord",
     "StopSolve",
@@ -113,6 +129,7 @@ __all__ = [
     "SumWithQuadratic",
     "SwitchingCost",
     "Term",
+    "TimeDependentSemilinearState",
     "TimeDependentState",
     "TracedEquation",
     "TranslatedCost",

@@ -22,7 +22,156 @@ from .work import WorkCounts
 FloatArray = npt.NDArray[np.float64]
 
 
-class ControlProblem:
+class ControlStatement:
+    """What statements of optimal control have in common, whatever their state equation: operators, masses, bounds."""
+
+    def check_state(self, state: Any) -> None:
+        """Raise `InputError` for something that is no state model of this statement."""
+        raise NotImplementedError
+
+    def check_statement(self) -> None:
+        """Raise `InputError` for what does not fit once all arguments are there."""
+
+    def __init__(
+        self,
+        *,
+        state: Any,
+        target: Any,
+        cost: Cost,
+        control_weight: float,
+        control_operator: Any = None,
+        observation: Any = None,
+        source: Any = None,
+        state_mass: Any = None,
+        control_mass: Any = None,
+        observation_mass: Any = None,
+        state_lower: Any = None,
+        state_upper: Any = None,
+        state_tolerance: float | None = None,
+    ) -> None:
+        self.check_state(state)
+        self.state = state
+        size = state.size
+        self.alpha = scalar(control_weight, "control_weight", nonnegative=True)
+        mass = _mass(state_mass, "state_mass", size)
+        if control_operator is None:
+            if mass is None:
+                raise InputError("give control_operator (B), or state_mass for a distributed control")
+            self.control_operator: Any = (
+                sp.csr_array(sp.diags_array(mass)) if isinstance(mass, np.ndarray) else mass
+            )
+        else:
+            self.control_operator = as_matrix(control_operator, "control_operator", shape=(size, None))
+        n = int(self.control_operator.shape[1])
+        self.observation = (
+            None if observation is None else as_matrix(observation, "observation", shape=(None, size))
+        )
+        m = size if self.observation is None else int(self.observation.shape[0])
+        self._bound_the_state(state_lower, state_upper, state_tolerance, mass)
+        used = control_operator is None or self.state_bounded
+        weight = _mass(observation_mass, "observation_mass", m)
+        if weight is None and self.observation is None and mass is not None:
+            weight, used = mass, True
+        if mass is not None and not used:
+            raise InputError(
+                "state_mass has no effect here: the control operator and the observation mass are given otherwise"
+            )
+        self.observations = InnerProduct(np.ones(m) if weight is None else weight, "observation_mass")
+        self.weights = weight_array(control_mass, "control_mass", n)
+        self.controls = InnerProduct(self.weights)
+        self.target = float_array(target, "target", shape=(m,))
+        self.source = None if source is None else float_array(source, "source", shape=(size,))
+        if not isinstance(cost, Cost):
+            raise InputError(f"cost must have the members of ssn.Cost, got {type(cost).__name__}")
+        cost.check_size(n)
+        if hasattr(cost, "check_weights"):
+            cost.check_weights(self.weights)
+        self.cost = cost
+        self.unknowns = n
+        self.work = WorkCounts()
+        state.attach(self.work)
+        self.check_statement()
+
+    def _bound_the_state(self, lower: Any, upper: Any, tolerance: float | None, mass: Any) -> None:
+        size = self.state.size
+        self.state_bounded = lower is not None or upper is not None
+        self.state_penalty: float | None = None
+        if not self.state_bounded:
+            if tolerance is not None:
+                raise InputError("state_tolerance has no effect without state_lower or state_upper")
+            return
+        low, high = bound_arrays(
+            -np.inf if lower is None else lower,
+            np.inf if upper is None else upper,
+            names=("state_lower", "state_upper"),
+        )
+        for name, array in (("state_lower", low), ("state_upper", high)):
+            if array.shape not in ((), (size,)):
+                raise InputError(f"{name} has shape {array.shape}, expected a number or ({size},)")
+        self.state_lower, self.state_upper = np.broadcast_to(low, size), np.broadcast_to(high, size)
+        both = np.concatenate([low.ravel(), high.ravel()])
+        largest = float(np.abs(both[np.isfinite(both)]).max(initial=0.0))
+        self.state_tolerance = (
+            1e-6 * (largest or 1.0)
+            if tolerance is None
+            else scalar(tolerance, "state_tolerance", positive=True)
+        )
+        if self.alpha == 0.0:
+            raise InputError("state bounds need control_weight > 0: the penalty path stands on it")
+        lumped = np.ones(size) if mass is None else mass
+        if not isinstance(lumped, np.ndarray) or lumped.ndim == 2:
+            lumped = np.asarray(lumped.sum(axis=1)).ravel()
+        if not (lumped > 0).all():
+            raise InputError(
+                f"state bounds need a state_mass with positive row sums; row {int(np.argmax(lumped <= 0))} has not"
+            )
+        self.bound_mass: FloatArray = lumped
+
+    def penalised(self, gamma: float) -> Self:
+        """The same problem with its state bounds replaced by their penalty gamma > 0; see the notes of the class."""
+        if not self.state_bounded:
+            raise InputError("penalised needs state_lower or state_upper")
+        other = copy.copy(self)
+        other.state_penalty = scalar(gamma, "gamma", positive=True)
+        return other
+
+    def unbounded(self) -> Self:
+        """The same problem without its state bounds."""
+        other = copy.copy(self)
+        other.state_bounded, other.state_penalty = False, None
+        return other
+
+    def with_cost(self, cost: Cost) -> Self:
+        """Return the same problem with another cost; operators, factors and work counters are shared."""
+        if not isinstance(cost, Cost):
+            raise InputError(f"cost must have the members of ssn.Cost, got {type(cost).__name__}")
+        cost.check_size(self.unknowns)
+        other = copy.copy(self)
+        other.cost = cost
+        return other
+
+    def observe(self, y: FloatArray) -> FloatArray:
+        """C y."""
+        if self.observation is None:
+            return y
+        self.work.operator_products += 1
+        return product(self.observation, y)
+
+    def pull_back(self, p: FloatArray) -> FloatArray:
+        """Wu^-1 B' p."""
+        self.work.operator_products += 1
+        return transpose_product(self.control_operator, p) / self.weights
+
+    def _penalised_value(self, u: FloatArray, y: FloatArray, misfit: FloatArray) -> float:
+        above, below = np.maximum(y - self.state_upper, 0.0), np.maximum(self.state_lower - y, 0.0)
+        value = 0.5 * self.observations.dot(misfit, misfit) + 0.5 * self.alpha * self.controls.dot(u, u)
+        if self.state_penalty is None:
+            violation = max(above.max(), below.max())
+            return value if violation <= self.state_tolerance else float("inf")
+        return value + 0.5 * self.state_penalty * float(self.bound_mass @ (above * above + below * below))
+
+
+class ControlProblem(ControlStatement):
     """minimise 1/2 ||C y - z||^2_Wy + alpha/2 ||u||^2_Wu + g(u) subject to E y = B u + f, and bounds of the state.
 
     Parameters
@@ -81,121 +230,20 @@ class ControlProblem:
     violated by more than `state_tolerance`) and no gradient.
     """
 
-    def __init__(
-        self,
-        *,
-        state: StateModel,
-        target: Any,
-        cost: Cost,
-        control_weight: float,
-        control_operator: Any = None,
-        observation: Any = None,
-        source: Any = None,
-        state_mass: Any = None,
-        control_mass: Any = None,
-        observation_mass: Any = None,
-        state_lower: Any = None,
-        state_upper: Any = None,
-        state_tolerance: float | None = None,
-    ) -> None:
+    _offset: FloatArray | None = None
+    _curvature: float | None = None
+
+    def check_state(self, state: Any) -> None:
+        """Raise `InputError` for something that is no linear state model."""
         if not isinstance(state, StateModel):
+            hint = (
+                ": a nonlinear one belongs into NonlinearControlProblem"
+                if hasattr(state, "linearize")
+                else ""
+            )
             raise InputError(
-                f"state must be a state model such as SteadyState(E), got {type(state).__name__}"
+                f"state must be a state model such as SteadyState(E), got {type(state).__name__}{hint}"
             )
-        self.state = state
-        size = state.size
-        self.alpha = scalar(control_weight, "control_weight", nonnegative=True)
-        mass = _mass(state_mass, "state_mass", size)
-        if control_operator is None:
-            if mass is None:
-                raise InputError("give control_operator (B), or state_mass for a distributed control")
-            self.control_operator: Any = (
-                sp.csr_array(sp.diags_array(mass)) if isinstance(mass, np.ndarray) else mass
-            )
-        else:
-            self.control_operator = as_matrix(control_operator, "control_operator", shape=(size, None))
-        n = int(self.control_operator.shape[1])
-        self.observation = (
-            None if observation is None else as_matrix(observation, "observation", shape=(None, size))
-        )
-        m = size if self.observation is None else int(self.observation.shape[0])
-        self._bound_the_state(state_lower, state_upper, state_tolerance, mass)
-        used = control_operator is None or self.state_bounded
-        weight = _mass(observation_mass, "observation_mass", m)
-        if weight is None and self.observation is None and mass is not None:
-            weight, used = mass, True
-        if mass is not None and not used:
-            raise InputError(
-                "state_mass has no effect here: the control operator and the observation mass are given otherwise"
-            )
-        self.observations = InnerProduct(np.ones(m) if weight is None else weight, "observation_mass")
-        self.weights = weight_array(control_mass, "control_mass", n)
-        self.controls = InnerProduct(self.weights)
-        self.target = float_array(target, "target", shape=(m,))
-        self.source = None if source is None else float_array(source, "source", shape=(size,))
-        if not isinstance(cost, Cost):
-            raise InputError(f"cost must have the members of ssn.Cost, got {type(cost).__name__}")
-        cost.check_size(n)
-        if hasattr(cost, "check_weights"):
-            cost.check_weights(self.weights)
-        self.cost = cost
-        self.unknowns = n
-        self.work = WorkCounts()
-        state.attach(self.work)
-        self._offset: FloatArray | None = None
-        self._curvature: float | None = None
-
-    def _bound_the_state(self, lower: Any, upper: Any, tolerance: float | None, mass: Any) -> None:
-        size = self.state.size
-        self.state_bounded = lower is not None or upper is not None
-        self.state_penalty: float | None = None
-        if not self.state_bounded:
-            if tolerance is not None:
-                raise InputError("state_tolerance has no effect without state_lower or state_upper")
-            return
-        low, high = bound_arrays(
-            -np.inf if lower is None else lower,
-            np.inf if upper is None else upper,
-            names=("state_lower", "state_upper"),
-        )
-        for name, array in (("state_lower", low), ("state_upper", high)):
-            if array.shape not in ((), (size,)):
-                raise InputError(f"{name} has shape {array.shape}, expected a number or ({size},)")
-        self.state_lower, self.state_upper = np.broadcast_to(low, size), np.broadcast_to(high, size)
-        both = np.concatenate([low.ravel(), high.ravel()])
-        largest = float(np.abs(both[np.isfinite(both)]).max(initial=0.0))
-        self.state_tolerance = (
-            1e-6 * (largest or 1.0)
-            if tolerance is None
-            else scalar(tolerance, "state_tolerance", positive=True)
-        )
-        if self.alpha == 0.0:
-            raise InputError("state bounds need control_weight > 0: the penalty path stands on it")
-        lumped = np.ones(size) if mass is None else mass
-        if not isinstance(lumped, np.ndarray) or lumped.ndim == 2:
-            lumped = np.asarray(lumped.sum(axis=1)).ravel()
-        if not (lumped > 0).all():
-            raise InputError(
-                f"state bounds need a state_mass with positive row sums; row {int(np.argmax(lumped <= 0))} has not"
-            )
-        self.bound_mass: FloatArray = lumped
-
-    def penalised(self, gamma: float) -> ControlProblem:
-        """The same problem with its state bounds replaced by their penalty gamma > 0; see the notes of the class."""
-        if not self.state_bounded:
-            raise InputError("penalised needs state_lower or state_upper")
-        other = copy.copy(self)
-        other.state_penalty = scalar(gamma, "gamma", positive=True)
-        return other
-
-    def with_cost(self, cost: Cost) -> Self:
-        """Return the same problem with another cost; operators, factors and work counters are shared."""
-        if not isinstance(cost, Cost):
-            raise InputError(f"cost must have the members of ssn.Cost, got {type(cost).__name__}")
-        cost.check_size(self.unknowns)
-        other = copy.copy(self)
-        other.cost = cost
-        return other
 
     @property
     def affine(self) -> bool:
@@ -219,13 +267,6 @@ class ControlProblem:
         self.work.operator_products += 1
         return self.state.solve(product(self.control_operator, u))
 
-    def observe(self, y: FloatArray) -> FloatArray:
-        """C y."""
-        if self.observation is None:
-            return y
-        self.work.operator_products += 1
-        return product(self.observation, y)
-
     def offset(self) -> FloatArray:
         """E^-1 f, the state of the zero control; solved for once."""
         if self._offset is None:
@@ -239,11 +280,6 @@ class ControlProblem:
             self.work.operator_products += 1
             weighted = transpose_product(self.observation, weighted)
         return self.state.adjoint_solve(weighted)
-
-    def pull_back(self, p: FloatArray) -> FloatArray:
-        """Wu^-1 B' p."""
-        self.work.operator_products += 1
-        return transpose_product(self.control_operator, p) / self.weights
 
     def forward(self, u: FloatArray) -> FloatArray:
         """S u; one state solve."""
@@ -274,14 +310,6 @@ class ControlProblem:
             load = load + self.source
         y = self.state.solve(load)
         return y + self.state.solve(self.state.residual(y, load))
-
-    def _penalised_value(self, u: FloatArray, y: FloatArray, misfit: FloatArray) -> float:
-        above, below = np.maximum(y - self.state_upper, 0.0), np.maximum(self.state_lower - y, 0.0)
-        value = 0.5 * self.observations.dot(misfit, misfit) + 0.5 * self.alpha * self.controls.dot(u, u)
-        if self.state_penalty is None:
-            violation = max(above.max(), below.max())
-            return value if violation <= self.state_tolerance else float("inf")
-        return value + 0.5 * self.state_penalty * float(self.bound_mass @ (above * above + below * below))
 
     def _penalised_smooth(self, u: FloatArray) -> tuple[float, FloatArray]:
         if self.state_penalty is None:

@@ -39,5 +39,9 @@ class SolveInterrupted(KeyboardInterrupt):
         self.solution = solution
 
 
+class StateSolveError(RuntimeError):
+    """A nonlinear state equation was not solved; the message says where and why."""
+
+
 class StopSolve(Exception):
     """Raise it in a callback to stop a solve; the solve then returns its best iterate."""

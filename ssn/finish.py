@@ -25,6 +25,8 @@ from .newton import Limits, LoopResult
 from .prepare import Plan
 from .primal_dual_path import PrimalDualResult
 from .protocols import FloatArray
+from .proximal_newton import ControlEquation
+from .proximal_newton import collect as collect_nonlinear
 from .second_order import lowest_curvature
 from .solution import Solution
 from .status import Outcome
@@ -52,6 +54,8 @@ def finish(plan: Plan, result: LoopResult, limits: Limits, before: Any) -> Solut
         fields["doubt"] = _gap_doubt(fields)
     elif isinstance(plan.problem, ControlProblem):
         x, accuracy, fields = _finish_local_control(plan.problem, result)
+    elif isinstance(plan.equation, ControlEquation):
+        x, accuracy, fields = collect_nonlinear(plan.equation, best)
     elif isinstance(plan.problem, CompositeProblem):
         x, accuracy, fields = _finish_composite(plan, result)
     elif isinstance(plan.problem, ComplementarityProblem):
@@ -66,6 +70,10 @@ def finish(plan: Plan, result: LoopResult, limits: Limits, before: Any) -> Solut
     if outcome is Outcome.CONVERGED and not accuracy <= limits.tolerance:
         outcome = Outcome.INACCURATE
         message = f"accuracy {accuracy:.1e} when computed afresh, {best.accuracy:.1e} in the iteration"
+    if isinstance(plan.equation, ControlEquation):
+        plan.choices["states"] = f"{plan.equation.states} nonlinear state solves"
+        if outcome is Outcome.NOT_FINITE and plan.equation.failure:
+            outcome, message = Outcome.NO_STATE, plan.equation.failure
     doubt = fields.pop("doubt", None)
     if outcome is Outcome.CONVERGED and doubt is not None:
         outcome, message = doubt

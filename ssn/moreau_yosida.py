@@ -22,11 +22,13 @@ import numpy as np
 
 from .equations.dual import DualEquation
 from .equations.full_space import DualFullSpaceEquation, FullSpaceEquation
+from .errors import StateSolveError
 from .globalization import DualSearch
 from .inner import relative
 from .linear import FullSpaceSolver, SubspaceSolver
 from .newton import Limits, LoopResult, run
 from .protocols import Evaluation, FloatArray, Globalization
+from .proximal_newton import ControlEquation, ObjectiveSearch, ProximalNewtonSolver
 from .records import Certificate, StepRecord
 from .status import Outcome
 
@@ -34,6 +36,8 @@ from .status import Outcome
 ROUNDING = 4.0
 # a violation that falls less than by this factor at two points running, while the penalty rises, is no longer falling
 FALLING = 0.9
+# relative difference of two states of one control that no rounding explains
+SAME_STATE = 1e-6
 
 
 @dataclass(frozen=True)
@@ -102,11 +106,14 @@ def follow_penalty(
     fixed: float | None = problem.state_penalty
     solver = FullSpaceSolver(equation)
     growth, stale, failed = path.growth, 0, 0
-    first = _without_bounds(problem, start, limits, path, callback)
+    without = _without_bounds_nonlinear if hasattr(problem.state, "linearize") else _without_bounds
+    first, control = without(problem, start, limits, path, callback)
     steps = first.steps
     kind = DualFullSpaceEquation if make_search().name == "dual" else FullSpaceEquation
     base: FullSpaceEquation = kind(problem, 0.0)
-    at = base.evaluate(base.start(first.best.data.corrected if first.best.data is not None else start))
+    if first.outcome is Outcome.NO_STATE:
+        return PenaltyResult(first, base, limits.tolerance)
+    at = base.evaluate(base.start(control))
     result = PenaltyResult(replace(first, best=at, last=at), base, limits.tolerance)
     if first.outcome is not Outcome.CONVERGED:
         return result
@@ -192,14 +199,34 @@ def _without_bounds(
     limits: Limits,
     path: PenaltyPath,
     callback: Callable[[StepRecord], None] | None,
-) -> LoopResult:
-    """Solve the problem without its state bounds, roughly."""
+) -> tuple[LoopResult, FloatArray | None]:
+    """Solve the problem without its state bounds, roughly; the loop result and the control found."""
     equation = DualEquation(problem, problem.reduced_target(), problem.alpha, problem.cost)
     rough = replace(limits, tolerance=max(path.point_tolerance, limits.tolerance))
-    return run(
+    result = run(
         equation, SubspaceSolver(equation), DualSearch(), equation.start(control), rough,
         callback=callback, stage="penalty 0",
     )  # fmt: skip
+    return result, result.best.data.corrected if result.best.data is not None else control
+
+
+def _without_bounds_nonlinear(
+    problem: Any,
+    control: FloatArray | None,
+    limits: Limits,
+    path: PenaltyPath,
+    callback: Callable[[StepRecord], None] | None,
+) -> tuple[LoopResult, FloatArray | None]:
+    """The same for a nonlinear state, by proximal Newton steps."""
+    equation = ControlEquation(problem.unbounded())
+    solver = ProximalNewtonSolver(equation)
+    u = equation.cost.prox(np.zeros(problem.unknowns) if control is None else control, 1e-300)
+    rough = replace(limits, tolerance=max(path.point_tolerance, limits.tolerance))
+    search = ObjectiveSearch(lambda at: solver.gauss_newton(at, 1e-6))
+    result = run(equation, solver, search, u, rough, callback=callback, stage="penalty 0")
+    if result.outcome is Outcome.NOT_FINITE and equation.failure:
+        result.outcome, result.message = Outcome.NO_STATE, equation.failure
+    return result, result.best.x
 
 
 def _next_growth(growth: float, taken: int, path: PenaltyPath) -> float:
@@ -257,6 +284,8 @@ def collect(equation: FullSpaceEquation, best: Evaluation) -> tuple[FloatArray, 
     """Control, accuracy computed afresh, and the fields of `Solution` at an iterate of the equation."""
     problem, n, step = equation.problem, equation.size, 1.0 / equation.alpha
     equation = FullSpaceEquation(problem, equation.gamma)
+    if best.x.size != 2 * n:  # the path ended before it began
+        return best.x, float("inf"), {}
     at = equation.evaluate(best.x.copy())
     if at.data is None:
         return np.zeros(problem.unknowns), float("inf"), {}
@@ -271,7 +300,7 @@ def collect(equation: FullSpaceEquation, best: Evaluation) -> tuple[FloatArray, 
         u, u
     )
     margins = equation.cost.margins(at.data.v, step)
-    return u, at.accuracy, {
+    fields: dict[str, Any] = {
         "pieces": at.pieces,
         "margins": margins,
         "multipliers": {
@@ -286,3 +315,18 @@ def collect(equation: FullSpaceEquation, best: Evaluation) -> tuple[FloatArray, 
         "adjoint": p,
         "violation": equation.violation(y),
     }  # fmt: skip
+    if equation.nonlinear:
+        fields["certificate"] = None
+        fields["doubt"] = _other_state(problem, u, y)
+    return u, at.accuracy, fields
+
+
+def _other_state(problem: Any, u: FloatArray, y: FloatArray) -> tuple[Outcome, str] | None:
+    """Whether the state equation, solved from its own start, leads to another state than the path."""
+    try:
+        gap = float(np.abs(problem.state_of(u) - y).max(initial=0.0))
+    except StateSolveError as error:
+        return Outcome.INACCURATE, f"the state equation was not solved for the control found: {error}"
+    if gap <= SAME_STATE * float(np.abs(y).max(initial=0.0)):
+        return None
+    return Outcome.INACCURATE, f"the state solve leads to another state of the control found, {gap:.1e} away"

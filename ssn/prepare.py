@@ -27,7 +27,7 @@ from .equations.full_space import FullSpaceEquation, has_dual
 from .equations.general import GeneralEquation
 from .equations.natural import NaturalEquation
 from .equations.primal_dual import PrimalDualEquation
-from .errors import InputError
+from .errors import InputError, StateSolveError
 from .gap_path import GapPath
 from .globalization import CATALOGUE, DualSearch, EnvelopeSearch, ResidualSearch
 from .inner import relative
@@ -45,9 +45,11 @@ from .linear.augmented import explicit_complement
 from .linear.coupled import refusal
 from .linear.primal_dual import WIDE_ROW
 from .moreau_yosida import PenaltyPath, first_penalty
+from .nonlinear_control import NonlinearControlProblem
 from .norm_terms import NORM, OTHER, QUADRATIC, NormRows
 from .primal_dual_path import PrimalDualPath, first_gammas
 from .protocols import FloatArray, Globalization, LinearSolver
+from .proximal_newton import ControlEquation, ObjectiveSearch, ProximalNewtonSolver
 from .proximal_point import ProximalPointPath
 from .smooth import LeastSquares
 from .smoothing_path import SmoothingPath
@@ -109,6 +111,8 @@ def prepare(
         raise InputError(f"globalization must be 'auto', {names} or 'smoothing', got {globalization!r}")
     if isinstance(problem, ControlProblem):
         plan = _prepare_control(problem, start, globalization, linear)
+    elif isinstance(problem, NonlinearControlProblem):
+        plan = _prepare_nonlinear(problem, start)
     elif isinstance(problem, CompositeProblem):
         plan = _prepare_composite(problem, start, globalization)
     elif isinstance(problem, SumProblem):
@@ -125,12 +129,16 @@ def prepare(
         plan.unpack = traced.unpack
     else:
         raise InputError(
-            f"cannot solve a {type(problem).__name__}: give a ControlProblem, CompositeProblem, "
-            "ComplementarityProblem, "
+            f"cannot solve a {type(problem).__name__}: give a ControlProblem, NonlinearControlProblem, "
+            "CompositeProblem, ComplementarityProblem, "
             "a function of NumPy arrays, or an object with residual(x) and linearize(x)"
         )
     if linear not in ("auto", plan.solver.name):
         raise InputError(f"linear={linear!r} does not fit this problem; it is solved by {plan.solver.name!r}")
+    if isinstance(plan.equation, ControlEquation) and globalization != "auto":
+        raise InputError(
+            f"globalization={globalization!r} does not fit a nonlinear state; use 'auto': a search on the objective"
+        )
     several = plan.multipliers is not None or plan.primal_dual is not None
     if several and globalization not in ("auto", "dual"):
         raise InputError(f"globalization={globalization!r} does not fit several terms; use 'auto'")
@@ -305,8 +313,10 @@ def _path_without_quadratic(problem: ControlProblem) -> GapPath | ProximalPointP
     return GapPath() if problem.has_gap else ProximalPointPath()
 
 
-def _prepare_state_bounds(problem: ControlProblem, control: FloatArray | None) -> Plan:
-    if getattr(problem.state, "matrix", None) is None:
+def _prepare_state_bounds(
+    problem: ControlProblem | NonlinearControlProblem, control: FloatArray | None
+) -> Plan:
+    if getattr(problem.state, "matrix", None) is None and not hasattr(problem.state, "derivative_matrix"):
         raise InputError(
             f"state bounds need the explicit matrix of the state equation, which {type(problem.state).__name__} hides"
         )
@@ -320,18 +330,38 @@ def _prepare_state_bounds(problem: ControlProblem, control: FloatArray | None) -
         raise InputError(f"state bounds need a separable cost; {type(problem.cost).__name__} is not")
     gamma = problem.state_penalty if problem.state_penalty is not None else first_penalty(problem)
     equation = FullSpaceEquation(problem, gamma)
+    first = "proximal Newton" if equation.nonlinear else "dual search"
     choices = {
         "equation": "state and adjoint, control eliminated, state bounds penalised",
         "globalization": "residual search, and dual search behind it: the dual function of each point is convex"
         if has_dual(problem)
         else "residual search at each point of the path, which goes back where it fails",
         "linear": "full space: one sparse factorisation a step, pattern kept",
-        "path": "Moreau-Yosida: the penalty rises from 0 (dual search) by a model of the value function",
+        "path": f"Moreau-Yosida: the penalty rises from 0 ({first}) by a model of the value function",
     }
     search = ResidualSearch().fresh()
     path = PenaltyPath(control, quick_steps=QUICK if has_dual(problem) else 0)
-    x = equation.start(control)
+    try:
+        x = equation.start(control)
+    except StateSolveError:
+        x = np.zeros(2 * equation.size)  # the path says why it cannot begin
     return Plan(problem, equation, FullSpaceSolver(equation), search, x, choices, penalty=path)
+
+
+def _prepare_nonlinear(problem: NonlinearControlProblem, start: Any) -> Plan:
+    control = _start_array(start, problem.unknowns)
+    if problem.state_bounded:
+        return _prepare_state_bounds(problem, control)
+    equation = ControlEquation(problem)
+    solver = ProximalNewtonSolver(equation)
+    choices = {
+        "equation": "u = prox(B* p / alpha) with the state and adjoint of u",
+        "globalization": "objective: every step lowers it; steps to where there is no state are shortened",
+        "linear": "proximal Newton: Gauss-Newton models by their dual equation, then the full Hessian by GMRES",
+    }
+    x = problem.cost.prox(np.zeros(problem.unknowns) if control is None else control, 1e-300)
+    search = ObjectiveSearch(lambda at: solver.gauss_newton(at, 1e-6))
+    return Plan(problem, equation, solver, search, x, choices)
 
 
 def _prepare_composite(problem: CompositeProblem, start: Any, globalization: Any) -> Plan:

@@ -19,6 +19,7 @@ from .complementarity import ComplementarityProblem
 from .composite import CompositeProblem
 from .control import ControlProblem
 from .errors import InputError, MissingExtraError, ProblemFileError
+from .nonlinear_control import NonlinearControlProblem
 from .sum_problem import SumProblem
 
 HOOKS = ("transfer", "known", "picture", "summary")
@@ -127,14 +128,21 @@ class ProblemFile:
             problem = self.builder(**values)
         if problem is None:
             raise self._error("build returned None; it must return the problem")
-        if isinstance(problem, (ControlProblem, CompositeProblem, ComplementarityProblem, SumProblem)):
+        statements = (
+            ControlProblem,
+            NonlinearControlProblem,
+            CompositeProblem,
+            ComplementarityProblem,
+            SumProblem,
+        )
+        if isinstance(problem, statements):
             return problem
         if not isinstance(problem, type) and hasattr(problem, "residual") and hasattr(problem, "linearize"):
             return problem
         what = "a class, not an object" if isinstance(problem, type) else f"a {type(problem).__name__}"
         raise self._error(
-            f"build returned {what}; it must return a ControlProblem, CompositeProblem, ComplementarityProblem, "
-            "SumProblem, or an object with residual(x) and linearize(x)"
+            f"build returned {what}; it must return a ControlProblem, NonlinearControlProblem, CompositeProblem, "
+            "ComplementarityProblem, SumProblem, or an object with residual(x) and linearize(x)"
         )
 
     @contextlib.contextmanager

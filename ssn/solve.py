@@ -59,7 +59,8 @@ def solve(
 
     Parameters
     ----------
-    problem : ControlProblem, CompositeProblem, ComplementarityProblem, SumProblem, function, or Equation
+    problem : a statement, function, or object with the Equation protocol
+        ControlProblem, NonlinearControlProblem, CompositeProblem, ComplementarityProblem, SumProblem.
         A plain function of NumPy arrays (or of a tuple or dict of arrays, like `start`) is traced: its Newton
         derivative and active sets follow from its operations.
     start : array, optional
@@ -73,9 +74,10 @@ def solve(
     max_steps : int
         Newton steps at most, over a whole path.
     globalization : {"auto", "full", "dual", "residual", "envelope", "smoothing"} or a Globalization
-        "auto": dual search where the problem has a dual equation, envelope search for other composite problems,
-        residual search and smoothing path for complementarity, dual search along a path of multipliers for several
-        terms, residual search otherwise. What was decided, and why, stands in ``Solution.choices``.
+        "auto": dual search where the problem has a dual equation, a search on the objective where the state is
+        nonlinear, envelope search for other composite problems, residual search and smoothing path for complementarity,
+        dual search along a path of multipliers for several terms, residual search otherwise. What was decided, and
+        why, stands in ``Solution.choices``.
     linear : {"auto", "subspace", "coupled", "reduced", "general", "full space", "augmented", "primal-dual"}
         How Newton systems are solved; only those that fit the problem are accepted beside "auto". Control problems with
         a symmetric state operator have two: "subspace" factorises it, "coupled" is multigrid on state and adjoint.

@@ -18,6 +18,7 @@ class Outcome(Enum):
     INFEASIBLE = "infeasible"
     UNBOUNDED = "unbounded"
     SADDLE_POINT = "saddle point"
+    NO_STATE = "no state"
     INACCURATE = "inaccurate"
     STOPPED = "stopped"
     INTERRUPTED = "interrupted"
@@ -75,6 +76,11 @@ _TEXTS: dict[Outcome, tuple[str, str]] = {
         "The first-order conditions hold at the returned point, but the objective falls from it along a direction of "
         "negative curvature.",
         "Start from another point; the problem is not convex.",
+    ),
+    Outcome.NO_STATE: (
+        "The nonlinear state equation was not solved for the control at which the solve began.",
+        "Start from a control with a known state, give the state model a better start, or check its derivative with "
+        "ssn.evidence.check_derivative.",
     ),
     Outcome.INACCURATE: (
         "The iteration met its tolerance, but an independent evaluation at the returned point did not.",

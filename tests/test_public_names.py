@@ -14,12 +14,13 @@ PUBLIC = {
         AffineMap Bounds Certificate ComplementarityProblem CompositeProblem ConjugateCost ControlProblem Cost
         CountCost DualSearch ElasticNetCost EnvelopeSearch Equation EuclideanBall FullStep GroupSparseCost HalfSpace
         HingeLoss HuberCost Hyperplane InputError InsensitiveLoss Iteration L1Ball LeastSquares Linearization
-        Logistic MissingExtraError MultiBangCost NotConverged Outcome Pieces PiecewiseQuadraticCost
-        PlanarMultiBangCost
+        Logistic MissingExtraError MultiBangCost NonlinearControlProblem NonlinearStateModel NotConverged
+        OrdinaryDifferentialSystem Outcome Pieces PiecewiseQuadraticCost PlanarMultiBangCost
         PositiveSemidefiniteCone PowerCost ProblemFileError Product Quadratic QuantileLoss ResidualSearch ScaledCost
-        SecondOrderCone Simplex SmoothMap SmoothPart Solution SolveInterrupted SparseCost StateModel SteadyState
-        StepRecord StopSolve SumProblem SumWithQuadratic SwitchingCost Term TimeDependentState TracedEquation
-        TranslatedCost WorkCounts costs custom_operation declare_continuous follow follow_meshes placements
+        SecondOrderCone SemilinearState Simplex SmoothMap SmoothPart Solution SolveInterrupted SparseCost StateModel
+        StateSolveError SteadyState StepRecord StopSolve SumProblem SumWithQuadratic SwitchingCost Term
+        TimeDependentSemilinearState TimeDependentState TracedEquation TranslatedCost WorkCounts costs
+        custom_operation declare_continuous follow follow_meshes placements
         primal_dual proximal_gradient refit solve solve_many vanishing_weight weight_path
     """,
     "ssn.evidence": """

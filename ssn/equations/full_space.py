@@ -24,6 +24,9 @@ second is minus the gradient of the convex dual function
 
 whose slope along a direction costs no solve: `DualFullSpaceEquation`, with an exact search, converges from anywhere.
 
+A semilinear state K y + M d(y) = B u + f brings E'(y) = K + M diag(d'(y)) in place of E, the residual of the state
+equation itself, and diag(d''(y) M' p) in the first row of the derivative. No state equation is solved on the way.
+
 Source: K. Ito and K. Kunisch, Systems Control Lett. 50 (2003) 221-228 (from memory), for the regularised system.
 """
 
@@ -37,6 +40,7 @@ import numpy as np
 import numpy.typing as npt
 from scipy.sparse.linalg import LinearOperator
 
+from ..errors import StateSolveError
 from ..inner import InnerProduct, relative
 from ..linear.boundary import product, transpose_product
 from ..pieces import Pieces
@@ -64,6 +68,8 @@ class FullSpacePoint:
         D.
     step : float
         That of the proximal map, 1/alpha.
+    matrix, curvature : sparse array, array
+        For a semilinear state E'(y), and the diagonal of the derivative of E'(y)' p.
     """
 
     v: FloatArray
@@ -71,6 +77,8 @@ class FullSpacePoint:
     active: FloatArray
     derivative: ProxDerivative
     step: float
+    matrix: Any = None
+    curvature: Any = 0.0
 
 
 class FullSpaceEquation:
@@ -78,20 +86,22 @@ class FullSpaceEquation:
 
     Parameters
     ----------
-    problem : ControlProblem
-        With state bounds, alpha > 0, explicit matrices and a cost with a diagonal derivative.
+    problem : ControlProblem or NonlinearControlProblem
+        With state bounds, alpha > 0, explicit matrices and a cost with a diagonal derivative; a nonlinear state is a
+        `SemilinearState`.
     gamma : float
         Penalty >= 0, unit of the observation mass over that of the state mass.
 
     Notes
     -----
     The accuracy is the distance bound of the module docstring for u, relative to ||u||; where u = 0, to the argument
-    of the proximal map.
+    of the proximal map. With a semilinear state E is E'(y) in the norm, and the bound holds to first order only.
     """
 
     def __init__(self, problem: Any, gamma: float) -> None:
         self.problem, self.gamma, self.alpha = problem, gamma, problem.alpha
         self.cost, self.work, self.weights = problem.cost, problem.work, problem.weights
+        self.nonlinear = hasattr(problem.state, "linearize")
         self.size = int(problem.state.size)
         self.piecewise_affine = bool(getattr(problem.cost, "piecewise_affine", True))
         mass = problem.bound_mass
@@ -106,8 +116,13 @@ class FullSpaceEquation:
         """The state of a control and the adjoint that belongs to it; None means the proximal point of zero."""
         problem = self.problem
         u = self.cost.prox(np.zeros(problem.unknowns), 1.0 / self.alpha) if control is None else control
-        y = problem.response(u) + problem.offset()
-        return np.concatenate([y, problem.state.adjoint_solve(-self.state_load(y))])
+        y = problem.state_of(u) if self.nonlinear else problem.response(u) + problem.offset()
+        return np.concatenate([y, self.linear(y).adjoint_solve(-self.state_load(y))])
+
+    def linear(self, y: FloatArray) -> Any:
+        """The linear state model at y."""
+        state = self.problem.state
+        return state.linearize(y) if self.nonlinear else state
 
     def density(self, y: FloatArray) -> FloatArray:
         """l(y): positive where the upper bound is violated, negative where the lower one is."""
@@ -139,26 +154,33 @@ class FullSpaceEquation:
         v = problem.pull_back(p) / self.alpha
         self.work.proximal_maps += 1
         u = self.cost.prox(v, 1.0 / self.alpha)
-        first = self.state_load(y) - problem.state.adjoint_residual(p, np.zeros(self.size))
-        second = -problem.state.residual(y, self.control_load(u))
-        residual = np.concatenate([first, second])
-        if not np.isfinite(residual).all():
-            return Evaluation(x, residual, np.inf, np.inf, Pieces())
-        norm = self.energy(first, second)
+        extra: dict[str, Any] = {}
+        try:
+            linear = self.linear(y)
+            first = self.state_load(y) - linear.adjoint_residual(p, np.zeros(self.size))
+            second = -problem.state.residual(y, self.control_load(u))
+            residual = np.concatenate([first, second])
+            if not np.isfinite(residual).all():
+                return Evaluation(x, residual, np.inf, np.inf, Pieces())
+            norm = self.energy(first, second, linear)
+            if self.nonlinear:
+                extra = {"matrix": linear.matrix, "curvature": problem.state.curvature(y, p)}
+        except StateSolveError:
+            return Evaluation(x, np.full(x.shape, np.nan), np.inf, np.inf, Pieces())
         accuracy = relative(norm / float(np.sqrt(self.alpha)), self.control_size(u, v))
         active = ((y > problem.state_upper) | (y < problem.state_lower)).astype(np.float64)
         derivative = self.cost.prox_derivative(v, 1.0 / self.alpha)
-        data = FullSpacePoint(v, u, active, derivative, 1.0 / self.alpha)
+        data = FullSpacePoint(v, u, active, derivative, 1.0 / self.alpha, **extra)
         return Evaluation(x, residual, norm, accuracy, self.pieces(y, v), data)
 
     def control_size(self, u: FloatArray, v: FloatArray) -> float:
         """||u||, or ||v|| where u = prox(v) is zero."""
         return self.problem.controls.norm(u) or self.problem.controls.norm(v)
 
-    def energy(self, first: FloatArray, second: FloatArray) -> float:
+    def energy(self, first: FloatArray, second: FloatArray, linear: Any) -> float:
         """The norm of a pair of residuals, see the module docstring; two state solves."""
         problem = self.problem
-        e1, e2 = problem.state.adjoint_solve(first), problem.state.solve(second)
+        e1, e2 = linear.adjoint_solve(first), linear.solve(second)
         square = problem.controls.norm(problem.pull_back(e1)) ** 2 / self.alpha
         square += problem.observations.norm(problem.observe(e2)) ** 2
         square += self.gamma * float(problem.bound_mass @ (e2 * e2))
@@ -172,12 +194,13 @@ class FullSpaceEquation:
         problem, y, p = self.problem, x[: self.size], x[self.size :]
         v = problem.pull_back(p) / self.alpha
         u = self.cost.prox(v, 1.0 / self.alpha)
-        matrix = abs(problem.state.matrix)
+        linear = self.linear(y)
+        matrix = abs(linear.matrix)
         signs = np.where(np.cos(1.7 * np.arange(self.size) ** 2) > 0, EPS, -EPS)
         second = product(matrix, abs(y)) + abs(self.control_load(u))
         first = transpose_product(matrix, abs(p)) + abs(self.state_load(y))
         first = first + self.gamma * problem.bound_mass * np.where(self.excess(y) != 0.0, abs(y), 0.0)
-        energy = self.energy(signs * first, signs * second)
+        energy = self.energy(signs * first, signs * second, linear)
         return relative(energy / float(np.sqrt(self.alpha)), self.control_size(u, v))
 
     def pieces(self, y: FloatArray, v: FloatArray) -> Pieces:
@@ -196,7 +219,7 @@ class FullSpaceEquation:
     def linearize(self, x: FloatArray) -> Linearization:
         """Residual and Newton derivative, the latter as an operator."""
         at, problem, n = self.evaluate(x), self.problem, self.size
-        zero = np.zeros(n)
+        zero, linear = np.zeros(n), self.linear(x[: self.size])
 
         def apply(direction: FloatArray) -> FloatArray:
             dy, dp = np.ravel(direction)[:n], np.ravel(direction)[n:]
@@ -204,9 +227,9 @@ class FullSpaceEquation:
             if problem.observation is not None:
                 weighted = transpose_product(problem.observation, weighted)
             du = at.data.derivative.apply(problem.pull_back(dp)) / self.alpha
-            first = weighted + self.gamma * problem.bound_mass * at.data.active * dy
-            first = first - problem.state.adjoint_residual(dp, zero)
-            second = -problem.state.residual(dy, product(problem.control_operator, du))
+            first = weighted + (self.gamma * problem.bound_mass * at.data.active + at.data.curvature) * dy
+            first = first - linear.adjoint_residual(dp, zero)
+            second = -linear.residual(dy, product(problem.control_operator, du))
             return np.concatenate([first, second])
 
         operator = LinearOperator((2 * n, 2 * n), matvec=apply, dtype=np.float64)
@@ -225,7 +248,8 @@ class FullSpaceEquation:
 
 def has_dual(problem: Any) -> bool:
     """Whether the state can be eliminated node by node: all of it observed, with a lumped mass."""
-    return problem.observation is None and problem.observations.vector is not None
+    lumped = problem.observation is None and problem.observations.vector is not None
+    return lumped and not hasattr(problem.state, "linearize")
 
 
 class DualFullSpaceEquation(FullSpaceEquation):

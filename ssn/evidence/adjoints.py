@@ -12,8 +12,11 @@ from scipy.sparse.linalg import LinearOperator
 from ..composite import LeastSquaresMap
 from ..inner import InnerProduct
 from ..linear.boundary import product, transpose_product
+from ..nonlinear_control import LinearisedMap
+from ..nonlinear_states import second_derivative
 from ..protocols import FloatArray
 from .check import Check
+from .taylor import jacobian
 
 ROUNDING = 1e-12
 SOLVE = 1e-8
@@ -40,7 +43,41 @@ def pair(
 
 def control(problem: Any, rng: np.random.Generator) -> list[Check]:
     """S and S* in their products, B and C where they are operators, the state model against its own residuals."""
-    state = problem.state
+    return _linear(problem, problem.state, problem.forward, problem.adjoint, rng)
+
+
+def nonlinear(problem: Any, y: FloatArray, p: FloatArray, rng: np.random.Generator) -> list[Check]:
+    """The derivatives of a nonlinear state equation at y, the second one along p, and the adjoints of the first."""
+    state, zero = problem.state, np.zeros(problem.state.size)
+    shape = (state.size, state.size)
+    size = float(np.linalg.norm(y)) or float(np.sqrt(y.size))
+
+    def step(h: FloatArray) -> FloatArray:
+        return np.asarray(h * (0.3 * size / max(float(np.linalg.norm(h)), 1e-300)))
+
+    def derivative(x: FloatArray) -> LinearOperator:
+        at = state.linearize(x)
+        return LinearOperator(shape, matvec=lambda d: -at.residual(np.ravel(d), zero), dtype=np.float64)
+
+    def second(x: FloatArray) -> LinearOperator:
+        at = second_derivative(state, x, p)
+        return LinearOperator(shape, matvec=lambda d: product(at, np.ravel(d)), dtype=np.float64)
+
+    made = [
+        jacobian(
+            "state derivative", lambda x: -state.residual(x, zero), derivative, y, step, rng,
+            "linearize() is not the derivative of residual()",
+        ),
+        jacobian(
+            "state second derivative", lambda x: -state.linearize(x).adjoint_residual(p, zero), second, y, step, rng,
+            "second_derivative() is not the derivative of linearize()",
+        ),
+    ]  # fmt: skip
+    tangent = LinearisedMap(problem, state.linearize(y))
+    return made + _linear(problem, tangent.linear, tangent.forward, tangent.adjoint, rng)
+
+
+def _linear(problem: Any, state: Any, forward: Map, adjoint: Map, rng: np.random.Generator) -> list[Check]:
     plain = InnerProduct(np.ones(state.size))
     checks = []
     for name, given in (("control operator", problem.control_operator), ("observation", problem.observation)):
@@ -66,7 +103,7 @@ def control(problem: Any, rng: np.random.Generator) -> list[Check]:
     checks += [solve, adjoint_solve]
     checks.append(
         pair(
-            "adjoint", problem.forward, problem.adjoint, problem.observations, problem.controls, rng,
+            "adjoint", forward, adjoint, problem.observations, problem.controls, rng,
             slack=10.0 * (slack + adjoint_slack),
             hint="S* is not the adjoint of S in the weighted products: look at masses and transposes",
         )

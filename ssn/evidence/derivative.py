@@ -10,7 +10,9 @@ import numpy as np
 from ..complementarity import ComplementarityProblem
 from ..composite import CompositeProblem
 from ..control import ControlProblem
+from ..errors import StateSolveError
 from ..inner import InnerProduct
+from ..nonlinear_control import NonlinearControlProblem
 from ..protocols import FloatArray
 from ..smooth import LeastSquares
 from ..sum_problem import SumProblem
@@ -39,7 +41,8 @@ def check_derivative(problem: Any, at: Any = None, *, seed: int = 0) -> tuple[Ch
         directions; "newton step": the linear solver solves the system of that G; "pieces": the labels agree with
         the derivative; "proximal map": it minimises what it should; "gradient", "hessian", "hessian symmetry",
         "map derivative": Taylor tests; "adjoint" and, for control problems, "state operator", "state solve",
-        "adjoint solve", "control operator adjoint", "observation adjoint". Those that apply.
+        "adjoint solve", "control operator adjoint", "observation adjoint"; for nonlinear states "state derivative" and
+        "state second derivative". Those that apply.
 
     Raises
     ------
@@ -66,6 +69,8 @@ def derivative_checks(
         checks.append(_proximal(local, rng))
     if isinstance(problem, SumProblem):
         checks += _several_terms(local, rng)
+    if isinstance(problem, NonlinearControlProblem):
+        return (*checks, *_nonlinear(problem, local, point, rng))
     if isinstance(problem, ControlProblem | CompositeProblem | ComplementarityProblem):
         own = not isinstance(problem, ControlProblem)  # whose iterate is the user's unknown
         u = local.x if own else np.zeros(problem.unknowns) if point is None else point
@@ -100,6 +105,23 @@ def _several_terms(local: Local, rng: np.random.Generator) -> list[Check]:
     return checks
 
 
+def _nonlinear(
+    problem: NonlinearControlProblem, local: Local, point: FloatArray | None, rng: np.random.Generator
+) -> list[Check]:
+    """Gradient and Hessian at a control, and the derivatives of the state equation at its state."""
+    u = np.zeros(problem.unknowns) if point is None else point
+    try:
+        y, p = problem.state_and_adjoint(u)
+    except StateSolveError as error:
+        y = rng.standard_normal(problem.state.size)
+        failed = Check("state", False, f"the state equation was not solved for the control: {error}")
+        return [failed, *adjoints.nonlinear(problem, y, rng.standard_normal(y.size), rng)]
+    checks = _smooth(problem, u, _size(local, u), rng)
+    # along a p that vanishes there would be nothing to see
+    along = p if np.linalg.norm(p) > 0.0 else rng.standard_normal(p.size)
+    return checks + adjoints.nonlinear(problem, y, along, rng)
+
+
 def _size(local: Local, u: FloatArray) -> float:
     """Size of the perturbations of the user's unknown."""
     controls = local.problem.controls
@@ -130,20 +152,23 @@ def _smooth(problem: Any, u: FloatArray, size: float, rng: np.random.Generator) 
     def step(h: FloatArray) -> FloatArray:
         return h * (size / max(float(problem.controls.norm(h)), 1e-300))
 
+    nonlinear = isinstance(problem, NonlinearControlProblem)
+    value: Any = problem.gradient if nonlinear else getattr(problem, "value", None)
+    derivative: Any = problem.hessian if nonlinear else getattr(problem, "derivative", None)
     away = u + 0.3 * step(rng.standard_normal(u.size))
     points = [(u, False)] + ([(away, True)] if _finite(problem, away) else [])
 
     def jacobian(name: str, complaint: str) -> Check:
         return _worse(
-            taylor.jacobian(name, problem.value, problem.derivative, x, step, rng, complaint, few=few)
-            for x, few in points
+            taylor.jacobian(name, value, derivative, x, step, rng, complaint, few=few) for x, few in points
         )
 
     if not isinstance(problem, ComplementarityProblem) or problem.symmetric:
         checks.append(_worse(taylor.gradient(problem, x, size, rng, few=few) for x, few in points))
-    if isinstance(problem, CompositeProblem | SumProblem):
+    # with penalised state bounds the gradient is piecewise smooth, and its derivative that of the Newton systems
+    if isinstance(problem, CompositeProblem | SumProblem) or (nonlinear and not problem.state_bounded):
         checks.append(jacobian("hessian", "hessian() is not the derivative of gradient()"))
-        checks.append(_worse(taylor.symmetry(problem.derivative(x), x.size, rng) for x, _ in points))
+        checks.append(_worse(taylor.symmetry(derivative(x), x.size, rng) for x, _ in points))
     if isinstance(problem, ComplementarityProblem):
         checks.append(jacobian("map derivative", "derivative() is not the derivative of value()"))
     return checks
@@ -158,5 +183,7 @@ def _worse(checks: Iterable[Check]) -> Check:
 def _finite(problem: Any, u: FloatArray) -> bool:
     if isinstance(problem, ControlProblem):
         return True
+    if isinstance(problem, NonlinearControlProblem):
+        return bool(np.isfinite(problem.smooth_value(u)))
     with np.errstate(all="ignore"):
         return bool(np.isfinite(problem.value(u)).all())

@@ -9,7 +9,6 @@ from __future__ import annotations
 import time
 import warnings
 from collections.abc import Callable
-from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
@@ -20,26 +19,21 @@ from scipy.sparse.linalg import LinearOperator
 from ..complementarity import ComplementarityProblem
 from ..composite import CompositeProblem
 from ..control import ControlProblem
-from ..costs import SparseCost
+from ..costs import SparseCost, SwitchingCost
+from ..nonlinear_control import NonlinearControlProblem
 from ..protocols import FloatArray
-from ..smooth import LeastSquares, Quadratic
-from ..states import SteadyState
+from ..smooth import LeastSquares
 from ..sum_problem import SumProblem
 from .conic_program import ConicProgram, can_state, solve_conic
-
-# variables from which on an interior-point factorisation is too much for a comparison in passing
-LARGEST = 20_000
-GAP = 1e-11
-
-
-@dataclass(frozen=True)
-class LibraryResult:
-    """A point with what the library says of it."""
-
-    x: FloatArray
-    converged: bool
-    outcome: str
-    iterations: int | None
+from .quadratic_program import (
+    LARGEST,
+    LibraryResult,
+    clarabel_solution,
+    control_blocks,
+    part_blocks,
+    quadratic_program,
+)
+from .sequential_programming import applies, sequential_programming
 
 
 def library_methods(problem: Any) -> dict[str, Callable[..., LibraryResult]]:
@@ -50,15 +44,20 @@ def library_methods(problem: Any) -> dict[str, Callable[..., LibraryResult]]:
             found["interior point"] = conic_interior_point
         return found
     cost = getattr(problem, "cost", None)
-    convex = isinstance(problem, ControlProblem | CompositeProblem) or (
+    stated = isinstance(problem, ControlProblem | NonlinearControlProblem | CompositeProblem) or (
         isinstance(problem, ComplementarityProblem) and problem.symmetric
     )
-    if not isinstance(cost, SparseCost) or not convex:
+    if isinstance(cost, SwitchingCost) and stated:
+        found["L-BFGS-B"] = lbfgsb
+    if not isinstance(cost, SparseCost) or not stated:
         return found
-    if not getattr(problem, "state_bounded", False):
+    hard_bounds = getattr(problem, "state_bounded", False) and problem.state_penalty is None
+    if not hard_bounds:
         found["L-BFGS-B"] = lbfgsb
     if quadratic_program(problem) is not None and _installed("clarabel"):
         found["interior point"] = interior_point
+    if applies(problem) and _installed("clarabel"):
+        found["sequential programming"] = sequential_programming
     if _is_lasso(problem) and _installed("sklearn"):
         found["coordinate descent"] = coordinate_descent
     return found
@@ -69,9 +68,9 @@ def conic_program(problem: SumProblem) -> ConicProgram | None:
     if not can_state(problem):
         return None
     smooth = (
-        _part_blocks(problem.part, problem.unknowns)
+        part_blocks(problem.part, problem.unknowns)
         if problem.control is None
-        else _control_blocks(problem.control)
+        else control_blocks(problem.control)
     )
     if smooth is None or smooth[0].shape[0] + int(problem.splits[-1]) > 3 * LARGEST:
         return None
@@ -99,7 +98,7 @@ class _OutOfTime(Exception):
 
 
 def lbfgsb(problem: Any, *, budget: float) -> LibraryResult:
-    """SciPy's L-BFGS-B; where there is an L1 cost the unknown is split into its positive and negative part.
+    """SciPy's L-BFGS-B; an L1 or switching cost is smooth in the positive and negative parts of the unknown.
 
     The unknown is scaled by the square roots of the weights, so that the method works in the problem's inner product.
     """
@@ -107,9 +106,11 @@ def lbfgsb(problem: Any, *, budget: float) -> LibraryResult:
     n = problem.unknowns
     weights = getattr(problem, "weights", np.ones(n))
     root = np.sqrt(weights)
-    beta = np.broadcast_to(cost.beta, (n,))
-    lower, upper = (np.broadcast_to(b, (n,)) for b in (cost.lower, cost.upper))
-    split = bool(beta.any())
+    lower, upper = (
+        np.broadcast_to(getattr(cost, name, b), (n,)) for name, b in (("lower", -np.inf), ("upper", np.inf))
+    )
+    split = bool(np.any(cost.beta))
+    price_of = _switching_price if isinstance(cost, SwitchingCost) else _sparse_price
     began = time.monotonic()
     best: dict[str, Any] = {"value": np.inf, "u": None}
 
@@ -124,8 +125,9 @@ def lbfgsb(problem: Any, *, budget: float) -> LibraryResult:
         scaled = root * gradient
         if not split:
             return value, scaled
-        price = beta * root
-        value += float(price @ (v[:n] + v[n:]))
+        paid, price = price_of(cost, (v[:n] + v[n:]) / root, weights)
+        price = price / root
+        value += paid
         if value < best["value"]:
             best.update(value=value, u=u)
         return value, np.concatenate([scaled + price, -scaled + price])
@@ -149,132 +151,30 @@ def lbfgsb(problem: Any, *, budget: float) -> LibraryResult:
     return LibraryResult(u, bool(result.success), outcome, int(result.nit))
 
 
-@dataclass(frozen=True)
-class QuadraticProgram:
-    """1/2 v'Pv + q'v with rows A v = b (the first `equalities`) and A v <= b; u are the first n entries of v."""
-
-    p: Any
-    q: FloatArray
-    a: Any
-    b: FloatArray
-    equalities: int
-    unknowns: int
+def _sparse_price(cost: SparseCost, size: FloatArray, weights: FloatArray) -> tuple[float, FloatArray]:
+    """The L1 cost of |u| = size, and its derivatives."""
+    price = np.broadcast_to(cost.beta, size.shape) * weights
+    return float(price @ size), price
 
 
-def quadratic_program(problem: Any) -> QuadraticProgram | None:
-    """The problem as a sparse quadratic program with the state as a variable, or None where it has no matrices."""
-    n = problem.unknowns
-    cost: SparseCost = problem.cost
-    weights = np.asarray(getattr(problem, "weights", np.ones(n)))
-    blocks = _smooth_blocks(problem)
-    if blocks is None:
-        return None
-    hessian, linear, rows, right = blocks
-    size = hessian.shape[0]
-    price = np.broadcast_to(cost.beta, (n,)) * weights
-    lower, upper = (np.broadcast_to(b, (n,)) for b in (cost.lower, cost.upper))
-    extra = n if price.any() else 0
-    if size + extra > LARGEST:
-        return None
-    total = size + extra
-    p = (
-        sp.block_diag([hessian, sp.csc_array((extra, extra))], format="csc")
-        if extra
-        else sp.csc_array(hessian)
-    )
-    q = np.concatenate([linear, price]) if extra else linear
-    pick = sp.eye_array(n, total, format="csr")
-    equal = sp.hstack([rows, sp.csr_array((rows.shape[0], extra))]) if extra else rows
-    above, below = np.isfinite(upper), np.isfinite(lower)
-    unequal = [pick[above], -pick[below]]
-    limits = [upper[above], -lower[below]]
-    if extra:
-        slack = sp.eye_array(n, total, k=size, format="csr")
-        unequal += [pick - slack, -pick - slack]
-        limits += [np.zeros(n), np.zeros(n)]
-    if getattr(problem, "state_bounded", False):
-        state = sp.eye_array(problem.state.size, total, k=n, format="csr")
-        for bound, sign in ((problem.state_upper, 1.0), (problem.state_lower, -1.0)):
-            if bound is not None:
-                full = np.broadcast_to(bound, (problem.state.size,))
-                finite = np.isfinite(full)
-                unequal.append(sign * state[finite])
-                limits.append(sign * full[finite])
-    a = sp.csc_array(sp.vstack([equal, *unequal]))
-    return QuadraticProgram(p, q, a, np.concatenate([right, *limits]), rows.shape[0], n)
-
-
-def _smooth_blocks(problem: Any) -> tuple[Any, FloatArray, Any, FloatArray] | None:
-    """Hessian, linear part, equality rows and right side of the smooth part, in v = (u, auxiliary variables)."""
-    n = problem.unknowns
-    none = sp.csr_array((0, n))
-    if isinstance(problem, ComplementarityProblem):
-        return (
-            sp.csc_array(problem.derivative(problem.start())),
-            problem.value(np.zeros(n)),
-            none,
-            np.zeros(0),
-        )
-    if isinstance(problem, CompositeProblem):
-        return _part_blocks(problem.part, n)
-    return _control_blocks(problem)
-
-
-def _part_blocks(part: Any, n: int) -> tuple[Any, FloatArray, Any, FloatArray] | None:
-    if isinstance(part, Quadratic) and not isinstance(part.H, LinearOperator):
-        return sp.csc_array(part.H), -part.b, sp.csr_array((0, n)), np.zeros(0)
-    if isinstance(part, LeastSquares) and not isinstance(part.A, LinearOperator):
-        m = part.b.size
-        hessian = sp.block_diag([sp.csc_array((n, n)), sp.diags_array(part.weights)], format="csc")
-        rows = sp.hstack([sp.csr_array(part.A), -sp.eye_array(m)])  # r = A u - b
-        return hessian, np.zeros(n + m), rows, part.b
-    return None
-
-
-def _control_blocks(problem: ControlProblem) -> tuple[Any, FloatArray, Any, FloatArray] | None:
-    operators = (problem.control_operator, problem.observation)
-    if not isinstance(problem.state, SteadyState) or any(isinstance(o, LinearOperator) for o in operators):
-        return None
-    size = problem.state.size
-    observe = sp.eye_array(size) if problem.observation is None else sp.csr_array(problem.observation)
-    product = problem.observations
-    mass = product.matrix if product.matrix is not None else sp.diags_array(product.vector)
-    tracking = observe.T @ mass @ observe
-    hessian = sp.block_diag([sp.diags_array(problem.alpha * problem.weights), tracking], format="csc")
-    linear = np.concatenate([np.zeros(problem.unknowns), -(observe.T @ product.apply(problem.target))])
-    rows = sp.hstack([-sp.csr_array(problem.control_operator), problem.state.matrix])
-    right = np.zeros(size) if problem.source is None else problem.source
-    return hessian, linear, rows, right
+def _switching_price(cost: SwitchingCost, size: FloatArray, weights: FloatArray) -> tuple[float, FloatArray]:
+    """The switching cost of |u| = size, and its derivatives."""
+    inner, groups = cost.inner_weights, cost.groups
+    strength = cost.beta * groups.outer(weights, inner)
+    total = groups.sum(inner * size)
+    return float(0.5 * np.sum(strength * total**2)), groups.spread(strength * total) * inner
 
 
 def interior_point(problem: Any, *, budget: float) -> LibraryResult:
     """clarabel's primal-dual interior-point method on the sparse quadratic program."""
-    import clarabel
-
     program = quadratic_program(problem)
     assert program is not None
-    settings = clarabel.DefaultSettings()
-    settings.verbose = False
-    settings.time_limit = max(budget, 0.1)
-    settings.tol_gap_abs = settings.tol_gap_rel = settings.tol_feas = GAP
-    rest = program.b.size - program.equalities
-    cones = [clarabel.ZeroConeT(program.equalities)] if program.equalities else []
-    cones += [clarabel.NonnegativeConeT(rest)] if rest else []
-    if not cones:  # clarabel wants a row: one that says 0 <= 1
-        program = QuadraticProgram(
-            program.p, program.q, sp.csc_array((1, program.q.size)), np.ones(1), 0, program.unknowns
-        )
-        cones = [clarabel.NonnegativeConeT(1)]
-    solver = clarabel.DefaultSolver(
-        sp.csc_matrix(sp.triu(program.p)), program.q, sp.csc_matrix(program.a), program.b, cones, settings
-    )
-    result = solver.solve()
-    x = np.array(result.x)[: program.unknowns]
+    x, _, status = clarabel_solution(program, budget)
     cost = problem.cost
-    status = str(result.status)
-    return LibraryResult(
-        np.clip(x, cost.lower, cost.upper), "Solved" in status, status.lower(), int(result.iterations)
-    )
+    iterations = int(status.rpartition(" in ")[2]) if " in " in status else None
+    outcome = status.partition(" in ")[0]
+    u = np.clip(x[: program.unknowns], cost.lower, cost.upper)
+    return LibraryResult(u, "solved" in outcome, outcome, iterations)
 
 
 def _is_lasso(problem: Any) -> bool:

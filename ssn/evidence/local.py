@@ -12,16 +12,20 @@ from ..equations.augmented import AugmentedEquation
 from ..equations.dual import DualEquation
 from ..equations.full_space import FullSpaceEquation
 from ..equations.natural import NaturalEquation
+from ..equations.normal import NormalEquation
 from ..equations.primal_dual import PrimalDualEquation
 from ..globalization import DualSearch
+from ..linear import NormalSolver
 from ..linear.boundary import product
 from ..linear.primal_dual import PrimalDualSolver
 from ..linear.subspace import SubspaceSolver
 from ..newton import TIGHT, Limits, run
+from ..nonlinear_control import NonlinearControlProblem
 from ..norm_terms import NormRows
 from ..prepare import prepare
 from ..primal_dual_path import first_gammas
 from ..protocols import Direction, Evaluation, FloatArray
+from ..proximal_newton import normal_equation
 from ..proximal_point import operator_size
 from ..sum_problem import SumProblem
 
@@ -81,6 +85,13 @@ class Local:
                 f"dual equation of the proximal point subproblem with weight {weight:.1e} about the point, "
                 "in the observation norm"
             )
+        elif isinstance(problem, NonlinearControlProblem) and not problem.state_bounded:
+            u = np.zeros(problem.unknowns) if point is None else point
+            self.equation = normal_equation(problem)
+            self.solver = NormalSolver(self.equation)
+            # from the gradient at the control, which a small step of the equation itself could only approximate
+            self.x = u - problem.smooth(u)[1] / problem.alpha
+            self.note = "normal map with the full reduced Hessian, in the norm of the control"
         else:
             way = "envelope" if isinstance(problem, CompositeProblem) else "auto"
             # multigrid has no exact steps to look at: the dual equation of the same problem has
@@ -219,6 +230,8 @@ class Local:
             sloped = at.data.derivative.apply(h[m:]) / self.equation.alpha
             image: FloatArray = h[:m] + self.equation.tracking.forward(sloped)
             return image
+        if isinstance(self.equation, NormalEquation):
+            return self.equation.derivative(at)(h)
         if isinstance(self.equation, NaturalEquation):
             inside = h - at.data.step * product(self.equation.jacobian(at.x), h) / self.equation.weights
             return h - np.asarray(at.data.derivative.apply(inside))

@@ -4,6 +4,7 @@ from .augmented import AugmentedSolver
 from .coupled import CoupledSolver
 from .full_space import FullSpaceSolver
 from .general import GeneralSolver
+from .normal import NormalSolver
 from .primal_dual import PrimalDualSolver
 from .reduced import ReducedSolver
 from .subspace import SubspaceSolver
@@ -24,6 +25,7 @@ __all__ = [
     "CoupledSolver",
     "FullSpaceSolver",
     "GeneralSolver",
+    "NormalSolver",
     "PrimalDualSolver",
     "ReducedSolver",
     "SubspaceSolver",

@@ -46,7 +46,11 @@ class FullSpaceSolver:
     def _assemble(self, problem: Any) -> None:
         """Rows, columns and constant values of all entries, and where the changing ones are."""
         size, n = int(problem.state.size), problem.unknowns
-        state = sp.coo_array(problem.state.matrix)
+        model = problem.state
+        self._changing = hasattr(
+            model, "derivative_matrix"
+        )  # semilinear: other values at each y, the pattern stays
+        state = sp.coo_array(model.derivative_matrix(model.start) if self._changing else model.matrix)
         control = sp.coo_array(problem.control_operator)
         weight = problem.observations
         observed = sp.coo_array(weight.matrix if weight.matrix is not None else sp.diags_array(weight.vector))
@@ -58,6 +62,8 @@ class FullSpaceSolver:
             off = ~on_diagonal
             entries.append((observed.row[off], observed.col[off], observed.data[off]))
         self._diagonal = entries[0][2]
+        before = sum(part[2].size for part in entries)
+        self._state_values = slice(before, before + state.data.size)
         entries.append((state.col, size + state.row, state.data))
         entries.append((size + state.row, state.col, state.data))
         entries.append((size + control.row, 2 * size + control.col, -control.data))
@@ -88,7 +94,11 @@ class FullSpaceSolver:
         """The Newton matrix, explicit zeros included."""
         equation = self.equation
         values = self._values.copy()
-        values[: self._size] = self._diagonal + equation.gamma * equation.problem.bound_mass * at.data.active
+        penalty = equation.gamma * equation.problem.bound_mass * at.data.active
+        values[: self._size] = self._diagonal + penalty + at.data.curvature
+        if self._changing:
+            one = self._state_values
+            values[one] = values[one.stop : 2 * one.stop - one.start] = at.data.matrix.data
         last = self._first_scaled + self._scaled.size
         values[self._first_scaled : last] = self._scaled * at.data.derivative.diagonal[self._scaled_rows]
         return sp.csc_array(
@@ -112,7 +122,10 @@ class FullSpaceSolver:
     def apply_inverse(self, at: Evaluation, rhs: FloatArray) -> tuple[FloatArray | None, str]:
         """Solve with the matrix of the point, for a right-hand side in (y, p); refined once."""
         work = self.equation.work
-        key = (self.equation.gamma, at.data.active.tobytes(), at.data.derivative.diagonal.tobytes())
+        point = at.data
+        key: Any = (self.equation.gamma, point.active.tobytes(), point.derivative.diagonal.tobytes())
+        if self._changing:
+            key = (*key, point.matrix.data.tobytes(), point.curvature.tobytes())
         try:
             if self._factor is None or key != self._key:
                 self._key = None
