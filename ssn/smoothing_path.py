@@ -1,12 +1,12 @@
 """Smoothing path: follow the roots of the smoothed equation as eps falls, and end with plain steps at eps = 0.
 
-At each point one plain Newton step at eps = 0 is tried; while plain steps contract they go on, and their point is
-taken when they converge. Otherwise the smoothed equation is solved roughly at eps, eps falls by a factor (a smaller
-one after an easy point, a larger one after a hard point), and so on. The path is guaranteed for monotone-like (P0) maps
-with bounded level sets; where it does not work it stops and says so. Equations that have another form and an interior
-(complementarity) are then tried in other ways, in this order, each with a share of the steps left: plain steps from the
-start, the path on the Fischer-Burmeister form, and paths that begin inside the bounds with a large eps, where the start
-is forgotten. The stage of each record names the way.
+At each point one plain Newton step at eps = 0 is tried; while plain steps contract, or the pieces of a piecewise affine
+equation settle, they go on, and their point is taken when they converge. Otherwise the smoothed equation is solved
+roughly at eps, eps falls by a factor (a smaller one after an easy point, a larger one after a hard point), and so on.
+The path is guaranteed for monotone-like (P0) maps with bounded level sets; where it does not work it stops and says so.
+Equations that have another form and an interior (complementarity) are then tried in other ways, in this order, each
+with a share of the steps left: plain steps from the start, the path on the Fischer-Burmeister form, and paths that
+begin inside the bounds with a large eps, where the start is forgotten. The stage of each record names the way.
 
 Source: B. Chen and P. T. Harker, SIAM J. Matrix Anal. Appl. 14 (1993) 1168-1190; C. Kanzow, SIAM J. Matrix Anal.
 Appl. 17 (1996) 851-868 (both from memory), for the smoothed minimum.
@@ -17,6 +17,8 @@ from __future__ import annotations
 from collections.abc import Callable
 from dataclasses import dataclass, replace
 from typing import Any
+
+import numpy as np
 
 from .globalization import FullStep, ResidualSearch
 from .newton import Limits, LoopResult, run
@@ -47,6 +49,10 @@ class SmoothingPath:
         Newton steps at most at one point.
     contraction : float
         Plain steps go on while each cuts the residual norm to this fraction.
+    settling : float
+        On a piecewise affine equation they also go on while the norm falls and the pieces settle: the first step
+        changes at most this fraction of the pieces, each further one at most half as many as the one before. A start
+        from a coarser mesh is near enough in this sense long before its residual contracts.
     least : float
         eps at which the path is given up, as a fraction of the first one.
     interior : tuple of float
@@ -57,6 +63,7 @@ class SmoothingPath:
     factor: float = 0.1
     point_steps: int = 12
     contraction: float = 0.3
+    settling: float = 0.05
     least: float = 1e-12
     interior: tuple[float, ...] = (1.0, 10.0, 0.1)
 
@@ -194,9 +201,10 @@ class _Follower:
         solver = self.make_solver(equation)
         smoothed_solver: Any = None
         first, hard = eps, 0
+        affine = bool(getattr(equation, "piecewise_affine", False))
         while not self.done():
-            at = x
-            while True:  # plain steps, as long as they contract
+            at, allowed = x, path.settling * x.size
+            while True:  # plain steps, as long as they contract or their pieces settle
                 _rescaled(equation, at)
                 previous = equation.evaluate(at).norm
                 one = replace(self.limits, max_steps=1)
@@ -205,15 +213,17 @@ class _Follower:
                 if self.done():
                     return
                 contracted = bool(part.steps) and part.last.norm <= path.contraction * previous
-                if not contracted:
+                changes = part.steps[-1].piece_changes if part.steps else None
+                settles = affine and part.last.norm < previous and changes is not None and changes <= allowed
+                if not contracted and not settles:
                     break
+                allowed = 0.5 * min(allowed, np.inf if changes is None else changes)
                 at = part.last.x
             _rescaled(equation, x)
             smoothed = equation.smoothed(eps)
             if smoothed_solver is None:
                 smoothed_solver = self.make_solver(smoothed)
             smoothed_solver.equation = smoothed  # the pattern stays, and with it the symbolic factorisation
-            affine = bool(getattr(equation, "piecewise_affine", False))
             search = ResidualSearch(memory=1, max_halvings=10 if affine else HALVINGS).fresh()
             point = Limits(tolerance=0.5, max_steps=min(path.point_steps, last_step - len(result.steps)))
             part = self._stage(smoothed, smoothed_solver, search, x, point, f"{way}eps = {eps:.1e}")
