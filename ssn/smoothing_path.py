@@ -1,8 +1,9 @@
 """Smoothing path: follow the roots of the smoothed equation as eps falls, and end with plain steps at eps = 0.
 
-At each point one plain Newton step at eps = 0 is tried; while plain steps contract, or the pieces of a piecewise affine
-equation settle, they go on, and their point is taken when they converge. Otherwise the smoothed equation is solved
-roughly at eps, eps falls by a factor (a smaller one after an easy point, a larger one after a hard point), and so on.
+At each point one plain Newton step at eps = 0 is tried; while plain steps contract, or the pieces at the start of a
+piecewise affine equation settle, they go on, and their point is taken when they converge. Otherwise the smoothed
+equation is solved roughly at eps, eps falls by a factor (a smaller one after an easy point, a larger one after a hard
+point), and so on.
 The path is guaranteed for monotone-like (P0) maps with bounded level sets; where it does not work it stops and says so.
 Equations that have another form and an interior (complementarity) are then tried in other ways, in this order, each
 with a share of the steps left: plain steps from the start, the path on the Fischer-Burmeister form, and paths that
@@ -17,8 +18,6 @@ from __future__ import annotations
 from collections.abc import Callable
 from dataclasses import dataclass, replace
 from typing import Any
-
-import numpy as np
 
 from .globalization import FullStep, ResidualSearch
 from .newton import Limits, LoopResult, run
@@ -50,9 +49,12 @@ class SmoothingPath:
     contraction : float
         Plain steps go on while each cuts the residual norm to this fraction.
     settling : float
-        On a piecewise affine equation they also go on while the norm falls and the pieces settle: the first step
-        changes at most this fraction of the pieces, each further one at most half as many as the one before. A start
-        from a coarser mesh is near enough in this sense long before its residual contracts.
+        At the start of a piecewise affine equation they also go on without contracting while the pieces settle: the
+        first step changes at most this fraction of the pieces, the second at most half as many as the first, further
+        ones no more than the one before. The solution on a coarser mesh is near enough in this sense long before its
+        residual contracts.
+    patience : int
+        Steps at most that go on in this way.
     least : float
         eps at which the path is given up, as a fraction of the first one.
     interior : tuple of float
@@ -63,7 +65,8 @@ class SmoothingPath:
     factor: float = 0.1
     point_steps: int = 12
     contraction: float = 0.3
-    settling: float = 0.05
+    settling: float = 0.1
+    patience: int = 4
     least: float = 1e-12
     interior: tuple[float, ...] = (1.0, 10.0, 0.1)
 
@@ -203,8 +206,9 @@ class _Follower:
         first, hard = eps, 0
         affine = bool(getattr(equation, "piecewise_affine", False))
         while not self.done():
-            at, allowed = x, path.settling * x.size
-            while True:  # plain steps, as long as they contract or their pieces settle
+            at, slow = x, 0
+            allowed = path.settling * x.size if affine and eps == first else 0.0
+            while True:  # plain steps, as long as they contract or the pieces of the start settle
                 _rescaled(equation, at)
                 previous = equation.evaluate(at).norm
                 one = replace(self.limits, max_steps=1)
@@ -212,12 +216,15 @@ class _Follower:
                 self._keep(equation, part)
                 if self.done():
                     return
-                contracted = bool(part.steps) and part.last.norm <= path.contraction * previous
-                changes = part.steps[-1].piece_changes if part.steps else None
-                settles = affine and part.last.norm < previous and changes is not None and changes <= allowed
-                if not contracted and not settles:
+                if not part.steps or not part.last.finite:
                     break
-                allowed = 0.5 * min(allowed, np.inf if changes is None else changes)
+                changes = part.steps[-1].piece_changes or 0
+                if part.last.norm > path.contraction * previous:
+                    slow += 1
+                    if not 0.0 < allowed >= changes or slow > path.patience:
+                        break
+                # the second step must change half as many pieces as the first, further ones no more than the last
+                allowed = min(allowed, 0.5 * changes if at is x else changes)
                 at = part.last.x
             _rescaled(equation, x)
             smoothed = equation.smoothed(eps)

@@ -14,11 +14,14 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
+from pathlib import Path
 from typing import Any
 
 import numpy as np
 import scipy.optimize
 import scipy.sparse as sp
+
+from ssn.problem_file import load_module
 
 INF = np.inf
 
@@ -841,31 +844,27 @@ GOULD = linear(
 )  # fmt: skip
 
 
-def torsion_problem(q: int, c: float = 5.0) -> Published:
+def problem_file(name: str) -> Any:
+    """The module problems/name.py."""
+    return load_module(Path(__file__).resolve().parents[2] / "problems" / f"{name}.py")
+
+
+def torsion_problem(q: int) -> Published:
     """Elastic-plastic torsion with half-weight edges; the optimum of the energy is printed, not the solution."""
-    n, h = 2 * q - 2, 1.0 / (2 * q - 1)
-    edge = np.minimum(np.arange(1, n + 1), n - np.arange(n)) * h
-    distance = np.minimum.outer(edge, edge).ravel()
+    problem = problem_file("torsion").build(2 * q - 2, case="half weight")
     return linear(
         "Torsion",
         "Elastic-plastic torsion: J. More, G. Toraldo, SIAM J. Optim. 1 (1991) 93-113; weights of I. Bongartz, "
         "A. Conn, N. Gould, Ph. Toint, ACM Trans. Math. Softw. 21 (1995)",
         "read",
-        half_weight_stiffness(n),
-        np.full(n * n, -c * h * h),
+        problem.map.M,
+        problem.map.q,
         (),
         123,
-        bounds=(-distance, distance),
-        box=(-2 * distance, 2 * distance),
+        bounds=(problem.lower, problem.upper),
+        box=(2 * problem.lower, 2 * problem.upper),
         caution="two-sided bounds that meet at the edge",
     )
-
-
-def half_weight_stiffness(n: int) -> Any:
-    diagonal = 2.0 * np.ones(n)
-    diagonal[[0, -1]] = 1.5
-    line = sp.diags_array([-np.ones(n - 1), diagonal, -np.ones(n - 1)], offsets=[-1, 0, 1])
-    return sp.csr_array(sp.kron(line, sp.eye_array(n)) + sp.kron(sp.eye_array(n), line))
 
 
 TORSION_OPTIMUM = -0.45608771  # q = 11
@@ -881,7 +880,7 @@ def membrane_problem(points: int) -> Published:
         "Membrane",
         "Membrane over an obstacle: I. Bongartz, A. Conn, N. Gould, Ph. Toint, ACM Trans. Math. Softw. 21 (1995)",
         "read",
-        half_weight_stiffness(n),
+        problem_file("double_obstacle").five_point(n, 0.5),
         np.full(n * n, -h * h),
         (),
         124,

@@ -1,10 +1,14 @@
-"""Published complementarity problems: linear ones, small nonlinear ones, and two elastic-plastic and fluid problems."""
+"""Published complementarity problems: linear ones, small nonlinear ones, and a membrane over an obstacle."""
 
 import numpy as np
 import pytest
 import scipy.sparse as sp
 
 import ssn
+
+from ..problems.loading import load
+
+double_obstacle = load("double_obstacle")
 
 
 def residual(value, x, lower=0.0, upper=np.inf):
@@ -150,86 +154,11 @@ def test_billups(start):
         assert solution.converged
 
 
-# B. Averick, R. Carter, J. More, G. Xue, The MINPACK-2 test problem collection, Argonne MCS-P153-0692, 1992;
-# definitions also in J. More and G. Toraldo, SIAM J. Optim. 1 (1991) 93-113. Optimal values computed by independent
-# solvers (sparse active sets, L-BFGS-B) to the digits shown.
-
-TORSION = {25: -0.41693575347, 50: -0.418087632020}
-BEARING = {25: -0.18017327151, 50: -0.180487995008}
-
-
-def torsion(n, c=5.0):
-    """int |grad v|^2/2 - c v over the unit square, |v| <= distance to the boundary."""
-    h = 1.0 / (n + 1)
-    line = sp.diags_array([-np.ones(n - 1), 2.0 * np.ones(n), -np.ones(n - 1)], offsets=[-1, 0, 1])
-    stiffness = sp.csr_array(sp.kron(line, sp.eye_array(n)) + sp.kron(sp.eye_array(n), line))
-    edge = np.minimum(np.arange(1, n + 1), n - np.arange(n)) * h
-    distance = np.minimum.outer(edge, edge).ravel()
-    return stiffness, np.full(n * n, -c * h * h), -distance, distance
-
-
-def bearing(n, b=10.0, e=0.1):
-    """int (1 + e cos x1)^3 |grad v|^2/2 - e sin(x1) v over (0, 2 pi) x (0, 2 b), v >= 0."""
-    hx, hy = 2 * np.pi / (n + 1), 2 * b / (n + 1)
-    nodes = np.arange(n + 2) * hx
-    w = (1 + e * np.cos(np.arange(-1, n + 3) * hx)) ** 3  # w[i + 1] belongs to node i
-    full = (n + 2) ** 2
-    rows, columns, values = [], [], []
-
-    def edge(p, q, weight):  # weight (v_p - v_q)^2 / 2
-        rows.extend([p, q, p, q])
-        columns.extend([p, q, q, p])
-        values.extend([weight, weight, -weight, -weight])
-
-    for i in range(n + 2):
-        lower, upper = (2 * w[i + 1] + w[i + 2]) / 6, (2 * w[i + 1] + w[i]) / 6
-        for j in range(n + 2):
-            p = i * (n + 2) + j
-            if i <= n and j <= n:
-                edge(p, p + n + 2, hx * hy * lower / hx**2)
-                edge(p, p + 1, hx * hy * lower / hy**2)
-            if i >= 1 and j >= 1:
-                edge(p, p - n - 2, hx * hy * upper / hx**2)
-                edge(p, p - 1, hx * hy * upper / hy**2)
-    stiffness = sp.csr_array(sp.coo_array((values, (rows, columns)), shape=(full, full)))
-    load = -np.repeat(e * hx * hy * np.sin(nodes), n + 2)
-    inner = np.arange(full).reshape(n + 2, n + 2)[1:-1, 1:-1].ravel()
-    return sp.csr_array(stiffness[inner][:, inner]), load[inner]
-
-
-@pytest.mark.parametrize("n", list(TORSION))
-def test_elastic_plastic_torsion(n):
-    stiffness, load, lower, upper = torsion(n)
-    solution = ssn.solve(ssn.ComplementarityProblem(ssn.AffineMap(stiffness, load), lower, upper)).require()
-    assert solution.objective == pytest.approx(TORSION[n], abs=1e-11)
-    assert 0.5 * solution.x @ (stiffness @ solution.x) + load @ solution.x == pytest.approx(
-        TORSION[n], abs=1e-11
-    )
-    assert residual(lambda x: stiffness @ x + load, solution.x, lower, upper) < 1e-9
-
-
-@pytest.mark.parametrize("n", list(BEARING))
-def test_journal_bearing(n):
-    stiffness, load = bearing(n)
-    solution = ssn.solve(ssn.ComplementarityProblem(ssn.AffineMap(stiffness, load))).require()
-    assert solution.objective == pytest.approx(BEARING[n], abs=1e-11)
-    assert (solution.multipliers["contact"] >= -1e-12).all()
-    assert residual(lambda x: stiffness @ x + load, solution.x) < 1e-8
-
-
 # I. Bongartz, A. Conn, N. Gould, Ph. Toint, ACM Trans. Math. Softw. 21 (1995) 123-160: optima printed in the files.
 # The objective is a sum over interior nodes, a quarter of the squared differences to the four neighbours each, so that
 # edges to the boundary have half weight.
 
 OBSTCLAE = {4: 0.753659753, 10: 1.397897560, 23: 1.678027027, 32: 1.748270032}
-TORSION1 = {2: -0.51851852, 5: -0.49234185, 11: -0.45608771}
-
-
-def half_weight_stiffness(n):
-    diagonal = 2.0 * np.ones(n)
-    diagonal[[0, -1]] = 1.5
-    line = sp.diags_array([-np.ones(n - 1), diagonal, -np.ones(n - 1)], offsets=[-1, 0, 1])
-    return sp.csr_array(sp.kron(line, sp.eye_array(n)) + sp.kron(sp.eye_array(n), line))
 
 
 @pytest.mark.parametrize("points", list(OBSTCLAE))
@@ -237,16 +166,6 @@ def test_membrane_over_an_obstacle(points):
     n, h = points - 2, 1.0 / (points - 1)
     t = np.arange(1, n + 1) * h
     obstacle = np.outer(np.sin(3.2 * t), np.sin(3.3 * t)).ravel()
-    F = ssn.AffineMap(half_weight_stiffness(n), np.full(n * n, -h * h))
+    F = ssn.AffineMap(double_obstacle.five_point(n, 0.5), np.full(n * n, -h * h))
     solution = ssn.solve(ssn.ComplementarityProblem(F, obstacle, 2000.0)).require()
     assert solution.objective == pytest.approx(OBSTCLAE[points], abs=1e-9)
-
-
-@pytest.mark.parametrize("q", list(TORSION1))
-def test_torsion_with_half_weight_edges(q):
-    n, h = 2 * q - 2, 1.0 / (2 * q - 1)
-    edge = np.minimum(np.arange(1, n + 1), n - np.arange(n)) * h
-    distance = np.minimum.outer(edge, edge).ravel()
-    F = ssn.AffineMap(half_weight_stiffness(n), np.full(n * n, -5.0 * h * h))
-    solution = ssn.solve(ssn.ComplementarityProblem(F, -distance, distance)).require()
-    assert solution.objective == pytest.approx(TORSION1[q], abs=1e-8)
