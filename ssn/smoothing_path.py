@@ -34,6 +34,8 @@ WAY_STEPS = 40
 WAYS_SHARE = 0.85
 # lengths below 2^-HALVINGS are not tried at a point of a nonlinear equation: a regularised step does better
 HALVINGS = 6
+# relative residual at most of an iterative solve that decides about pieces
+AFFINE_FORCING = 1e-3
 
 
 @dataclass(frozen=True)
@@ -47,7 +49,8 @@ class SmoothingPath:
     point_steps : int
         Newton steps at most at one point.
     contraction : float
-        Plain steps go on while each cuts the residual norm to this fraction.
+        Plain steps go on while each cuts the residual norm to this fraction; on a piecewise affine equation to this
+        fraction of the norm before it or of that one step earlier.
     settling : float
         At the start of a piecewise affine equation they also go on without contracting while the pieces settle: the
         first step changes at most this fraction of the pieces, the second at most half as many as the first, further
@@ -206,12 +209,14 @@ class _Follower:
         first, hard = eps, 0
         affine = bool(getattr(equation, "piecewise_affine", False))
         while not self.done():
-            at, slow = x, 0
+            at, slow, earlier, settled = x, 0, 0.0, False
             allowed = path.settling * x.size if affine and eps == first else 0.0
             while True:  # plain steps, as long as they contract or the pieces of the start settle
                 _rescaled(equation, at)
                 previous = equation.evaluate(at).norm
-                one = replace(self.limits, max_steps=1)
+                # the pieces of an affine equation are as good as the linear solve; once they stay, one tight solve ends
+                forcing = min(self.limits.forcing, AFFINE_FORCING) if affine else self.limits.forcing
+                one = replace(self.limits, max_steps=1, forcing=forcing, exact=self.limits.exact or settled)
                 part = self._stage(equation, solver, FullStep(), at, one, f"{way}eps = 0")
                 self._keep(equation, part)
                 if self.done():
@@ -219,13 +224,13 @@ class _Follower:
                 if not part.steps or not part.last.finite:
                     break
                 changes = part.steps[-1].piece_changes or 0
-                if part.last.norm > path.contraction * previous:
+                if part.last.norm > path.contraction * max(previous, earlier):
                     slow += 1
                     if not 0.0 < allowed >= changes or slow > path.patience:
                         break
                 # the second step must change half as many pieces as the first, further ones no more than the last
                 allowed = min(allowed, 0.5 * changes if at is x else changes)
-                at = part.last.x
+                at, earlier, settled = part.last.x, previous if affine else 0.0, affine and changes == 0
             _rescaled(equation, x)
             smoothed = equation.smoothed(eps)
             if smoothed_solver is None:
