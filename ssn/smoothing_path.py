@@ -27,7 +27,6 @@ from .status import Outcome
 
 ENDS = (Outcome.CONVERGED, Outcome.STOPPED, Outcome.INTERRUPTED)
 # ways to go on where the path from the start fails: steps at most
-WAY_STEPS = 40
 PLAIN_STEPS = 15
 WAY_STEPS = 40
 # share of all steps that the ways may use: the rest is for the search from the best point, which tells why it fails
@@ -126,7 +125,8 @@ class _Follower:
             return result
         self.most = max(1, int(WAYS_SHARE * self.limits.max_steps))
         way = "plain steps from the start"
-        self._plain(equation, self.start, PLAIN_STEPS, way)
+        # on an affine equation they settle a layer of the contact set a step, or recur, which ends them
+        self._plain(equation, self.start, WAY_STEPS if equation.piecewise_affine else PLAIN_STEPS, way)
         if self.done():
             return result
         other = equation.other_form()

@@ -7,8 +7,9 @@ from scipy.interpolate import RegularGridInterpolator
 
 import ssn
 from ssn.equations.complementarity import fischer_burmeister, mid_residual
+from ssn.newton import Limits
 from ssn.prepare import prepare
-from ssn.smoothing_path import SmoothingPath
+from ssn.smoothing_path import PLAIN_STEPS, SmoothingPath, follow_smoothing
 from ssn.status import Outcome
 
 
@@ -136,3 +137,19 @@ def test_plain_steps_go_on_while_the_pieces_settle():
     solution = ssn.solve(membrane(128), start).require()
     assert len(solution.steps) == len(plain.steps)
     assert {s.stage for s in solution.steps} == {"eps = 0"}
+
+
+def test_plain_steps_may_settle_one_layer_a_step():
+    """Where the path fails on an affine equation, plain steps go on as long as they move the contact set."""
+    n = 200
+    second = sp.diags_array([-np.ones(n - 1), 2.0 * np.ones(n), -np.ones(n - 1)], offsets=[-1, 0, 1])
+    x = np.linspace(0, 1, n + 2)[1:-1]
+    F = ssn.AffineMap(sp.csr_array(second), np.zeros(n))
+    problem = ssn.ComplementarityProblem(F, lower=0.5 - 8 * (x - 0.5) ** 2)
+    plan = prepare(problem, None)
+    blocked = SmoothingPath(point_steps=1, patience=0, contraction=0.0, interior=())
+    result = follow_smoothing(plan.equation, type(plan.solver), plan.start, Limits(), blocked, None)
+    plain = [step for step in result.steps if step.stage == "plain steps from the start"]
+    assert result.outcome is Outcome.CONVERGED
+    assert len(plain) > PLAIN_STEPS
+    assert result.steps[-1] is plain[-1]
