@@ -217,7 +217,7 @@ def picture(problem: ssn.ComplementarityProblem, solution: ssn.Solution) -> Any:
     right.set(title="contact area", xlabel=r"$x_1 / \sqrt{R d}$", aspect="equal")
     radius, peak, force = figures(problem, solution)
     figure.suptitle(
-        f"Ball on half-space, {n} x {n} panels: a = {radius:.4f} (1), p0 = {peak:.4f} ({PEAK:.4f}), "
-        f"F = {force:.5f} ({FORCE:.5f}), {len(solution.steps)} Newton steps"
+        f"Ball on half-space, {n} x {n} panels, {len(solution.steps)} Newton steps: radius {radius:.4f} (1), "
+        f"peak {peak:.4f} ({PEAK:.4f}),\nforce {force:.5f} ({FORCE:.5f}); closed form in brackets"
     )
     return figure

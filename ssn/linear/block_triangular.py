@@ -43,9 +43,8 @@ def block_order(matrix: sp.csc_array) -> tuple[npt.NDArray[np.intp], npt.NDArray
     sizes = np.bincount(labels)
     if number == 1 or number > MOST_BLOCKS or 2 * int(sizes.max()) > n:
         return None
+    # the search labels a block after those it depends on; that is how it works, but not what it promises
     if (labels[rows] < labels[columns]).any():
-        labels, sizes = number - 1 - labels, sizes[::-1]
-    if (labels[rows] < labels[columns]).any():  # labels do not come in topological order
         return None
     return np.argsort(labels, kind="stable"), np.concatenate([[0], np.cumsum(sizes)])
 

@@ -17,8 +17,7 @@ def time_stepping(shuffled: bool, upper: bool = False) -> sp.csc_array:
         [-np.ones(SIZE - 1), 3.0 * np.ones(SIZE), -1.5 * np.ones(SIZE - 1)], offsets=[-1, 0, 1]
     )
     rng = np.random.default_rng(3)
-    coupling = sp.random_array((SIZE, SIZE), density=0.02, rng=rng) if hasattr(sp, "random_array") else None
-    coupling = sp.eye_array(SIZE) if coupling is None else coupling + sp.eye_array(SIZE)
+    coupling = sp.eye_array(SIZE) + 0.3 * sp.eye_array(SIZE, k=7) - 0.2 * sp.eye_array(SIZE, k=-3)
     before = sp.eye_array(BLOCKS, k=1 if upper else -1)
     matrix = sp.csc_array(sp.kron(sp.eye_array(BLOCKS), second) - sp.kron(before, coupling))
     if shuffled:
