@@ -72,6 +72,8 @@ def test_other_matrices_are_factorised_as_a_whole():
 
 def test_a_singular_block_is_singular():
     matrix = time_stepping(False).tolil()
-    matrix[3 * SIZE + 4, 3 * SIZE : 4 * SIZE] = matrix[3 * SIZE + 5, 3 * SIZE : 4 * SIZE]
+    row = 3 * SIZE + 4
+    block = slice(3 * SIZE, 4 * SIZE)
+    matrix[row : row + 1, block] = matrix[row + 1 : row + 2, block]
     with pytest.raises(SingularMatrixError):
         Factorization(sp.csc_array(matrix))
