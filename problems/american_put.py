@@ -8,8 +8,8 @@ money, times in years, rates a year.
 
 case="put": P = max(K - S, 0), central differences on n prices, dense near the strike.
     Sources: F. Longstaff, E. Schwartz, Rev. Financial Studies 14 (2001) 113-147, Table 1, for K = 40, r = 0.06 (their
-    finite differences allow exercise on 50 days a year, so that the values here are higher by 0.003 to 0.009); Discrete
-    Dynamics in Nature and Society 2014, 369795, Table 3.
+    finite differences allow exercise on 50 days a year, which parameter dates=50 does, too; at any time the values are
+    higher by 0.003 to 0.009); Discrete Dynamics in Nature and Society 2014, 369795, Table 3.
 case="minimum": P = max(K - min(S1, S2), 0), two correlated assets.
     Source: P. Boyle, J. Financial Quant. Anal. 23 (1988) 1-12, table of American puts on the minimum (from memory).
 case="geometric": P = max(K - sqrt(S1 S2), 0). The geometric mean is itself lognormal, with volatility
@@ -36,6 +36,7 @@ from ssn.plotting import new_figure
 FloatArray = npt.NDArray[np.float64]
 
 SIZES = (32, 64, 128)
+STEPS_A_DATE = 4  # time steps between two dates of exercise
 CASES = ("put", "minimum", "geometric")
 
 #: (strike, rate, volatility, expiry) -> price of the asset -> value, digits, source
@@ -74,6 +75,7 @@ class MeshData:
     rate: float
     volatility: float
     expiry: float
+    dates: int
     times: FloatArray
     line: FloatArray
     payoff: FloatArray
@@ -86,6 +88,7 @@ def build(
     rate: float = 0.06,
     volatility: float = 0.2,
     expiry: float = 1.0,
+    dates: int = 0,
 ) -> ssn.ComplementarityProblem:
     """Build the complementarity problem.
 
@@ -98,6 +101,9 @@ def build(
         K in money, positive.
     rate, volatility, expiry : float
         r and s a year, T in years, positive; case "put" only, two assets have the data of the module docstring.
+    dates : int
+        Number of dates, equally far apart, at which the right may be used, the last at expiry; 0: at any time. Case
+        "put" only.
 
     Raises
     ------
@@ -111,18 +117,24 @@ def build(
     for name, value in {"strike": strike, "rate": rate, "volatility": volatility, "expiry": expiry}.items():
         if not (value > 0.0 and np.isfinite(value)):
             raise ssn.InputError(f"{name} must be positive and finite, got {value!r}")
+    if isinstance(dates, bool) or not isinstance(dates, int | np.integer) or dates < 0:
+        raise ssn.InputError(f"dates must be 0 or a positive whole number, got {dates!r}")
     if case != "put":
-        if (rate, volatility, expiry) != (0.06, 0.2, 1.0):
+        if (rate, volatility, expiry, dates) != (0.06, 0.2, 1.0, 0):
             raise ssn.InputError(
-                f"rate, volatility and expiry have no effect with case={case!r}; leave them out"
+                f"rate, volatility, expiry and dates have no effect with case={case!r}; leave them out"
             )
         return _pair(int(n), case, float(strike))
     line, operator, inflow, payoff = one_asset(int(n), strike, rate, volatility, expiry)
-    times = expiry * (np.arange(1, n // 2 + 1) / (n // 2)) ** 2
-    problem = _all_times(operator, inflow, payoff, times)
-    problem.mesh_data = MeshData(
-        int(n), case, float(strike), float(rate), float(volatility), float(expiry), times, line, payoff
-    )
+    if dates:
+        times = np.linspace(0.0, expiry, STEPS_A_DATE * dates + 1)[1:]
+        allowed = np.arange(1, times.size + 1) % STEPS_A_DATE == 0
+    else:
+        times = expiry * (np.arange(1, n // 2 + 1) / (n // 2)) ** 2
+        allowed = np.ones(times.size, dtype=bool)
+    problem = _all_times(operator, inflow, payoff, times, allowed)
+    data = (float(strike), float(rate), float(volatility), float(expiry), int(dates))
+    problem.mesh_data = MeshData(int(n), case, *data, times, line, payoff)
     return problem
 
 
@@ -183,12 +195,16 @@ def _pair(n: int, case: str, strike: float) -> ssn.ComplementarityProblem:
     times = expiry * (np.arange(1, max(4, n // 4) + 1) / max(4, n // 4)) ** 2
     value = payoff.ravel()[inner]
     problem = _all_times(sp.csr_array(full[inner][:, inner]), inflow, value, times)
-    problem.mesh_data = MeshData(n, case, strike, rate, np.nan, expiry, times, line[1:-1], value)
+    problem.mesh_data = MeshData(n, case, strike, rate, np.nan, expiry, 0, times, line[1:-1], value)
     return problem
 
 
 def _all_times(
-    operator: sp.csr_array, inflow: FloatArray, payoff: FloatArray, times: FloatArray
+    operator: sp.csr_array,
+    inflow: FloatArray,
+    payoff: FloatArray,
+    times: FloatArray,
+    allowed: npt.NDArray[np.bool_] | None = None,
 ) -> ssn.ComplementarityProblem:
     """F_k = (1 + w dt A) V_k - (1 - (1 - w) dt A) V_(k-1) + dt inflow; w = 1 in the first two steps, 1/2 beyond."""
     steps = np.diff(times, prepend=0.0)
@@ -204,7 +220,10 @@ def _all_times(
     # where the payoff is zero the right is never used: the value is positive without being told, by less than rounding
     # far away, where a bound would be met and missed at the same time
     lower = np.where(payoff > 0.0, payoff, -np.inf)
-    return ssn.ComplementarityProblem(ssn.AffineMap(sp.csr_array(now - before), q), np.tile(lower, m))
+    bound = np.tile(lower, (m, 1))
+    if allowed is not None:
+        bound[~allowed] = -np.inf
+    return ssn.ComplementarityProblem(ssn.AffineMap(sp.csr_array(now - before), q), bound.ravel())
 
 
 def transfer(
@@ -272,6 +291,15 @@ def known(problem: ssn.ComplementarityProblem, solution: ssn.Solution) -> list[d
     checks = []
     data = (mesh.strike, mesh.rate, mesh.volatility, mesh.expiry)
     error = 2.5 * mesh.volatility * mesh.strike / mesh.n**2  # of the scheme: second order, measured
+    if mesh.dates:
+        if mesh.dates == round(50 * mesh.expiry) and data in FIFTY_DAYS:
+            source = "Longstaff and Schwartz (2001), Table 1, finite differences, 50 days of exercise a year"
+            for s, expected in FIFTY_DAYS[data].items():
+                computed = price(problem, solution, s)
+                checks.append(
+                    _check(f"value at price {s:g}, 0.001 and mesh", expected, computed, 1e-3 + error, source)
+                )
+        return checks
     if data in TABLE:
         values, digits, source = TABLE[data]
         for s, expected in values.items():
@@ -342,12 +370,18 @@ def picture(problem: ssn.ComplementarityProblem, solution: ssn.Solution) -> Any:
         left.plot(mesh.line[shown], solution.x[-size:][shown], color="C0", label="value today")
         left.set(xlabel="price of the asset", title="value")
         left.legend(frameon=False)
-        right.plot(mesh.expiry - mesh.times, exercise_prices(problem, solution), color="C1")
+        used = exercised(problem, solution).any(axis=1)
+        right.plot(
+            (mesh.expiry - mesh.times)[used],
+            exercise_prices(problem, solution)[used],
+            color="C1",
+            marker="." if mesh.dates else "",
+        )
         right.axhline(mesh.strike, color="0.6", lw=0.8, ls="--")
         right.set(
             xlabel="time (years)", title="sell below this price; dashed: strike", ylabel="price of the asset"
         )
-        name = f"r = {mesh.rate:g}, s = {mesh.volatility:g}"
+        name = f"r = {mesh.rate:g}, s = {mesh.volatility:g}" + (f", {mesh.dates} dates" if mesh.dates else "")
     else:
         k = mesh.line.size
         prices = mesh.strike * np.exp(mesh.line)

@@ -44,6 +44,21 @@ def test_published_values(n, volatility):
     assert [check for check in checks if not check["holds"]] == []
 
 
+@pytest.mark.parametrize("volatility", [0.2, 0.4])
+def test_fifty_days_of_exercise(volatility):
+    """Longstaff and Schwartz (2001), Table 1: their finite differences allow exercise on 50 days a year."""
+    problem = put.build(128, volatility=volatility, dates=50)
+    solution = ssn.solve(problem).require()
+    checks = put.known(problem, solution)
+    assert len(checks) == 5
+    assert [check for check in checks if not check["holds"]] == []
+    assert max(abs(c["computed"] - c["expected"]) for c in checks) < 1.5e-3
+    fewer = put.build(128, volatility=volatility, dates=5)
+    assert put.price(fewer, ssn.solve(fewer).require(), 38.0) < put.price(problem, solution, 38.0) - 0.01
+    used = put.exercised(problem, solution).any(axis=1)
+    assert np.flatnonzero(used).tolist() == list(range(3, 200, 4))
+
+
 def test_values_converge_with_second_order():
     errors = []
     for n in (50, 200):
@@ -154,6 +169,8 @@ def test_few_steps_from_mesh_to_mesh(options):
         ({"strike": 0.0}, "strike must be positive"),
         ({"volatility": np.inf}, "volatility must be positive"),
         ({"case": "minimum", "rate": 0.1}, "have no effect with case='minimum'"),
+        ({"case": "minimum", "dates": 5}, "have no effect with case='minimum'"),
+        ({"dates": -1}, "dates must be 0 or"),
     ],
 )
 def test_unusable_parameters_are_named(arguments, message):
@@ -161,9 +178,9 @@ def test_unusable_parameters_are_named(arguments, message):
         put.build(**{"n": 16, **arguments})
 
 
-@pytest.mark.parametrize("case", put.CASES)
-def test_picture_is_drawn(case):
-    problem = put.build(16, case=case)
+@pytest.mark.parametrize("options", [{"case": case} for case in put.CASES] + [{"dates": 10}])
+def test_picture_is_drawn(options):
+    problem = put.build(16, **options)
     buffer = io.BytesIO()
     put.picture(problem, ssn.solve(problem)).savefig(buffer, format="png", dpi=40)
     assert buffer.getvalue().startswith(b"\x89PNG")
