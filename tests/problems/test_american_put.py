@@ -44,16 +44,16 @@ def test_published_values(n, volatility):
     assert [check for check in checks if not check["holds"]] == []
 
 
-@pytest.mark.parametrize("volatility", [0.2, 0.4])
-def test_fifty_days_of_exercise(volatility):
+@pytest.mark.parametrize(("n", "volatility"), [(96, 0.2), (64, 0.4)])
+def test_fifty_days_of_exercise(n, volatility):
     """Longstaff and Schwartz (2001), Table 1: their finite differences allow exercise on 50 days a year."""
-    problem = put.build(128, volatility=volatility, dates=50)
+    problem = put.build(n, volatility=volatility, dates=50)
     solution = ssn.solve(problem).require()
     checks = put.known(problem, solution)
     assert len(checks) == 5
     assert [check for check in checks if not check["holds"]] == []
-    assert max(abs(c["computed"] - c["expected"]) for c in checks) < 1.5e-3
-    fewer = put.build(128, volatility=volatility, dates=5)
+    assert max(abs(c["computed"] - c["expected"]) for c in checks) < (2e-3 if n == 96 else 6e-3)
+    fewer = put.build(n, volatility=volatility, dates=5)
     assert put.price(fewer, ssn.solve(fewer).require(), 38.0) < put.price(problem, solution, 38.0) - 0.01
     used = put.exercised(problem, solution).any(axis=1)
     assert np.flatnonzero(used).tolist() == list(range(3, 200, 4))
@@ -61,13 +61,13 @@ def test_fifty_days_of_exercise(volatility):
 
 def test_values_converge_with_second_order():
     errors = []
-    for n in (50, 200):
+    for n in (40, 120):
         problem = put.build(n)
         values = put.TABLE[40.0, 0.06, 0.2, 1.0][0]
         solution = ssn.solve(problem).require()
         errors.append(max(abs(put.price(problem, solution, s) - v) for s, v in values.items()))
-    assert errors[1] < errors[0] / 10
-    assert errors[1] < 5e-4
+    assert errors[1] < errors[0] / 6
+    assert errors[1] < 1.2e-3
 
 
 @pytest.mark.parametrize(("rate", "volatility", "expiry"), [(0.03, 0.3, 0.5), (0.1, 0.2, 2.0)])
@@ -75,7 +75,7 @@ def test_values_agree_with_a_binomial_tree(rate, volatility, expiry):
     problem = put.build(128, strike=100.0, rate=rate, volatility=volatility, expiry=expiry)
     solution = ssn.solve(problem).require()
     for s in (90.0, 100.0, 115.0):
-        tree = np.mean([binomial(s, 100.0, rate, volatility, expiry, k) for k in (800, 801)])
+        tree = np.mean([binomial(s, 100.0, rate, volatility, expiry, k) for k in (400, 401)])
         assert put.price(problem, solution, s) == pytest.approx(tree, abs=8e-3)
         assert put.price(problem, solution, s) > european(s, 100.0, rate, volatility, expiry)
 

@@ -64,14 +64,15 @@ def test_few_steps_from_mesh_to_mesh(refined):
 
 def test_disc_converges_in_l2():
     errors = []
-    for n in NUMBERS:
+    numbers = (16, 32, 64)
+    for n in numbers:
         problem = double_obstacle.build(n)
         x = ssn.solve(problem).require().x
         data = problem.mesh_data
         errors.append(data.h * np.linalg.norm(x - double_obstacle.exact_solution(np.hypot(data.x1, data.x2))))
-    slope = np.polyfit(np.log([4.0 / (n + 1) for n in NUMBERS]), np.log(errors), 1)[0]
+    slope = np.polyfit(np.log([4.0 / (n + 1) for n in numbers]), np.log(errors), 1)[0]
     assert 1.8 <= slope < 2.5
-    assert errors[-1] < 1e-3
+    assert errors[-1] < 4e-3
 
 
 @pytest.mark.parametrize("points", list(double_obstacle.PRINTED))
@@ -123,5 +124,5 @@ def test_picture_is_drawn(case):
     for n in (2, 9):
         problem = double_obstacle.build(n, case=case)
         buffer = io.BytesIO()
-        double_obstacle.picture(problem, ssn.solve(problem)).savefig(buffer, format="png", dpi=40)
+        double_obstacle.picture(problem, ssn.solve(problem)).savefig(buffer, format="png", dpi=20)
         assert buffer.getvalue().startswith(b"\x89PNG")
