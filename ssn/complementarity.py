@@ -155,10 +155,14 @@ class ComplementarityProblem:
         with np.errstate(all="ignore"):
             derivative = self.derivative(x)
         if isinstance(derivative, LinearOperator):
-            return np.ones(self.unknowns)
-        diagonal = np.abs(derivative.diagonal())
-        rows = np.asarray(abs(derivative).sum(axis=1)).ravel()
-        diagonal = np.where(diagonal > 1e-8 * rows, diagonal, rows)
+            known = getattr(self.map, "diagonal", None)
+            if known is None:
+                return np.ones(self.unknowns)
+            diagonal = np.abs(known)
+        else:
+            diagonal = np.abs(derivative.diagonal())
+            rows = np.asarray(abs(derivative).sum(axis=1)).ravel()
+            diagonal = np.where(diagonal > 1e-8 * rows, diagonal, rows)
         usable = np.isfinite(diagonal) & (diagonal > 0)
         if not usable.any():
             return np.ones(self.unknowns)

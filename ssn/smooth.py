@@ -152,18 +152,39 @@ class AffineMap:
 
     Parameters
     ----------
-    M : sparse array or array, shape (n, n)
+    M : sparse array, array or LinearOperator, shape (n, n)
+        Newton systems of an operator are solved by conjugate gradients where it is symmetric, by GMRES otherwise.
     q : array, shape (n,)
+    diagonal : array, shape (n,), optional
+        Of an operator, needed: it brings F to the unit of x and preconditions.
+    symmetric : bool, optional
+        Whether an operator is symmetric, needed; `ssn.evidence.check_derivative` tests it. Explicit matrices are
+        looked at.
+
+    Raises
+    ------
+    InputError
+        For shapes that do not fit, entries that are not finite, an operator without `diagonal` or `symmetric`, or an
+        explicit matrix with them.
     """
 
     affine = True
 
-    def __init__(self, M: Any, q: Any) -> None:
+    def __init__(self, M: Any, q: Any, *, diagonal: Any = None, symmetric: bool | None = None) -> None:
         self.M = as_square(M, "M")
-        if isinstance(self.M, LinearOperator):
-            raise InputError("AffineMap needs an explicit matrix M")
         self.q = float_array(q, "q", shape=(self.M.shape[0],))
         self.size = int(self.M.shape[0])
+        self.diagonal: FloatArray | None = None
+        if isinstance(self.M, LinearOperator):
+            if diagonal is None or symmetric is None:
+                raise InputError(
+                    "an operator M does not show its diagonal and symmetry: give diagonal= and symmetric="
+                )
+            self.diagonal = float_array(diagonal, "diagonal", shape=(self.size,))
+            self.symmetric = bool(symmetric)
+            return
+        if diagonal is not None or symmetric is not None:
+            raise InputError("diagonal= and symmetric= are for an operator M; an explicit matrix shows them")
         self.symmetric = is_symmetric(self.M)
 
     def value(self, x: FloatArray) -> FloatArray:

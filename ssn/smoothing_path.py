@@ -1,12 +1,13 @@
 """Smoothing path: follow the roots of the smoothed equation as eps falls, and end with plain steps at eps = 0.
 
-At each point one plain Newton step at eps = 0 is tried; while plain steps contract they go on, and their point is
-taken when they converge. Otherwise the smoothed equation is solved roughly at eps, eps falls by a factor (a smaller
-one after an easy point, a larger one after a hard point), and so on. The path is guaranteed for monotone-like (P0) maps
-with bounded level sets; where it does not work it stops and says so. Equations that have another form and an interior
-(complementarity) are then tried in other ways, in this order, each with a share of the steps left: plain steps from the
-start, the path on the Fischer-Burmeister form, and paths that begin inside the bounds with a large eps, where the start
-is forgotten. The stage of each record names the way.
+At each point one plain Newton step at eps = 0 is tried; while plain steps contract, or the pieces at the start of a
+piecewise affine equation settle, they go on, and their point is taken when they converge. Otherwise the smoothed
+equation is solved roughly at eps, eps falls by a factor (a smaller one after an easy point, a larger one after a hard
+point), and so on.
+The path is guaranteed for monotone-like (P0) maps with bounded level sets; where it does not work it stops and says so.
+Equations that have another form and an interior (complementarity) are then tried in other ways, in this order, each
+with a share of the steps left: plain steps from the start, the path on the Fischer-Burmeister form, and paths that
+begin inside the bounds with a large eps, where the start is forgotten. The stage of each record names the way.
 
 Source: B. Chen and P. T. Harker, SIAM J. Matrix Anal. Appl. 14 (1993) 1168-1190; C. Kanzow, SIAM J. Matrix Anal.
 Appl. 17 (1996) 851-868 (both from memory), for the smoothed minimum.
@@ -26,13 +27,14 @@ from .status import Outcome
 
 ENDS = (Outcome.CONVERGED, Outcome.STOPPED, Outcome.INTERRUPTED)
 # ways to go on where the path from the start fails: steps at most
-WAY_STEPS = 40
 PLAIN_STEPS = 15
 WAY_STEPS = 40
 # share of all steps that the ways may use: the rest is for the search from the best point, which tells why it fails
 WAYS_SHARE = 0.85
 # lengths below 2^-HALVINGS are not tried at a point of a nonlinear equation: a regularised step does better
 HALVINGS = 6
+# relative residual at most of an iterative solve that decides about pieces
+AFFINE_FORCING = 1e-3
 
 
 @dataclass(frozen=True)
@@ -46,7 +48,15 @@ class SmoothingPath:
     point_steps : int
         Newton steps at most at one point.
     contraction : float
-        Plain steps go on while each cuts the residual norm to this fraction.
+        Plain steps go on while each cuts the residual norm to this fraction; on a piecewise affine equation to this
+        fraction of the norm before it or of that one step earlier.
+    settling : float
+        At the start of a piecewise affine equation they also go on without contracting while the pieces settle: the
+        first step changes at most this fraction of the pieces, the second at most half as many as the first, further
+        ones no more than the one before. The solution on a coarser mesh is near enough in this sense long before its
+        residual contracts.
+    patience : int
+        Steps at most that go on in this way.
     least : float
         eps at which the path is given up, as a fraction of the first one.
     interior : tuple of float
@@ -57,6 +67,8 @@ class SmoothingPath:
     factor: float = 0.1
     point_steps: int = 12
     contraction: float = 0.3
+    settling: float = 0.1
+    patience: int = 4
     least: float = 1e-12
     interior: tuple[float, ...] = (1.0, 10.0, 0.1)
 
@@ -113,7 +125,8 @@ class _Follower:
             return result
         self.most = max(1, int(WAYS_SHARE * self.limits.max_steps))
         way = "plain steps from the start"
-        self._plain(equation, self.start, PLAIN_STEPS, way)
+        # on an affine equation they settle a layer of the contact set a step, or recur, which ends them
+        self._plain(equation, self.start, WAY_STEPS if equation.piecewise_affine else PLAIN_STEPS, way)
         if self.done():
             return result
         other = equation.other_form()
@@ -194,26 +207,35 @@ class _Follower:
         solver = self.make_solver(equation)
         smoothed_solver: Any = None
         first, hard = eps, 0
+        affine = bool(getattr(equation, "piecewise_affine", False))
         while not self.done():
-            at = x
-            while True:  # plain steps, as long as they contract
+            at, slow, earlier, settled = x, 0, 0.0, False
+            allowed = path.settling * x.size if affine and eps == first else 0.0
+            while True:  # plain steps, as long as they contract or the pieces of the start settle
                 _rescaled(equation, at)
                 previous = equation.evaluate(at).norm
-                one = replace(self.limits, max_steps=1)
+                # the pieces of an affine equation are as good as the linear solve; once they stay, one tight solve ends
+                forcing = min(self.limits.forcing, AFFINE_FORCING) if affine else self.limits.forcing
+                one = replace(self.limits, max_steps=1, forcing=forcing, exact=self.limits.exact or settled)
                 part = self._stage(equation, solver, FullStep(), at, one, f"{way}eps = 0")
                 self._keep(equation, part)
                 if self.done():
                     return
-                contracted = bool(part.steps) and part.last.norm <= path.contraction * previous
-                if not contracted:
+                if not part.steps or not part.last.finite:
                     break
-                at = part.last.x
+                changes = part.steps[-1].piece_changes or 0
+                if part.last.norm > path.contraction * max(previous, earlier):
+                    slow += 1
+                    if not 0.0 < allowed >= changes or slow > path.patience:
+                        break
+                # the second step must change half as many pieces as the first, further ones no more than the last
+                allowed = min(allowed, 0.5 * changes if at is x else changes)
+                at, earlier, settled = part.last.x, previous if affine else 0.0, affine and changes == 0
             _rescaled(equation, x)
             smoothed = equation.smoothed(eps)
             if smoothed_solver is None:
                 smoothed_solver = self.make_solver(smoothed)
             smoothed_solver.equation = smoothed  # the pattern stays, and with it the symbolic factorisation
-            affine = bool(getattr(equation, "piecewise_affine", False))
             search = ResidualSearch(memory=1, max_halvings=10 if affine else HALVINGS).fresh()
             point = Limits(tolerance=0.5, max_steps=min(path.point_steps, last_step - len(result.steps)))
             part = self._stage(smoothed, smoothed_solver, search, x, point, f"{way}eps = {eps:.1e}")

@@ -92,12 +92,10 @@ def _smooth_blocks(problem: Any) -> tuple[Any, FloatArray, Any, FloatArray] | No
     n = problem.unknowns
     none = sp.csr_array((0, n))
     if isinstance(problem, ComplementarityProblem):
-        return (
-            sp.csc_array(problem.derivative(problem.start())),
-            problem.value(np.zeros(n)),
-            none,
-            np.zeros(0),
-        )
+        matrix = problem.derivative(problem.start())
+        if isinstance(matrix, LinearOperator):
+            return None
+        return sp.csc_array(matrix), problem.value(np.zeros(n)), none, np.zeros(0)
     if isinstance(problem, CompositeProblem):
         return part_blocks(problem.part, n)
     return control_blocks(problem)

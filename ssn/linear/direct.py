@@ -13,6 +13,7 @@ from scipy.sparse.linalg import splu
 
 from ..work import WorkCounts
 from . import cholmod
+from .block_triangular import BlockTriangularFactor, block_order
 
 FloatArray = npt.NDArray[np.float64]
 
@@ -47,6 +48,7 @@ class Factorization:
     Notes
     -----
     `refactorize` reuses the ordering (CHOLMOD: the whole symbolic factor; SuperLU: the column permutation).
+    Of nonsymmetric sparse matrices that are block triangular in some order only the diagonal blocks are factorised.
     """
 
     def __init__(
@@ -155,7 +157,11 @@ class Factorization:
         try:
             with warnings.catch_warnings():
                 warnings.simplefilter("ignore")
-                if self._permutation is None:
+                blocks = None if self.symmetric else block_order(a)
+                if blocks is not None:
+                    self.method = "SuperLU by blocks"
+                    self._lu, self._ordered = BlockTriangularFactor(a, *blocks), False
+                elif self._permutation is None:
                     spec = "MMD_AT_PLUS_A" if self.symmetric else "COLAMD"
                     self._lu = splu(a, permc_spec=spec, **options)
                     self._permutation = np.argsort(self._lu.perm_c) if self.symmetric else None

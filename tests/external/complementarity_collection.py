@@ -1,93 +1,40 @@
 """Published complementarity problems with known solutions, derivatives by hand, and a box of starts with a seed each.
 
+The classic small ones stand in problems/complementarity_set.py; here they are joined by optimality systems, and by
+three discretised problems.
+
 Boxes and seeds were fixed before any method was tuned on them. Starts are drawn uniformly from the box, which reaches
 over both sides of the bounds, except where the source says that the problem means nothing there. Components of
 `LINE` problems (no bound, free multipliers) are drawn in the same way.
 
-`provenance` of a problem: "read" (a copy of the source or a text that quotes it was read), "memory" (statement and
-figures recalled, then confirmed by an independent computation that reproduces the printed figures). Solutions are
-listed to the printed digits or better; `refined` carries them to rounding level, one smooth piece at a time, with a
-root finder that shares nothing with the kernel.
+Solutions are listed to the printed digits or better; `refined` carries them to rounding level, one smooth piece at a
+time, with a root finder that shares nothing with the kernel.
 """
 
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from pathlib import Path
 from typing import Any
 
 import numpy as np
 import scipy.optimize
 import scipy.sparse as sp
 
+from ssn.problem_file import load_module
+
 INF = np.inf
 
 
-@dataclass(frozen=True)
-class Published:
-    """lower <= x <= upper with F(x) normal to the box.
+def problem_file(name: str) -> Any:
+    """The module problems/name.py."""
+    return load_module(Path(__file__).resolve().parents[2] / "problems" / f"{name}.py")
 
-    Attributes
-    ----------
-    name, source, provenance : str
-    value, derivative : callable
-    lower, upper : array, shape (n,)
-    box : tuple of two arrays
-        Starts are drawn uniformly between them.
-    seed : int
-    solutions : tuple of arrays
-        As printed in the source (`digits` of them hold) or exact.
-    digits : float
-        Absolute error of the listed solutions.
-    complete : bool
-        Whether the list holds every solution (proved by enumeration, uniqueness or the source).
-    caution : str
-        What is known to be hard about it.
-    member : callable, optional
-        x -> distance to the solution set, where it is not a list of points.
-    """
 
-    name: str
-    source: str
-    provenance: str
-    value: Callable[[np.ndarray], np.ndarray]
-    derivative: Callable[[np.ndarray], Any]
-    lower: np.ndarray
-    upper: np.ndarray
-    box: tuple[np.ndarray, np.ndarray]
-    seed: int
-    solutions: tuple[np.ndarray, ...]
-    digits: float = 1e-9
-    complete: bool = True
-    caution: str = ""
-    member: Callable[[np.ndarray], float] | None = None
-    affine: bool = False
-
-    @property
-    def size(self) -> int:
-        return self.lower.size
-
-    def starts(self, number: int) -> np.ndarray:
-        """The first `number` seeded starts, shape (number, n)."""
-        rng = np.random.default_rng(self.seed)
-        return self.box[0] + (self.box[1] - self.box[0]) * rng.random((number, self.size))
-
-    def residual(self, x: np.ndarray) -> float:
-        """max |mid(x - upper, x - lower, F)|, F divided by max(1, sum |F'_ij|) of its row; shares nothing with ssn."""
-        with np.errstate(all="ignore"):
-            force = self.value(x)
-            derivative = self.derivative(x)
-        if not np.isfinite(force).all():
-            return INF
-        rows = np.asarray(abs(derivative).sum(axis=1)).ravel()
-        scaled = force / np.maximum(1.0, rows)
-        return float(np.abs(np.maximum(np.minimum(scaled, x - self.lower), x - self.upper)).max())
-
-    def distance(self, x: np.ndarray) -> float:
-        """Largest difference from the nearest known solution."""
-        if self.member is not None:
-            return self.member(x)
-        return min(float(np.abs(x - s).max()) for s in self.solutions)
+classic = problem_file("complementarity_set")
+Published, linear = classic.Published, classic.linear
+_array, _box, _orthant = classic._array, classic._box, classic._orthant
+cyclic_matrix = classic.cyclic_matrix
 
 
 def refined(problem: Published, x: np.ndarray) -> np.ndarray:
@@ -111,226 +58,6 @@ def refined(problem: Published, x: np.ndarray) -> np.ndarray:
 
     found = scipy.optimize.root(lambda y: problem.value(fill(y))[free], x[free], jac=dense, tol=1e-14)
     return fill(found.x)
-
-
-def _array(*numbers: float) -> np.ndarray:
-    return np.array(numbers, dtype=float)
-
-
-def _orthant(n: int) -> tuple[np.ndarray, np.ndarray]:
-    return np.zeros(n), np.full(n, INF)
-
-
-def _box(n: int, low: float, high: float) -> tuple[np.ndarray, np.ndarray]:
-    return np.full(n, low), np.full(n, high)
-
-
-# --- polynomial examples ------------------------------------------------------------------------------------------
-
-
-def _kojima_value(
-    third: float, constants: tuple[float, ...], fourth: float
-) -> Callable[[np.ndarray], np.ndarray]:
-    def value(x: np.ndarray) -> np.ndarray:
-        a, b, c, d = x
-        return np.array([
-            3 * a * a + 2 * a * b + 2 * b * b + c + 3 * d - constants[0],
-            2 * a * a + a + b * b + third * c + 2 * d - constants[1],
-            3 * a * a + a * b + 2 * b * b + 2 * c + fourth * d - constants[2],
-            a * a + 3 * b * b + 2 * c + 3 * d - constants[3],
-        ])  # fmt: skip
-
-    return value
-
-
-def _kojima_derivative(third: float, fourth: float) -> Callable[[np.ndarray], np.ndarray]:
-    def derivative(x: np.ndarray) -> np.ndarray:
-        a, b = x[0], x[1]
-        return np.array([
-            [6 * a + 2 * b, 2 * a + 4 * b, 1, 3],
-            [4 * a + 1, 2 * b, third, 2],
-            [6 * a + b, a + 4 * b, 2, fourth],
-            [2 * a, 6 * b, 2, 3],
-        ])  # fmt: skip
-
-    return derivative
-
-
-_DEGENERATE = _array(np.sqrt(6) / 2, 0, 0, 0.5)
-
-KOJIMA_SHINDO = Published(
-    name="Kojima-Shindo",
-    source="M. Kojima, S. Shindo, J. Oper. Res. Soc. Japan 29 (1986) 352-374",
-    provenance="read",
-    value=_kojima_value(10, (6, 2, 9, 3), 9),
-    derivative=_kojima_derivative(10, 9),
-    lower=_orthant(4)[0],
-    upper=_orthant(4)[1],
-    box=_box(4, -1.0, 5.0),
-    seed=101,
-    solutions=(_DEGENERATE, _array(1, 0, 3, 0)),
-    caution="one solution is degenerate, and F' is not monotone",
-)
-
-JOSEPHY = Published(
-    name="Josephy",
-    source="N. Josephy, University of Wisconsin, MRC report 1965 (1979)",
-    provenance="read",
-    value=_kojima_value(3, (6, 2, 1, 3), 3),
-    derivative=_kojima_derivative(3, 3),
-    lower=_orthant(4)[0],
-    upper=_orthant(4)[1],
-    box=_box(4, -1.0, 5.0),
-    seed=102,
-    solutions=(_DEGENERATE,),
-    caution="degenerate solution, F' not monotone",
-)
-
-BILLUPS = Published(
-    name="Billups",
-    source="S. Billups, thesis, University of Wisconsin (1995)",
-    provenance="read",
-    value=lambda x: (x - 1) ** 2 - 1.01,
-    derivative=lambda x: np.array([[2 * (x[0] - 1)]]),
-    lower=_orthant(1)[0],
-    upper=_orthant(1)[1],
-    box=_box(1, -1.0, 5.0),
-    seed=103,
-    solutions=(_array(1 + np.sqrt(1.01)),),
-    caution="merit functions have a local minimiser near 0 that is no root",
-)
-
-# --- economic equilibria ------------------------------------------------------------------------------------------
-
-
-def _mathiesen_value(x: np.ndarray) -> np.ndarray:
-    y, p, q, r = x
-    income = 5 * q + 3 * r
-    return np.array([-p + q + r, y - 0.9 * income / p, 5 - y - 0.1 * income / q, 3 - y])
-
-
-def _mathiesen_derivative(x: np.ndarray) -> np.ndarray:
-    _, p, q, r = x
-    income = 5 * q + 3 * r
-    return np.array([
-        [0, -1, 1, 1],
-        [1, 0.9 * income / p**2, -4.5 / p, -2.7 / p],
-        [-1, 0, 0.3 * r / q**2, -0.3 / q],
-        [-1, 0, 0, 0],
-    ])  # fmt: skip
-
-
-def _mathiesen_distance(x: np.ndarray) -> float:
-    scale = x[2]
-    if not scale > 0:
-        return INF
-    return float(np.abs(x / np.array([1, scale, scale, scale]) - np.array([3, 6, 1, 5])).max())
-
-
-MATHIESEN = Published(
-    name="Mathiesen",
-    source="L. Mathiesen, Math. Program. 37 (1987) 1-18: an economy with one sector and three goods",
-    provenance="read",
-    value=_mathiesen_value,
-    derivative=_mathiesen_derivative,
-    lower=_orthant(4)[0],
-    upper=_orthant(4)[1],
-    box=(_array(-1, 0.1, 0.1, 0.1), _array(6, 6, 6, 6)),
-    seed=104,
-    solutions=(_array(3, 6, 1, 5),),
-    caution="prices are free up to a factor: F' is singular at every solution; no meaning for prices <= 0",
-    member=_mathiesen_distance,
-)
-
-
-def _cournot(
-    c: np.ndarray, beta: np.ndarray, gamma: float, inner: Callable[[np.ndarray], np.ndarray], factor: float
-) -> tuple[Callable[[np.ndarray], np.ndarray], Callable[[np.ndarray], np.ndarray]]:
-    """F_i = mc_i(q_i) - P(Q) - q_i P'(Q), P = (5000 / Q)^(1/gamma), mc_i = c_i + (factor q_i)^(1/beta_i)."""
-
-    def value(q: np.ndarray) -> np.ndarray:
-        total = q.sum()
-        with np.errstate(all="ignore"):
-            price = (5000.0 / total) ** (1 / gamma)
-            return c + inner(q) ** (1 / beta) - price + q * price / (gamma * total)
-
-    def derivative(q: np.ndarray) -> np.ndarray:
-        total = q.sum()
-        with np.errstate(all="ignore"):
-            price = (5000.0 / total) ** (1 / gamma)
-            marginal = factor / beta * inner(q) ** (1 / beta - 1)
-        slope = -price / (gamma * total)
-        common = -slope - q * price / (gamma * total**2) * (1 / gamma + 1)
-        return common[:, None] * np.ones(q.size) + np.diag(marginal - slope)
-
-    return value, derivative
-
-
-_BETA5, _C5 = _array(1.2, 1.1, 1.0, 0.9, 0.8), _array(10, 8, 6, 4, 2)
-_COURNOT5 = _cournot(_C5, _BETA5, 1.1, lambda q: q / 5.0, 0.2)
-
-COURNOT5 = Published(
-    name="Nash-Cournot, 5 firms",
-    source="F. Murphy, H. Sherali, A. Soyster, Math. Program. 24 (1982) 92-106; P. Harker (1988)",
-    provenance="memory",
-    value=_COURNOT5[0],
-    derivative=_COURNOT5[1],
-    lower=_orthant(5)[0],
-    upper=_orthant(5)[1],
-    box=_box(5, -10.0, 100.0),
-    seed=105,
-    solutions=(_array(36.9325, 41.8181, 43.7066, 42.6592, 39.1790),),
-    digits=1e-3,
-    caution="F is not defined for negative quantities: about four starts of ten lie there",
-)
-
-_BETA10 = _array(1.2, 1.0, 0.9, 0.6, 1.5, 1.0, 0.7, 1.1, 0.95, 0.75)
-_C10 = _array(5, 3, 8, 5, 1, 3, 7, 4, 6, 3)
-_COURNOT10 = _cournot(_C10, _BETA10, 1.2, lambda q: 10.0 * q, 10.0)
-
-COURNOT10 = Published(
-    name="Nash-Cournot, 10 firms",
-    source="P. Harker, Math. Program. 41 (1988) 29-59, data of the ten-firm market",
-    provenance="memory",
-    value=_COURNOT10[0],
-    derivative=_COURNOT10[1],
-    lower=_orthant(10)[0],
-    upper=_orthant(10)[1],
-    box=_box(10, -1.0, 30.0),
-    seed=106,
-    solutions=(_array(7.4415, 4.0978, 2.5906, 0.9353, 17.9490, 4.0978, 1.3047, 5.5901, 3.2222, 1.6771),),
-    digits=1e-3,
-    caution="F is not defined for negative quantities: about three starts of ten lie there",
-)
-
-# --- exponentials -------------------------------------------------------------------------------------------------
-
-_WATSON = _array(-1, 0, 1, 2, 3)
-
-
-def _watson_value(x: np.ndarray) -> np.ndarray:
-    t = x - _WATSON
-    return 2 * np.exp(t @ t) * t
-
-
-def _watson_derivative(x: np.ndarray) -> np.ndarray:
-    t = x - _WATSON
-    return 2 * np.exp(t @ t) * (np.eye(5) + 2 * np.outer(t, t))
-
-
-WATSON = Published(
-    name="Watson",
-    source="L. Watson, SIAM J. Control Optim. 17 (1979) 36-46",
-    provenance="memory",
-    value=_watson_value,
-    derivative=_watson_derivative,
-    lower=_orthant(5)[0],
-    upper=_orthant(5)[1],
-    box=_box(5, -0.5, 3.5),
-    seed=107,
-    solutions=(_array(0, 0, 1, 2, 3),),
-    caution="F reaches 1e20 within the box; the second component is degenerate",
-)
 
 
 # --- optimality systems of the test examples of Hock and Schittkowski ---------------------------------------------
@@ -748,124 +475,23 @@ HS110 = Published(
     caution="F is not defined outside (2, 10): two starts of three lie there",
 )
 
-# --- linear problems ----------------------------------------------------------------------------------------------
 
-
-def linear(
-    name: str,
-    source: str,
-    provenance: str,
-    matrix: Any,
-    vector: np.ndarray,
-    solutions: tuple[np.ndarray, ...],
-    seed: int,
-    *,
-    bounds: tuple[np.ndarray, np.ndarray] | None = None,
-    box: tuple[np.ndarray, np.ndarray] | None = None,
-    caution: str = "",
-    digits: float = 1e-9,
-    complete: bool = True,
-) -> Published:
-    n = vector.size
-    lower, upper = bounds or _orthant(n)
-    return Published(
-        name=name,
-        source=source,
-        provenance=provenance,
-        value=lambda x: matrix @ x + vector,
-        derivative=lambda x: matrix,
-        lower=lower,
-        upper=upper,
-        box=box or _box(n, -2.0, 2.0),
-        seed=seed,
-        solutions=solutions,
-        caution=caution,
-        digits=digits,
-        complete=complete,
-        affine=True,
-    )
-
-
-def unit(n: int, k: int) -> np.ndarray:
-    vector = np.zeros(n)
-    vector[k] = 1.0
-    return vector
-
-
-def murty_matrix(n: int) -> np.ndarray:
-    return np.triu(2.0 * np.ones((n, n)), 1) + np.eye(n)
-
-
-def fathi_matrix(n: int) -> np.ndarray:
-    lower = np.tril(2.0 * np.ones((n, n)), -1) + np.eye(n)
-    return lower @ lower.T
-
-
-def ahn_matrix(n: int) -> np.ndarray:
-    return 4 * np.eye(n) - 2 * np.eye(n, k=1) + np.eye(n, k=-1)
-
-
-MURTY = linear(
-    "Murty", "K. Murty, Math. Program. 8 (1975) 345-366", "memory",
-    murty_matrix(10), -np.ones(10), (unit(10, 9),), 118,
-    caution="pivoting methods need 2^n steps",
-)  # fmt: skip
-FATHI = linear(
-    "Fathi", "Y. Fathi, Math. Program. 17 (1979) 335-344", "memory",
-    fathi_matrix(10), -np.ones(10), (unit(10, 0),), 119,
-    caution="pivoting methods need 2^n steps",
-)  # fmt: skip
-AHN = linear(
-    "Ahn", "B. Ahn, Math. Program. 26 (1983) 295-315: tridiagonal (1, 4, -2)", "memory",
-    ahn_matrix(16), -np.ones(16), (np.linalg.solve(ahn_matrix(16), np.ones(16)),), 120,
-)  # fmt: skip
-BARD = linear(
-    "Murty's cycle", "K. Murty, Linear Complementarity (1988): simple principal pivots cycle", "memory",
-    np.array([[1.0, 2, 0], [0, 1, 2], [2, 0, 1]]), -np.ones(3), (np.full(3, 1 / 3),), 121,
-    caution="a P-matrix on which plain steps cycle",
-)  # fmt: skip
-GOULD = linear(
-    "Gould",
-    "N. Gould (nonconvex quadratic program with several stationary points), quoted by M. Croci and P. Farrell, "
-    "arXiv:1510.02433",
-    "memory",
-    np.array([[-4.0, 0, 1, 6], [0, 4, 1, 2], [-1, -1, 0, 0], [-6, -2, 0, 0]]),
-    _array(1, -2, 1, 3),
-    (
-        _array(0, 0.5, 0, 0),
-        _array(0.25, 0.5, 0, 0),
-        _array(11 / 32, 15 / 32, 0, 1 / 16),
-    ),
-    122,
-    caution="not monotone; a minimiser and two saddle points",
-)  # fmt: skip
-
-
-def torsion_problem(q: int, c: float = 5.0) -> Published:
+def torsion_problem(q: int) -> Published:
     """Elastic-plastic torsion with half-weight edges; the optimum of the energy is printed, not the solution."""
-    n, h = 2 * q - 2, 1.0 / (2 * q - 1)
-    edge = np.minimum(np.arange(1, n + 1), n - np.arange(n)) * h
-    distance = np.minimum.outer(edge, edge).ravel()
+    problem = problem_file("torsion").build(2 * q - 2, case="half weight")
     return linear(
         "Torsion",
         "Elastic-plastic torsion: J. More, G. Toraldo, SIAM J. Optim. 1 (1991) 93-113; weights of I. Bongartz, "
         "A. Conn, N. Gould, Ph. Toint, ACM Trans. Math. Softw. 21 (1995)",
         "read",
-        half_weight_stiffness(n),
-        np.full(n * n, -c * h * h),
+        problem.map.M,
+        problem.map.q,
         (),
         123,
-        bounds=(-distance, distance),
-        box=(-2 * distance, 2 * distance),
+        bounds=(problem.lower, problem.upper),
+        box=(2 * problem.lower, 2 * problem.upper),
         caution="two-sided bounds that meet at the edge",
     )
-
-
-def half_weight_stiffness(n: int) -> Any:
-    diagonal = 2.0 * np.ones(n)
-    diagonal[[0, -1]] = 1.5
-    line = sp.diags_array([-np.ones(n - 1), diagonal, -np.ones(n - 1)], offsets=[-1, 0, 1])
-    return sp.csr_array(sp.kron(line, sp.eye_array(n)) + sp.kron(sp.eye_array(n), line))
 
 
 TORSION_OPTIMUM = -0.45608771  # q = 11
@@ -881,7 +507,7 @@ def membrane_problem(points: int) -> Published:
         "Membrane",
         "Membrane over an obstacle: I. Bongartz, A. Conn, N. Gould, Ph. Toint, ACM Trans. Math. Softw. 21 (1995)",
         "read",
-        half_weight_stiffness(n),
+        problem_file("double_obstacle").five_point(n, 0.5),
         np.full(n * n, -h * h),
         (),
         124,
@@ -943,20 +569,12 @@ def perpetual_put_problem(n: int) -> Published:
 
 
 COLLECTION: tuple[Published, ...] = (
-    KOJIMA_SHINDO, JOSEPHY, BILLUPS, MATHIESEN, COURNOT5, COURNOT10, WATSON, HS2, HS34, HS43, HS66, HS86, HS100,
-    HS110, HS113, HS35, HS76, MURTY, FATHI, AHN, BARD, GOULD, torsion_problem(11), membrane_problem(23),
-    perpetual_put_problem(99),
+    classic.KOJIMA_SHINDO, classic.JOSEPHY, classic.BILLUPS, classic.MATHIESEN, classic.COURNOT5, classic.COURNOT10,
+    classic.WATSON, HS2, HS34, HS43, HS66, HS86, HS100, HS110, HS113, HS35, HS76, classic.MURTY, classic.FATHI,
+    classic.AHN, classic.BARD, classic.GOULD, torsion_problem(11), membrane_problem(23), perpetual_put_problem(99),
 )  # fmt: skip
 
 NONLINEAR = tuple(p for p in COLLECTION if not p.affine)
-
-
-def cyclic_matrix(n: int, a: float = 2.0) -> np.ndarray:
-    """I + a times the cyclic shift: a P-matrix for odd n, on which plain steps cycle for a > 1.
-
-    I. Ben Gharbia, J. Ch. Gilbert, Math. Program. 134 (2012) 349-364 (abstract read, examples recomputed).
-    """
-    return np.eye(n) + a * np.roll(np.eye(n), 1, axis=1)
 
 
 CYCLIC_SIZES = (3, 5, 7)

@@ -2,10 +2,14 @@
 
 import numpy as np
 import pytest
+import scipy.sparse as sp
+from scipy.interpolate import RegularGridInterpolator
 
 import ssn
 from ssn.equations.complementarity import fischer_burmeister, mid_residual
+from ssn.newton import Limits
 from ssn.prepare import prepare
+from ssn.smoothing_path import PLAIN_STEPS, SmoothingPath, follow_smoothing
 from ssn.status import Outcome
 
 
@@ -112,3 +116,40 @@ def test_fischer_burmeister_has_the_roots_of_mid_and_no_cancellation():
     assert not fischer_burmeister(x, f, low, high)[0].any()
     x, f = np.array([1e100]), np.array([-1.0])
     assert fischer_burmeister(x, f, np.zeros(1), np.full(1, np.inf))[0] == pytest.approx(-1.0)
+
+
+def test_plain_steps_go_on_while_the_pieces_settle():
+    """From a coarser mesh few pieces are wrong, the norm falls slowly at first; a smoothed step would unsettle them."""
+
+    def membrane(n):
+        line = sp.diags_array([-np.ones(n - 1), 2.0 * np.ones(n), -np.ones(n - 1)], offsets=[-1, 0, 1])
+        stiffness = sp.csr_array(sp.kron(line, sp.eye_array(n)) + sp.kron(sp.eye_array(n), line))
+        t = np.linspace(0, 1, n + 2)[1:-1]
+        load = 80.0 * np.outer(np.sin(2 * np.pi * t), np.sin(np.pi * t)).ravel() / (n + 1) ** 2
+        return ssn.ComplementarityProblem(ssn.AffineMap(stiffness, -load), -0.3, 0.3)
+
+    coarse = ssn.solve(membrane(64)).require().x.reshape(64, 64)
+    line = np.linspace(0, 1, 66)
+    points = np.stack(np.meshgrid(*[np.linspace(0, 1, 130)[1:-1]] * 2, indexing="ij"), axis=-1)
+    start = RegularGridInterpolator((line, line), np.pad(coarse, 1))(points).ravel()
+    plain = ssn.solve(membrane(128), start, globalization="full").require()
+    assert plain.steps[0].contraction > SmoothingPath().contraction
+    solution = ssn.solve(membrane(128), start).require()
+    assert len(solution.steps) == len(plain.steps)
+    assert {s.stage for s in solution.steps} == {"eps = 0"}
+
+
+def test_plain_steps_may_settle_one_layer_a_step():
+    """Where the path fails on an affine equation, plain steps go on as long as they move the contact set."""
+    n = 200
+    second = sp.diags_array([-np.ones(n - 1), 2.0 * np.ones(n), -np.ones(n - 1)], offsets=[-1, 0, 1])
+    x = np.linspace(0, 1, n + 2)[1:-1]
+    F = ssn.AffineMap(sp.csr_array(second), np.zeros(n))
+    problem = ssn.ComplementarityProblem(F, lower=0.5 - 8 * (x - 0.5) ** 2)
+    plan = prepare(problem, None)
+    blocked = SmoothingPath(point_steps=1, patience=0, contraction=0.0, interior=())
+    result = follow_smoothing(plan.equation, type(plan.solver), plan.start, Limits(), blocked, None)
+    plain = [step for step in result.steps if step.stage == "plain steps from the start"]
+    assert result.outcome is Outcome.CONVERGED
+    assert len(plain) > PLAIN_STEPS
+    assert result.steps[-1] is plain[-1]
