@@ -78,12 +78,12 @@ def follow(
     limits: Limits,
     path: ProximalPointPath,
     callback: Callable[[StepRecord], None] | None,
-    finish: Callable[[FloatArray, int, int], LoopResult | None] | None = None,
+    finish: Callable[[FloatArray, int, int, float], LoopResult | None] | None = None,
 ) -> PathResult:
     """Run the path from the control `start`; `size` is ||S||^2.
 
-    After every point ``finish(control, first_index, steps_left)`` may try to end the solve by plain Newton steps on the
-    natural residual; its result is taken where it converged.
+    After every point ``finish(control, first_index, steps_left, change)``, with the relative change by the point, may
+    try to end the solve by plain Newton steps on the natural residual; its result is taken where it converged.
     """
     alpha = path.first * size
     control = start
@@ -113,11 +113,11 @@ def follow(
         change = relative(controls.norm(new - control), controls.norm(new))
         x, control = loop.last.x, new
         loop.steps, loop.start_norm, loop.start_accuracy = steps, start_norm, start_accuracy
-        inner_limited = inner.tolerance > 0.1 * limits.tolerance
+        inner_limited = max(inner_tolerance, loop.last.accuracy) > 0.1 * limits.tolerance
         if loop.outcome not in (Outcome.CONVERGED, Outcome.STALLED, Outcome.STEP_LIMIT):
             break
         if finish is not None:
-            ended = finish(control, len(steps) + 1, limits.max_steps - len(steps))
+            ended = finish(control, len(steps) + 1, limits.max_steps - len(steps), change)
             if ended is not None:
                 ended.steps = steps + ended.steps
                 ended.start_norm, ended.start_accuracy = start_norm, start_accuracy

@@ -38,6 +38,8 @@ Callback = Callable[[StepRecord], None]
 
 # plain Newton steps on the natural residual that end a proximal point path
 POLISH_STEPS = 6
+# relative change by a proximal point below which plain steps are tried on a singular system, too
+AT_REST = 1e-6
 # of the tolerance: what a last exact step is taken for
 LAST_DIGITS = 1e-4
 # continuations at most while the accuracy computed afresh is worse than the iteration's own figure
@@ -276,9 +278,9 @@ def _run_path(plan: Plan, limits: Limits, callback: Callback | None, before: Any
 
     natural = plan.polish
 
-    def end_plainly(control: FloatArray, first_index: int, left: int) -> LoopResult | None:
+    def end_plainly(control: FloatArray, first_index: int, left: int, change: float) -> LoopResult | None:
         assert natural is not None
-        if _too_many_free(natural, control, base.size):
+        if change > AT_REST and _too_many_free(natural, control, base.size):
             return None
         short = Limits(limits.tolerance, min(left, POLISH_STEPS))
         solver = ReducedSolver(natural, max_inner=min(2000, ROUNDS * base.size + 20))
