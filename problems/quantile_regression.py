@@ -10,10 +10,10 @@ u_i at a bound for samples off the plane, between for those on it.
 *The ridge.* Without one this is a linear program. A small one does not change its solution: below some positive
 ridge the plane is exactly the (shortest) solution of the linear program, not an approximation.
     Source: O. Mangasarian and R. Meyer, SIAM J. Control Optim. 17 (1979) 745-752 (from memory); quantile regression:
-    R. Koenker and G. Bassett, Econometrica 46 (1978) 33-50 (from memory). The columns of X are centred and scaled inside.
+    R. Koenker and G. Bassett, Econometrica 46 (1978) 33-50 (from memory). X is centred and scaled inside.
 
-case="stack loss": 21 days of a plant that oxidises ammonia: share of it lost against air flow, temperature of the cooling
-    water and concentration of the acid. K. Brownlee, Statistical Theory and Methodology, 1965 (from memory).
+case="stack loss": 21 days of a plant that oxidises ammonia: share of it lost against air flow, temperature of the
+    cooling water and concentration of the acid. K. Brownlee, Statistical Theory and Methodology, 1965 (from memory).
 case="load": made-up peak loads whose spread grows with one of nine influences. Dimensionless.
 
 Caution: extremes are beyond the data. A level that was kept in 99 of 100 past cases is not a safe design load.

@@ -12,8 +12,8 @@ case="parts": two kinds of parts told apart by nine measurements that overlap; h
 case="wear": predict the wear of a part; errors up to `width` cost nothing, larger ones linearly.
 case="tumours": the Wisconsin diagnostic data, 569 samples, 30 measurements, hinge loss.
 
-Sources: C. Cortes and V. Vapnik, Machine Learning 20 (1995) 273-297; V. Vapnik, The Nature of Statistical Learning Theory,
-1995; W. Street, W. Wolberg, O. Mangasarian, SPIE 1905 (1993) 861-870 (data) (all from memory). Dimensionless.
+Sources: C. Cortes and V. Vapnik, Machine Learning 20 (1995) 273-297; V. Vapnik, The Nature of Statistical Learning
+Theory, 1995; W. Street, W. Wolberg, O. Mangasarian, SPIE 1905 (1993) 861-870 (data) (all from memory). Dimensionless.
 
 Caution: a demonstration. Nothing here is fit to sort parts that people rely on, or to diagnose anybody: that takes
 validation on data not used for the fit, and the judgement of those licensed to give it.

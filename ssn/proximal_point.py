@@ -26,10 +26,6 @@ from .status import Outcome
 ROUNDING = 1e-13
 
 
-# what rounding in S*(S u) leaves of u, relative to ||S||^2 / a (measured: 5e-16), and how much of that is borne:
-# points nearer than that still find the pieces
-NOISE, COARSEST = 1e-15, 1e-7
-
 # Newton steps at most at one point: a hard point is given up and taken up again with a larger parameter
 POINT_STEPS = 40
 
@@ -98,8 +94,12 @@ def follow(
         if x is None:
             x = equation.start(control)
         left = max(limits.max_steps - len(steps), 1)
-        reachable = max(inner_tolerance, 0.1 * limits.tolerance, NOISE * size / alpha)
-        inner = replace(limits, tolerance=reachable, max_steps=min(left, POINT_STEPS))
+        inner = replace(
+            limits,
+            tolerance=max(inner_tolerance, 0.1 * limits.tolerance),
+            max_steps=min(left, POINT_STEPS),
+            settled=True,
+        )
         loop = run(
             equation, solver, globalization(), x, inner,
             callback=callback, first_index=len(steps) + 1, stage=f"proximal weight {alpha:.1e}",
@@ -131,7 +131,8 @@ def follow(
         inner_tolerance = min(0.1 * inner_tolerance, 0.1 * change)
         data_size = np.sqrt(size) * equation.tracking.observations.norm(equation.target)
         floor = ROUNDING * data_size / (limits.tolerance * max(controls.norm(control), 1e-300))
-        floor = max(floor, NOISE * size / max(COARSEST, limits.tolerance))
+        if loop.outcome is Outcome.STALLED:  # rounding hides more the smaller a is: no smaller one
+            floor = max(floor, alpha)
         alpha = max(alpha * path.next_factor(len(steps) - taken), min(alpha, floor))
         loop.outcome, loop.message = Outcome.STEP_LIMIT, f"{point} points of the proximal path taken"
     return PathResult(loop, equation, control, point)
