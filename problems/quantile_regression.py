@@ -16,6 +16,8 @@ case="stack loss": 21 days of a plant that oxidises ammonia: share of it lost ag
     cooling water and concentration of the acid. K. Brownlee, Statistical Theory and Methodology, 1965 (from memory).
 case="load": made-up peak loads whose spread grows with one of nine influences. Dimensionless.
 
+The smaller the ridge, the more steps: 100 000 samples take 29 with ridge 1e-4 and 123 with 1e-5, more than the limit.
+
 Caution: extremes are beyond the data. A level that was kept in 99 of 100 past cases is not a safe design load.
 """
 

@@ -60,6 +60,16 @@ def test_a_small_ridge_does_not_pass_for_converged_too_early(ridge):
     assert on_plane.max() <= 1e-9  # a vertex of the linear program: ten observations met exactly
 
 
+@pytest.mark.parametrize("ridge", [1e-2, 1e-3])
+def test_points_of_the_path_end_where_rounding_is_left(ridge):
+    """Small proximal weights magnify rounding; steps that change no piece and gain nothing are not repeated."""
+    solution, table, target, w = dual_of_ridge(
+        1000, ridge, lambda target: ssn.QuantileLoss(0.8, target, 0.05)
+    )
+    assert solution.converged and solution.accuracy <= 1e-12
+    assert np.sort(np.abs(target - table @ w))[5] <= 1e-9
+
+
 def test_zero_misfit_with_more_free_unknowns_than_rows_is_found():
     """For an indicator the singular plain system has a solution."""
     rng = np.random.default_rng(2)
