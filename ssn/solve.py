@@ -290,10 +290,8 @@ def _run_path(plan: Plan, limits: Limits, callback: Callback | None, before: Any
         )  # fmt: skip
         if ended.outcome is Outcome.CONVERGED and natural.piecewise_affine and left > len(ended.steps):
             ended = _one_more(natural, ended, limits, callback, first_index)
-            if (
-                _too_many_free(natural, ended.best.x, base.size)
-                and ended.best.accuracy > LAST_DIGITS * limits.tolerance
-            ):
+            near = ended.outcome is Outcome.CONVERGED and ended.best.accuracy > LAST_DIGITS * limits.tolerance
+            if near and _too_many_free(natural, ended.best.x, base.size):
                 return None  # not solved, only near: the residual is short where the step is
         return ended if ended.outcome in (Outcome.CONVERGED, Outcome.STOPPED, Outcome.INTERRUPTED) else None
 
