@@ -154,7 +154,8 @@ class CompositeProblem:
         """The smallest eigenvalue of W^-1 f'' where it is constant, explicit and n <= 2000; 0 otherwise (unknown)."""
         if self._strong is None:
             self._strong = 0.0
-            if self.affine and self.unknowns <= 2000:
+            wide = isinstance(self.part, LeastSquares) and self.part.b.size < self.unknowns
+            if self.affine and self.unknowns <= 2000 and not wide:  # fewer rows than columns: singular
                 hessian = self.derivative(np.zeros(self.unknowns))
                 if not isinstance(hessian, LinearOperator):
                     dense = hessian.toarray() if hasattr(hessian, "toarray") else np.asarray(hessian)

@@ -29,12 +29,16 @@ class Limits:
         than the tolerance needs.
     exact : bool
         Solve every Newton system tightly.
+    settled : bool
+        Stop, as stalled, after two steps that changed no piece and of which the second did not halve the residual: what
+        is left is rounding.
     """
 
     tolerance: float = 1e-9
     max_steps: int = 100
     forcing: float = 0.1
     exact: bool = False
+    settled: bool = False
 
 
 TIGHT = 1e-12
@@ -106,6 +110,8 @@ class NewtonLoop:
             return self._end(Outcome.CONVERGED, "")
         if self.index - self.first_index >= self.limits.max_steps:
             return self._end(Outcome.STEP_LIMIT, f"{self.limits.max_steps} steps taken")
+        if self.limits.settled and _settled(result.steps, at.accuracy):
+            return self._end(Outcome.STALLED, "no piece changes and no more progress: rounding is left")
         if _stagnant(result, self._top_norm):
             return self._end(Outcome.STALLED, "no more progress: the residual is at rounding level")
         self._repeated = _recurrence(self._seen, at, self.index)
@@ -208,6 +214,17 @@ def _stagnant(result: LoopResult, top_norm: float) -> bool:
         min(getattr(s, figure) for s in recent) > 0.9 * min(getattr(s, figure) for s in earlier)
         for figure in ("accuracy", "residual_norm")
     )
+
+
+# accuracy from which on two steps without a change can be taken for rounding
+NEARLY = 1e-3
+
+
+def _settled(steps: list[StepRecord], accuracy: float) -> bool:
+    """Whether the last two steps changed no piece, and the second made no progress."""
+    if len(steps) < 2 or accuracy > NEARLY or steps[-1].piece_changes != 0 or steps[-2].piece_changes != 0:
+        return False
+    return steps[-1].contraction > 0.5 and accuracy > 0.5 * steps[-2].accuracy
 
 
 def _recurrence(seen: dict[bytes, list[tuple[int, float]]], at: Evaluation, index: int) -> int | None:

@@ -22,13 +22,13 @@ from .errors import InputError, MissingExtraError, ProblemFileError
 from .nonlinear_control import NonlinearControlProblem
 from .sum_problem import SumProblem
 
-HOOKS = ("transfer", "known", "picture", "summary")
+HOOKS = ("transfer", "known", "reference", "picture", "summary")
 # Distributions whose absence is answered by an extra of ours.
 EXTRA_OF = {
     "skfem": "problems",
     "matplotlib": "problems",
     "sksparse": "cholmod",
-    "sklearn": "test",
+    "sklearn": "problems",
     "clarabel": "test",
 }
 TRUE, FALSE = {"true", "yes", "on", "1"}, {"false", "no", "off", "0"}
@@ -50,8 +50,9 @@ class ProblemFile:
         The file's `build`. Use the method `build`, which checks.
     sizes : tuple of int
         Meshes for studies (`SIZES`); empty where the file names none.
-    transfer, known, picture, summary : callable or None
+    transfer, known, reference, picture, summary : callable or None
         The optional functions of the file: ``transfer(coarse_problem, fine_problem)``, ``known(problem, solution)``,
+        ``reference(problem, budget)`` -> the unknown by a method that is not ours (see `ssn.evidence.assess`),
         ``picture(problem, solution)`` -> matplotlib Figure, ``summary(problem, solution)`` -> list of (text, text).
     """
 
@@ -62,6 +63,7 @@ class ProblemFile:
     sizes: tuple[int, ...] = ()
     transfer: Callable[..., Any] | None = None
     known: Callable[..., Any] | None = None
+    reference: Callable[..., Any] | None = None
     picture: Callable[..., Any] | None = None
     summary: Callable[..., Any] | None = None
 

@@ -74,12 +74,12 @@ def follow(
     limits: Limits,
     path: ProximalPointPath,
     callback: Callable[[StepRecord], None] | None,
-    finish: Callable[[FloatArray, int, int], LoopResult | None] | None = None,
+    finish: Callable[[FloatArray, int, int, float], LoopResult | None] | None = None,
 ) -> PathResult:
     """Run the path from the control `start`; `size` is ||S||^2.
 
-    After every point ``finish(control, first_index, steps_left)`` may try to end the solve by plain Newton steps on the
-    natural residual; its result is taken where it converged.
+    After every point ``finish(control, first_index, steps_left, change)``, with the relative change by the point, may
+    try to end the solve by plain Newton steps on the natural residual; its result is taken where it converged.
     """
     alpha = path.first * size
     control = start
@@ -95,7 +95,10 @@ def follow(
             x = equation.start(control)
         left = max(limits.max_steps - len(steps), 1)
         inner = replace(
-            limits, tolerance=max(inner_tolerance, 0.1 * limits.tolerance), max_steps=min(left, POINT_STEPS)
+            limits,
+            tolerance=max(inner_tolerance, 0.1 * limits.tolerance),
+            max_steps=min(left, POINT_STEPS),
+            settled=True,
         )
         loop = run(
             equation, solver, globalization(), x, inner,
@@ -110,11 +113,11 @@ def follow(
         change = relative(controls.norm(new - control), controls.norm(new))
         x, control = loop.last.x, new
         loop.steps, loop.start_norm, loop.start_accuracy = steps, start_norm, start_accuracy
-        inner_limited = inner.tolerance > 0.1 * limits.tolerance
+        inner_limited = max(inner_tolerance, loop.last.accuracy) > 0.1 * limits.tolerance
         if loop.outcome not in (Outcome.CONVERGED, Outcome.STALLED, Outcome.STEP_LIMIT):
             break
         if finish is not None:
-            ended = finish(control, len(steps) + 1, limits.max_steps - len(steps))
+            ended = finish(control, len(steps) + 1, limits.max_steps - len(steps), change)
             if ended is not None:
                 ended.steps = steps + ended.steps
                 ended.start_norm, ended.start_accuracy = start_norm, start_accuracy
@@ -128,6 +131,8 @@ def follow(
         inner_tolerance = min(0.1 * inner_tolerance, 0.1 * change)
         data_size = np.sqrt(size) * equation.tracking.observations.norm(equation.target)
         floor = ROUNDING * data_size / (limits.tolerance * max(controls.norm(control), 1e-300))
+        if loop.outcome is Outcome.STALLED:  # rounding hides more the smaller a is: no smaller one
+            floor = max(floor, alpha)
         alpha = max(alpha * path.next_factor(len(steps) - taken), min(alpha, floor))
         loop.outcome, loop.message = Outcome.STEP_LIMIT, f"{point} points of the proximal path taken"
     return PathResult(loop, equation, control, point)

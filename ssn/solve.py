@@ -13,12 +13,13 @@ from .augmented_lagrangian import follow_multipliers
 from .easier_weight import run_with_detour
 from .envelope_start import run_envelope_start
 from .equations.dual import DualEquation
-from .equations.natural import NaturalPoint
+from .equations.natural import NaturalEquation, NaturalPoint
 from .errors import InputError, SolveInterrupted
 from .finish import finish, finish_sum
 from .gap_path import GapPath, follow_gap
 from .globalization import EnvelopeSearch, FullStep, ResidualSearch
 from .linear import ReducedSolver, SubspaceSolver
+from .linear.reduced import ROUNDS
 from .moreau_yosida import first_penalty, follow_penalty
 from .newton import Limits, LoopResult, run
 from .prepare import Plan, prepare
@@ -37,6 +38,10 @@ Callback = Callable[[StepRecord], None]
 
 # plain Newton steps on the natural residual that end a proximal point path
 POLISH_STEPS = 6
+# relative change by a proximal point below which plain steps are tried on a singular system, too
+AT_REST = 1e-6
+# of the tolerance: what a last exact step is taken for
+LAST_DIGITS = 1e-4
 # continuations at most while the accuracy computed afresh is worse than the iteration's own figure
 CONFIRMATIONS = 3
 
@@ -273,13 +278,21 @@ def _run_path(plan: Plan, limits: Limits, callback: Callback | None, before: Any
 
     natural = plan.polish
 
-    def end_plainly(control: FloatArray, first_index: int, left: int) -> LoopResult | None:
+    def end_plainly(control: FloatArray, first_index: int, left: int, change: float) -> LoopResult | None:
         assert natural is not None
+        if change > AT_REST and _too_many_free(natural, control, base.size):
+            return None
         short = Limits(limits.tolerance, min(left, POLISH_STEPS))
+        solver = ReducedSolver(natural, max_inner=min(2000, ROUNDS * base.size + 20))
         ended = run(
-            natural, ReducedSolver(natural), EnvelopeSearch(), control, short,
+            natural, solver, EnvelopeSearch(), control, short,
             callback=callback, first_index=first_index, stage="natural residual",
         )  # fmt: skip
+        if ended.outcome is Outcome.CONVERGED and natural.piecewise_affine and left > len(ended.steps):
+            ended = _one_more(natural, ended, limits, callback, first_index)
+            near = ended.outcome is Outcome.CONVERGED and ended.best.accuracy > LAST_DIGITS * limits.tolerance
+            if near and _too_many_free(natural, ended.best.x, base.size):
+                return None  # not solved, only near: the residual is short where the step is
         return ended if ended.outcome in (Outcome.CONVERGED, Outcome.STOPPED, Outcome.INTERRUPTED) else None
 
     kind = type(plan.globalization)
@@ -318,6 +331,36 @@ def _run_gap_path(plan: Plan, limits: Limits, callback: Callback | None, before:
     plan.equation = result.equation
     plan.choices["path"] += f"; {result.points} points"
     return finish(plan, result.loop, limits, before)
+
+
+def _one_more(
+    natural: NaturalEquation, ended: LoopResult, limits: Limits, callback: Callback | None, first_index: int
+) -> LoopResult:
+    """One exact step more, kept where it is better.
+
+    A residual with the step 1/L says little about the distance where L is large, and where the pieces are right an
+    exact step solves a piecewise affine equation.
+    """
+    more = run(
+        natural, ReducedSolver(natural), EnvelopeSearch(), ended.best.x,
+        replace(limits, tolerance=LAST_DIGITS * limits.tolerance, max_steps=1, exact=True),
+        callback=callback, first_index=first_index + len(ended.steps), stage="natural residual",
+    )  # fmt: skip
+    if more.outcome in (Outcome.STOPPED, Outcome.INTERRUPTED):
+        return _joined(ended, more)
+    return replace(_joined(ended, more), outcome=Outcome.CONVERGED, message="")
+
+
+def _too_many_free(natural: NaturalEquation, control: FloatArray, rows: int) -> bool:
+    """Whether more components move freely than A of 1/2 ||A u - b||^2 has rows, and g pulls on them.
+
+    Then the plain Newton system is singular, and has no solution but by chance; for an indicator g it has one.
+    """
+    point = natural.evaluate(control).data
+    slopes = None if point is None else point.derivative.diagonal
+    if slopes is None or int(np.count_nonzero(slopes == 1.0)) <= rows:
+        return False
+    return natural.cost.value(control, natural.weights) != 0.0
 
 
 def _run_penalty(plan: Plan, limits: Limits, callback: Callback | None, before: Any) -> Solution:

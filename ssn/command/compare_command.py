@@ -103,8 +103,9 @@ def _assessed(
         solution = solve_job(job, problem, report)
         seconds = time.perf_counter() - began
         assessment = assess(
-            problem, parameters=job.parameters, name=job.file.name, known=job.file.known, methods=methods,
-            budget=budget, progress=report, solution=solution, libraries=True,
+            problem, parameters=job.parameters, name=job.file.name, known=job.file.known,
+            reference=job.file.reference, methods=methods, budget=budget, progress=report, solution=solution,
+            libraries=True,
         )  # fmt: skip
         # solved here, so that an interruption of the evidence does not lose the solution
         ours = replace(assessment.methods[0], seconds=seconds)

@@ -124,8 +124,9 @@ def assessed(job: Job, report: rep.Report, budget: float, iterations: int | None
     solution = solve_job(job, problem, report)
     seconds = time.perf_counter() - began
     assessment = assess(
-        problem, parameters=job.parameters, name=job.file.name, known=job.file.known, budget=budget, progress=report,
-        solution=solution, libraries=True, iterations=iterations,
+        problem, parameters=job.parameters, name=job.file.name, known=job.file.known,
+        reference=job.file.reference, budget=budget, progress=report, solution=solution, libraries=True,
+        iterations=iterations,
     )  # fmt: skip
     ours = replace(assessment.methods[0], seconds=seconds)
     return replace(assessment, methods=(ours, *assessment.methods[1:]))

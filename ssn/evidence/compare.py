@@ -22,7 +22,7 @@ from .derivative import derivative_checks
 from .known import KnownValue, known_values
 from .library_methods import library_methods
 from .method_result import MethodResult, ours
-from .own_methods import Method, Methods, named, run_method
+from .own_methods import FILES_REFERENCE, Method, Methods, named, run_method
 from .rate import RateVerdict, rate
 from .references import reference_name, references
 
@@ -44,7 +44,7 @@ class Assessment:
     unknowns : int
     solution : Solution
     methods : tuple of MethodResult
-        "semismooth Newton" first, then the built-in reference, then the user's own.
+        "semismooth Newton" first, then the built-in reference, the problem's own and the user's.
     agreement : {"holds", "fails", "undecided"}
     agreement_tolerance : float
     agreement_note : str
@@ -124,6 +124,7 @@ def assess(
     parameters: Mapping[str, Any] | None = None,
     name: str | None = None,
     known: Callable[[Any, Solution], Any] | None = None,
+    reference: Method | None = None,
     methods: Methods | None = None,
     budget: float = 20.0,
     progress: Callable[..., Any] | None = None,
@@ -146,6 +147,9 @@ def assess(
     known : callable, optional
         ``known(problem, solution)`` of a problem file: a list of dicts with the keys what, expected, computed,
         tolerance, source and holds.
+    reference : callable, optional
+        ``reference(problem, budget)`` of a problem file, for problems about which the built-in methods tell little: the
+        unknown by an independent method, in the form of `compare`'s methods. Agreement then needs its point.
     methods : mapping of str to callable, or iterable of callables, optional
         The user's own methods, see `compare`.
     budget : float
@@ -181,6 +185,8 @@ def assess(
     budget = scalar(budget, "budget", nonnegative=True)
     iterations = None if iterations is None else count(iterations, "iterations")
     own_methods = named(methods)
+    if reference is not None:
+        own_methods = {FILES_REFERENCE: reference, **own_methods}
     tell = progress if progress is not None else _silent
     tell("solving")
     began = time.perf_counter()

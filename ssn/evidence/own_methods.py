@@ -19,6 +19,10 @@ Method = Callable[..., Any]
 Methods = Mapping[str, Method] | Iterable[Method | tuple[str, Method]]
 
 
+# the independent method that a problem file brings itself
+FILES_REFERENCE = "problem's own reference"
+
+
 def named(methods: Methods | None) -> dict[str, Method]:
     """The user's methods by name.
 
@@ -34,7 +38,7 @@ def named(methods: Methods | None) -> dict[str, Method]:
     for name, method in pairs:
         if not callable(method):
             raise InputError(f"method {name!r} is a {type(method).__name__}, not a function of the problem")
-        if name in result:
+        if name in result or name == FILES_REFERENCE:
             raise InputError(f"there are two methods named {name!r}")
         result[name] = method
     return result

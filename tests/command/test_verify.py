@@ -10,6 +10,7 @@ import pytest
 
 from tests.command.helpers import (
     DRIFT,
+    HEAD,
     LEAST_SQUARES,
     NOT_THE_GRADIENT,
     ROOT,
@@ -92,6 +93,40 @@ def test_a_file_that_does_not_build_is_exit_2_and_loses_nothing(tmp_path, drift)
     results, document = verified(data)
     assert list(results) == ["drift"] and [e["problem"] for e in document["errors"]] == ["broken"]
     assert "not run to the end: broken" in result.stdout
+
+
+REFERENCE = """
+
+class Twice:
+    start = np.ones(3)
+
+    def residual(self, x):
+        return 2.0 * x - 1.0
+
+    def linearize(self, x):
+        return ssn.Linearization(self.residual(x), 2.0 * np.eye(3))
+
+
+def build():
+    return Twice()
+
+
+def reference(problem, budget):
+    return np.full(3, {value})
+"""
+
+
+@pytest.mark.parametrize(("value", "code"), [(0.5, 0), (0.501, 1)])
+@pytest.mark.parametrize("command", ["verify", "compare"])
+def test_a_file_may_bring_its_own_reference(tmp_path, command, value, code):
+    file = write(tmp_path, "twice.py", HEAD + REFERENCE.replace("{value}", str(value)))
+    data = tmp_path / "out.json"
+    assert ssn_command(command, str(file), "--json", str(data)).exit_code == code
+    document = json.loads(data.read_text("utf-8"))
+    validate(command, document)
+    result = document["results"][0]
+    assert result["methods"][-1]["name"] == "problem's own reference"
+    assert result["agreement"] == ("holds" if code == 0 else "undecided")
 
 
 @pytest.mark.parametrize(("figure", "code"), [("8", 0), ("9", 1)])

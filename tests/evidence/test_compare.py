@@ -301,6 +301,31 @@ def test_a_method_of_the_users_can_decide():
     assert "another" in assessment.agreement_note
 
 
+@pytest.mark.parametrize(("factor", "verdict"), [(1.0 + 1e-9, "holds"), (1.0 + 1e-3, "undecided")])
+def test_a_problems_own_reference_has_to_agree(factor, verdict):
+    problem = cases.kinked()  # an equation, whose root finder starts near our solution
+    ours = ssn.solve(problem)
+    assessment = assess(problem, reference=lambda p, budget: factor * ours.x)
+    assert [m.name for m in assessment.methods][1:] == [
+        "residual-only root finder",
+        "problem's own reference",
+    ]
+    assert assessment.methods[1].distance <= 1e-6
+    assert assessment.agreement == verdict and "problem's own reference" in assessment.agreement_note
+    assert assessment.holds is (verdict == "holds")
+
+
+def test_a_reference_that_raises_is_named():
+    assessment = assess(cases.kinked(), reference=lambda p: 1 / 0)
+    assert assessment.agreement == "undecided"
+    assert any("problem's own reference: raised ZeroDivisionError" in text for text in assessment.failures())
+
+
+def test_no_method_takes_the_name_of_the_problems_own_reference():
+    with pytest.raises(ssn.InputError, match="two methods named"):
+        assess(cases.kinked(), methods={"problem's own reference": lambda p: 0.0})
+
+
 @pytest.mark.parametrize(
     ("method", "words"),
     [
