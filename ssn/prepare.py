@@ -18,6 +18,7 @@ from .equations.augmented import AugmentedEquation
 from .equations.complementarity import FischerBurmeisterEquation, MidEquation, inside_bounds
 from .equations.coupled import CoupledEquation
 from .equations.dual import DualEquation
+from .equations.factorised_pair import FactorisedPairEquation
 from .equations.full_space import FullSpaceEquation, has_dual
 from .equations.general import GeneralEquation
 from .equations.natural import NaturalEquation
@@ -30,9 +31,11 @@ from .linear import (
     FullSpaceSolver,
     GeneralSolver,
     ReducedSolver,
+    SchurSolver,
     SubspaceSolver,
 )
 from .linear.coupled import refusal
+from .linear.schur import refusal as schur_refusal
 from .moreau_yosida import PenaltyPath, first_penalty
 from .protocols import FloatArray, Globalization, LinearSolver
 from .proximal_point import ProximalPointPath
@@ -167,6 +170,11 @@ def _prepare_control(problem: ControlProblem, start: Any, globalization: Any, li
             return _prepare_coupled(problem, control, pair, linear)
         if linear == "coupled":
             raise InputError(f"linear='coupled' does not fit this problem: {reason}")
+    if linear == "schur":
+        reason = schur_refusal(problem)
+        if reason is not None:
+            raise InputError(f"linear='schur' does not fit this problem: {reason}")
+        return _prepare_schur(problem, control, pair)
     if pair is not None:
         control = problem.cost.prox(problem.pull_back(pair[1]) / problem.alpha, 1.0 / problem.alpha)
     path = None if problem.alpha > 0 else ProximalPointPath()
@@ -218,6 +226,22 @@ def _prepare_coupled(
     if linear == "auto":
         plan.otherwise = lambda best: _prepare_control(problem, best, "auto", "subspace")
     return plan
+
+
+def _prepare_schur(
+    problem: ControlProblem, control: FloatArray | None, pair: tuple[FloatArray, FloatArray] | None
+) -> Plan:
+    equation = FactorisedPairEquation(problem)
+    factors = "cycles of multigrid" if equation.operators.multigrid else "one factorisation an active set"
+    choices = {
+        "equation": "state and adjoint, control eliminated",
+        "globalization": "dual: the dual function is convex, exact search costs products only"
+        if equation.has_dual
+        else "residual search: the state cannot be eliminated",
+        "linear": f"schur: Krylov iteration, Schur complement by matching, {factors}; asked for",
+    }
+    search: Globalization = DualSearch() if equation.has_dual else ResidualSearch().fresh()
+    return Plan(problem, equation, SchurSolver(equation), search, equation.start(control, pair), choices)
 
 
 def _prepare_state_bounds(problem: ControlProblem, control: FloatArray | None) -> Plan:

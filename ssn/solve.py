@@ -70,9 +70,10 @@ def solve(
         "auto": dual search where the problem has a dual equation, envelope search for other composite problems,
         residual search and smoothing path for complementarity, residual search otherwise. What was decided, and why,
         stands in ``Solution.choices``.
-    linear : {"auto", "subspace", "coupled", "reduced", "general", "full space", "augmented"}
+    linear : {"auto", "subspace", "coupled", "schur", "reduced", "general", "full space", "augmented"}
         How Newton systems are solved; only those that fit the problem are accepted beside "auto". Control problems with
-        a symmetric state operator have two: "subspace" factorises it, "coupled" is multigrid on state and adjoint.
+        explicit operators have three: "subspace" factorises the state operator and keeps a basis, "coupled" (symmetric
+        E) is multigrid on state and adjoint, "schur" factorises once an active set.
     callback : callable, optional
         Gets each `StepRecord`; may raise `StopSolve`.
     progress : bool

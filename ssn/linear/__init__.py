@@ -5,11 +5,13 @@ from .coupled import CoupledSolver
 from .full_space import FullSpaceSolver
 from .general import GeneralSolver
 from .reduced import ReducedSolver
+from .schur import SchurSolver
 from .subspace import SubspaceSolver
 
 CATALOGUE = {
     "subspace": SubspaceSolver,
     "coupled": CoupledSolver,
+    "schur": SchurSolver,
     "reduced": ReducedSolver,
     "general": GeneralSolver,
     "full space": FullSpaceSolver,
@@ -23,5 +25,6 @@ __all__ = [
     "FullSpaceSolver",
     "GeneralSolver",
     "ReducedSolver",
+    "SchurSolver",
     "SubspaceSolver",
 ]

@@ -55,7 +55,7 @@ class MultigridSolver:
                 presmoother=("gauss_seidel", {"sweep": "forward"}),
                 postsmoother=("gauss_seidel", {"sweep": "backward"}),
             )
-        self._cycle = hierarchy.aspreconditioner(cycle="V")
+        self.cycle: Any = hierarchy.aspreconditioner(cycle="V")
         self.work.factorizations += 1
 
     def solve(self, rhs: FloatArray, *, transposed: bool = False) -> FloatArray:
@@ -63,7 +63,7 @@ class MultigridSolver:
         if not rhs.any():
             return np.zeros_like(rhs)
         x, info = cg(
-            self.matrix, rhs, rtol=self.accuracy, atol=0.0, maxiter=self.max_iterations, M=self._cycle
+            self.matrix, rhs, rtol=self.accuracy, atol=0.0, maxiter=self.max_iterations, M=self.cycle
         )
         if info != 0:
             residual = float(np.linalg.norm(rhs - self.matrix @ x) / np.linalg.norm(rhs))
