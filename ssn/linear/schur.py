@@ -31,14 +31,13 @@ from scipy.sparse.linalg import LinearOperator
 from ..protocols import Direction, Evaluation
 from .boundary import is_symmetric, product, transpose_product
 from .direct import Factorization, SingularMatrixError
+from .krylov import conjugate_residuals
 from .multigrid import MultigridSolver
 
 FloatArray = npt.NDArray[np.float64]
 
 # directions kept: the latest
 KEPT = 80
-# iterations in a row in which the residual falls by less than a tenth in all, after which there is no more to gain
-IDLE = 15
 # share of changed components of D up to which the factor of the earlier ones is kept, and the iterations after which it
 # is replaced all the same
 FEW, PATIENCE = 0.01, 12
@@ -177,62 +176,34 @@ class SchurSolver:
     def solve(self, at: Evaluation, forcing: float) -> Direction:
         """Return [dy, dp]; the residual, in the scaling of `CoupledSolver`, is computed at the end."""
         operators: SchurOperators = self.equation.operators
-        size, scale = operators.size, 1.0 / operators.root
+        size = operators.size
         try:
             operators.activate(at.data.derivative.diagonal)
         except SingularMatrixError as error:
             return Direction(None, np.inf, 0, "singular", f"singular preconditioner: {error}")
-        rhs = np.stack([-at.residual[:size] * scale, -at.residual[size:]])
-        left, total = rhs.copy(), np.zeros_like(rhs)
-        norm = first = float(np.linalg.norm(rhs))
-        kept: list[tuple[FloatArray, FloatArray]] = []
-        norms = [norm]
-        inner = 0
-        while norm > forcing * first and inner < self.max_inner:
-            if inner >= IDLE and norm > 0.9 * norms[-IDLE]:
-                break
-            try:
-                if inner == PATIENCE and operators.stale:
-                    operators.refresh()
-            except SingularMatrixError:
-                break
-            inner += 1
-            z = np.stack(operators.correct(left[0] * operators.root, left[1]))
-            image = self._image(z)
-            for old, old_image in kept:
-                share = float(np.vdot(old_image, image))
-                z -= share * old
-                image -= share * old_image
-            length = float(np.linalg.norm(image))
-            if not np.isfinite(length) or length == 0.0:
-                return Direction(
-                    None, np.inf, inner, "singular", "the preconditioner returned NaN or nothing"
-                )
-            z /= length
-            image /= length
-            share = float(np.vdot(image, left))
-            total += share * z
-            left -= share * image
-            norm = float(np.linalg.norm(left))
-            kept.append((z, image))
-            if len(kept) > KEPT:
-                kept.pop(0)
-            if norm <= forcing * first:  # by recurrence, which drifts: go on from the residual itself
-                left = rhs - self._image(total)
-                norm = float(np.linalg.norm(left))
-                kept.clear()
-            norms.append(norm)
-        if first > 0.0 and kept:
-            norm = float(np.linalg.norm(rhs - self._image(total)))
-        status = "solved" if norm <= forcing * first else "inaccurate"
-        return Direction(total.ravel(), norm / first if first > 0.0 else 0.0, inner, status)
+        rhs = -at.residual
+        rhs[:size] /= operators.root
+
+        def precondition(left: FloatArray, inner: int) -> FloatArray:
+            if inner == PATIENCE and operators.stale:
+                operators.refresh()
+            return np.concatenate(operators.correct(left[:size] * operators.root, left[size:]))
+
+        try:
+            x, left, inner = conjugate_residuals(
+                self._image, precondition, rhs, forcing, max_inner=self.max_inner, kept=KEPT
+            )
+        except SingularMatrixError as error:
+            return Direction(None, np.inf, 0, "singular", f"singular preconditioner: {error}")
+        if not np.isfinite(left):
+            return Direction(None, np.inf, inner, "singular", "the preconditioner returned NaN or nothing")
+        return Direction(x, left, inner, "solved" if left <= forcing else "inaccurate")
 
     def _image(self, z: FloatArray) -> FloatArray:
         """The system applied to [dy, dp], its first row scaled."""
         operators = self.equation.operators
-        image = np.stack(operators.apply(z[0], z[1]))
-        image[0] /= operators.root
-        return image
+        first, second = operators.apply(z[: operators.size], z[operators.size :])
+        return np.concatenate([first / operators.root, second])
 
 
 def _mass(problem: Any) -> sp.csr_array:
