@@ -59,7 +59,7 @@ def finish(plan: Plan, result: LoopResult, limits: Limits, before: Any) -> Solut
     if outcome is Outcome.CONVERGED and doubt is not None:
         outcome, message = doubt
     work = plan.equation.work
-    note = getattr(plan.solver, "note", "")
+    note = getattr(plan.equation, "linear_note", "")
     return Solution(
         x=x,
         converged=outcome is Outcome.CONVERGED,

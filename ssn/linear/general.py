@@ -8,11 +8,10 @@ import numpy as np
 import scipy.sparse as sp
 from scipy.sparse.linalg import LinearOperator, cg, gmres
 
-from ..errors import InputError
 from ..protocols import Direction, Evaluation, Linearization
 from .boundary import as_square
 from .direct import Factorization, SingularMatrixError
-from .preconditioned import PreconditionedMatrix, krylov, why_iterate
+from .preconditioned import PreconditionedMatrix, checked_preconditioner, krylov, why_iterate
 
 
 class GeneralSolver:
@@ -28,10 +27,9 @@ class GeneralSolver:
     max_inner : int
         Krylov iterations at most.
 
-    Attributes
-    ----------
-    note : str
-        What was decided about large matrices, and why; empty where there was nothing to decide.
+    Notes
+    -----
+    What was decided about large matrices, and why, is left in ``equation.linear_note`` for ``Solution.choices``.
     """
 
     name = "general"
@@ -39,7 +37,6 @@ class GeneralSolver:
     def __init__(self, equation: Any, *, max_inner: int = 2000) -> None:
         self.equation = equation
         self.max_inner = max_inner
-        self.note = ""
         self._factor: Factorization | None = None
         self._claims: tuple[bool, bool] = (False, False)
         self._iterate = True
@@ -53,9 +50,7 @@ class GeneralSolver:
         if not isinstance(derivative, LinearOperator):
             data = sp.csr_array(derivative).data if sp.issparse(derivative) else np.asarray(derivative)
             if not np.isfinite(data).all():
-                return Direction(
-                    None, np.inf, 0, "singular", "the derivative has NaN or infinite entries"
-                )
+                return Direction(None, np.inf, 0, "singular", "the derivative has NaN or infinite entries")
             matrix = as_square(derivative, "the derivative")
         given = self._given(linearization, at)
         if given is not None and self._iterate:
@@ -74,17 +69,9 @@ class GeneralSolver:
 
     def _given(self, linearization: Linearization, at: Evaluation) -> LinearOperator | None:
         """The preconditioner of the linearisation, else of the equation."""
-        given: Any = getattr(linearization, "preconditioner", None)
-        if given is None:
-            given = getattr(self.equation.user, "preconditioner", None)
-        if given is None:
-            return None
-        if getattr(given, "shape", None) != (at.x.size, at.x.size) or not hasattr(given, "matvec"):
-            raise InputError(
-                f"preconditioner must be a LinearOperator of shape {at.x.size}x{at.x.size} that approximates the "
-                f"inverse of the derivative, got {type(given).__name__} of shape {getattr(given, 'shape', None)}"
-            )
-        return given
+        if getattr(linearization, "preconditioner", None) is not None:
+            return checked_preconditioner(linearization.preconditioner, at.x.size)
+        return checked_preconditioner(getattr(self.equation.user, "preconditioner", None), at.x.size)
 
     def _with(
         self, preconditioner: LinearOperator, matrix: Any, at: Evaluation, forcing: float, definite: bool
@@ -111,13 +98,13 @@ class GeneralSolver:
         if left > 1.01 * forcing:
             self._go_direct(f"with {kind}", Direction(x, left, inner))
             return None
-        self.note = f"general: {kind} ({why})"
+        self.equation.linear_note = f"general: {kind} ({why})"
         return Direction(x, left, inner)
 
     def _go_direct(self, what: str, found: Direction | None) -> None:
         self._iterate = False
         left = "" if found is None else f" left {found.relative_residual:.1e}"
-        self.note = f"general: direct, the iteration {what}{left}"
+        self.equation.linear_note = f"general: direct, the iteration {what}{left}"
 
     def _direct(self, matrix: Any, at: Evaluation, claims: tuple[bool, bool]) -> Direction:
         work = self.equation.work

@@ -17,6 +17,7 @@ import scipy.sparse as sp
 from scipy.sparse.csgraph import reverse_cuthill_mckee
 from scipy.sparse.linalg import LinearOperator, cg, spilu
 
+from ..errors import InputError
 from ..work import WorkCounts
 from .direct import SingularMatrixError
 from .krylov import conjugate_residuals
@@ -136,6 +137,23 @@ def krylov(
         return np.asarray(preconditioner @ r, dtype=np.float64)
 
     return conjugate_residuals(apply, precondition, rhs, forcing, max_inner=max_inner, kept=KEPT)
+
+
+def checked_preconditioner(given: Any, size: int) -> LinearOperator | None:
+    """A user's preconditioner, or None where there is none; raises `InputError` where it does not fit."""
+    if given is None:
+        return None
+    if getattr(given, "shape", None) != (size, size) or not hasattr(given, "matvec"):
+        raise InputError(
+            f"preconditioner must be a LinearOperator of shape {size}x{size} that approximates the inverse of the "
+            f"derivative, got {type(given).__name__} of shape {getattr(given, 'shape', None)}"
+        )
+    return given
+
+
+def preconditioner_of(equation: Any, size: int) -> LinearOperator | None:
+    """The preconditioner that the map of a natural equation brings."""
+    return checked_preconditioner(getattr(getattr(equation, "map", None), "preconditioner", None), size)
 
 
 def _incomplete(matrix: sp.csr_array) -> LinearOperator:
