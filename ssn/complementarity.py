@@ -27,7 +27,9 @@ class ComplementarityProblem:
     Parameters
     ----------
     F : AffineMap, SmoothMap, function, or object with value(x) and derivative(x)
-        A plain function of a NumPy array of n numbers is traced: its derivative follows from its operations.
+        A plain function of a NumPy array of n numbers is traced: its derivative follows from its operations. Where the
+        derivative is a LinearOperator, an attribute ``preconditioner`` of the object, a LinearOperator (n, n) that
+        approximates its inverse (symmetric positive definite where F' is), speeds up the inner iterations.
     lower, upper : float or array, shape (n,)
         Infinite where there is no bound.
     size : int, optional
@@ -109,6 +111,11 @@ class ComplementarityProblem:
                 f"F'(x) has shape {getattr(derivative, 'shape', None)}, expected n x n, n = {self.unknowns}"
             )
         return derivative
+
+    @property
+    def preconditioner(self) -> Any:
+        """What F brings under this name, else None."""
+        return getattr(self.map, "preconditioner", None)
 
     @property
     def symmetric(self) -> bool:

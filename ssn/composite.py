@@ -104,6 +104,11 @@ class CompositeProblem:
             )
         return hessian
 
+    @property
+    def preconditioner(self) -> Any:
+        """What the smooth part brings under this name for a Hessian that is a LinearOperator, else None."""
+        return getattr(self.part, "preconditioner", None)
+
     def potential(self, u: FloatArray) -> float:
         """f(u)."""
         return float(self.part.value(u))

@@ -78,6 +78,7 @@ def finish(plan: Plan, result: LoopResult, limits: Limits, before: Any) -> Solut
     if outcome is Outcome.CONVERGED and doubt is not None:
         outcome, message = doubt
     work = plan.equation.work
+    note = getattr(plan.equation, "linear_note", "")
     return Solution(
         x=x,
         converged=outcome is Outcome.CONVERGED,
@@ -90,7 +91,7 @@ def finish(plan: Plan, result: LoopResult, limits: Limits, before: Any) -> Solut
         start_norm=result.start_norm,
         pieces=fields.pop("pieces", best.pieces),
         work=work.since(before) if before is not None else work.copy(),
-        choices=plan.choices,
+        choices={**plan.choices, "linear": note} if note else plan.choices,
         problem=plan.problem,
         iterate=best.x,
         **fields,

@@ -23,6 +23,7 @@ from .equations.augmented import AugmentedEquation
 from .equations.complementarity import FischerBurmeisterEquation, MidEquation, inside_bounds
 from .equations.coupled import CoupledEquation
 from .equations.dual import DualEquation
+from .equations.factorised_pair import FactorisedPairEquation
 from .equations.full_space import FullSpaceEquation, has_dual
 from .equations.general import GeneralEquation
 from .equations.natural import NaturalEquation
@@ -39,11 +40,13 @@ from .linear import (
     GeneralSolver,
     PrimalDualSolver,
     ReducedSolver,
+    SchurSolver,
     SubspaceSolver,
 )
 from .linear.augmented import explicit_complement
 from .linear.coupled import refusal
 from .linear.primal_dual import WIDE_ROW
+from .linear.schur import refusal as schur_refusal
 from .moreau_yosida import PenaltyPath, first_penalty
 from .nonlinear_control import NonlinearControlProblem
 from .norm_terms import NORM, OTHER, QUADRATIC, NormRows
@@ -204,6 +207,11 @@ def _prepare_control(problem: ControlProblem, start: Any, globalization: Any, li
             return _prepare_coupled(problem, control, pair, linear)
         if linear == "coupled":
             raise InputError(f"linear='coupled' does not fit this problem: {reason}")
+    if linear == "schur":
+        reason = schur_refusal(problem)
+        if reason is not None:
+            raise InputError(f"linear='schur' does not fit this problem: {reason}")
+        return _prepare_schur(problem, control, pair)
     path = _path_without_quadratic(problem)
     alpha = problem.alpha if problem.alpha > 0 else 1.0
     equation = DualEquation(problem, problem.reduced_target(), alpha, problem.cost)
@@ -311,6 +319,22 @@ def _path_without_quadratic(problem: ControlProblem) -> GapPath | ProximalPointP
     if problem.alpha > 0:
         return None
     return GapPath() if problem.has_gap else ProximalPointPath()
+
+
+def _prepare_schur(
+    problem: ControlProblem, control: FloatArray | None, pair: tuple[FloatArray, FloatArray] | None
+) -> Plan:
+    equation = FactorisedPairEquation(problem)
+    factors = "cycles of multigrid" if equation.operators.multigrid else "one factorisation an active set"
+    choices = {
+        "equation": "state and adjoint, control eliminated",
+        "globalization": "dual: the dual function is convex, exact search costs products only"
+        if equation.has_dual
+        else "residual search: the state cannot be eliminated",
+        "linear": f"schur: Krylov iteration, Schur complement by matching, {factors}; asked for",
+    }
+    search: Globalization = DualSearch() if equation.has_dual else ResidualSearch().fresh()
+    return Plan(problem, equation, SchurSolver(equation), search, equation.start(control, pair), choices)
 
 
 def _prepare_state_bounds(

@@ -108,6 +108,9 @@ class Linearization:
         Active sets; empty for a smooth F.
     symmetric, positive_definite : bool
         Known structure of the derivative; a wrong claim is the caller's error.
+    preconditioner : LinearOperator, shape (n, n), optional
+        Approximates the inverse of the derivative: systems are then solved by preconditioned iterations, by conjugate
+        gradients where positive_definite is claimed, which it must be too.
     """
 
     residual: FloatArray
@@ -115,14 +118,15 @@ class Linearization:
     pieces: Mapping[str, Any] = field(default_factory=Pieces)
     symmetric: bool = False
     positive_definite: bool = False
+    preconditioner: Any = None
 
 
 @runtime_checkable
 class Equation(Protocol):
     """F(x) = 0 given by a user's object.
 
-    Optional members: ``scale`` (magnitude of the residual, a number or an array like the residual) and
-    ``start`` (an array, used when `solve` gets no start).
+    Optional members: ``scale`` (magnitude of the residual, a number or an array like the residual), ``start`` (an
+    array, used when `solve` gets no start) and ``preconditioner`` (as in `Linearization`, one for all x).
     """
 
     def residual(self, x: FloatArray) -> FloatArray:

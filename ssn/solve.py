@@ -83,9 +83,10 @@ def solve(
         nonlinear, envelope search for other composite problems, residual search and smoothing path for complementarity,
         dual search along a path of multipliers for several terms, residual search otherwise. What was decided, and
         why, stands in ``Solution.choices``.
-    linear : {"auto", "subspace", "coupled", "reduced", "general", "full space", "augmented", "primal-dual"}
+    linear : {"auto", "subspace", "coupled", "schur", "reduced", "general", "full space", "augmented", "primal-dual"}
         How Newton systems are solved; only those that fit the problem are accepted beside "auto". Control problems with
-        a symmetric state operator have two: "subspace" factorises it, "coupled" is multigrid on state and adjoint.
+        explicit operators have three: "subspace" factorises the state operator and keeps a basis, "coupled" (symmetric
+        E) is multigrid on state and adjoint, "schur" factorises once an active set.
     callback : callable, optional
         Gets each `StepRecord`; may raise `StopSolve`.
     progress : bool

@@ -40,6 +40,7 @@ class GeneralEquation:
         self.scale = scale
         self.own_norm: Callable[[FloatArray], float] | None = None
         self._linearized: tuple[Any, Linearization | None] = (None, None)
+        self.linear_note = ""  # what the linear solver has decided
 
     def _checked(self, value: Any, what: str) -> FloatArray:
         array = np.asarray(value, dtype=np.float64)

@@ -113,6 +113,7 @@ class NaturalEquation:
         self._best_norm = np.inf
         self._derivative_at: tuple[Any, Any] = (None, None)
         self.first_pieces: Pieces | None = None
+        self.linear_note = ""  # what the linear solver has decided
 
     def evaluate(self, x: FloatArray) -> Evaluation:
         """One evaluation of F and one proximal map."""

@@ -7,11 +7,13 @@ from .general import GeneralSolver
 from .normal import NormalSolver
 from .primal_dual import PrimalDualSolver
 from .reduced import ReducedSolver
+from .schur import SchurSolver
 from .subspace import SubspaceSolver
 
 CATALOGUE = {
     "subspace": SubspaceSolver,
     "coupled": CoupledSolver,
+    "schur": SchurSolver,
     "reduced": ReducedSolver,
     "general": GeneralSolver,
     "full space": FullSpaceSolver,
@@ -28,5 +30,6 @@ __all__ = [
     "NormalSolver",
     "PrimalDualSolver",
     "ReducedSolver",
+    "SchurSolver",
     "SubspaceSolver",
 ]

@@ -53,7 +53,7 @@ class CholmodFactor:
 
     def __init__(self, matrix: sp.csc_array) -> None:
         require()
-        a = sp.csc_matrix(matrix)
+        a = _with_short_indices(matrix)
         try:
             if _LEGACY:
                 self._factor: Any = _cholmod.analyze(a)
@@ -65,7 +65,7 @@ class CholmodFactor:
 
     def refactorize(self, matrix: sp.csc_array) -> None:
         """Numeric factorisation of a matrix with the same pattern."""
-        a = sp.csc_matrix(matrix)
+        a = _with_short_indices(matrix)
         try:
             if _LEGACY:
                 self._factor.cholesky_inplace(a)
@@ -78,6 +78,14 @@ class CholmodFactor:
         """Solve for one (n,) or several (n, k) right-hand sides."""
         solution = self._factor(rhs) if _LEGACY else self._factor.solve(rhs)
         return np.asarray(solution, dtype=np.float64)
+
+
+def _with_short_indices(matrix: sp.csc_array) -> sp.csc_matrix:
+    """The matrix with 32-bit indices where they suffice: products of matrices may have longer ones."""
+    a = sp.csc_matrix(matrix)
+    if a.indices.dtype != np.int32 and a.nnz <= np.iinfo(np.int32).max:
+        a.indices, a.indptr = a.indices.astype(np.int32), a.indptr.astype(np.int32)
+    return a
 
 
 def _translated(error: Exception) -> Exception:

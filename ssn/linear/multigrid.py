@@ -62,7 +62,7 @@ class MultigridSolver:
                 presmoother=("gauss_seidel", {"sweep": "forward"}),
                 postsmoother=("gauss_seidel", {"sweep": "backward"}),
             )
-        self._cycle = hierarchy.aspreconditioner(cycle="V")
+        self.cycle: Any = hierarchy.aspreconditioner(cycle="V")
         self.work.factorizations += 1
         known = 1.5 + np.sin(np.arange(self.matrix.shape[0]) * 0.7)
         if float(np.linalg.norm(self.solve(self.matrix @ known) - known)) > LOST_DIGITS * float(
@@ -75,7 +75,7 @@ class MultigridSolver:
         if not rhs.any():
             return np.zeros_like(rhs)
         x, info = cg(
-            self.matrix, rhs, rtol=self.accuracy, atol=0.0, maxiter=self.max_iterations, M=self._cycle
+            self.matrix, rhs, rtol=self.accuracy, atol=0.0, maxiter=self.max_iterations, M=self.cycle
         )
         if info != 0:
             residual = float(np.linalg.norm(rhs - self.matrix @ x) / np.linalg.norm(rhs))

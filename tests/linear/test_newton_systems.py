@@ -1,5 +1,6 @@
 """Newton systems: the recycled subspace and the reduced solver against dense solutions of the full system."""
 
+from dataclasses import replace
 from types import SimpleNamespace
 
 import numpy as np
@@ -7,8 +8,10 @@ import pytest
 import scipy.sparse as sp
 from scipy.sparse.linalg import LinearOperator, aslinearoperator
 
+import ssn
 from ssn.costs import DiagonalDerivative
 from ssn.inner import InnerProduct
+from ssn.linear import preconditioned
 from ssn.linear.reduced import ReducedSolver
 from ssn.linear.subspace import SubspaceSolver
 from ssn.work import WorkCounts
@@ -287,3 +290,197 @@ def test_a_broken_operator_is_not_solved():
     for symmetric in (True, False):
         found = ReducedSolver(Natural(broken, weights, symmetric=symmetric)).solve(at, 1e-12)
         assert found.status == "singular"
+
+
+# large matrices and preconditioners
+
+
+def transport(shape, wind):
+    """-Lap with upwinded transport along each axis; symmetric for wind 0."""
+    total = 0.0
+    for axis, n in enumerate(shape):
+        factors = [sp.eye_array(m) for m in shape]
+        ones, drift = np.ones(n - 1), wind / (n + 1)
+        factors[axis] = sp.diags_array(
+            [-(1 + drift) * ones, (2 + drift) * np.ones(n), -ones], offsets=[-1, 0, 1]
+        )
+        matrix = factors[0]
+        for factor in factors[1:]:
+            matrix = sp.kron(matrix, factor)
+        total = total + matrix
+    return sp.csr_array(total)
+
+
+def biharmonic(shape):
+    """Squared -Lap: positive definite with large positive entries beside the diagonal."""
+    matrix = transport(shape, 0.0)
+    return sp.csr_array(matrix @ matrix)
+
+
+@pytest.fixture
+def small_counts_as_large(monkeypatch):
+    monkeypatch.setattr(preconditioned, "LARGE", 100)
+    monkeypatch.setattr(preconditioned, "WIDE", 100)
+
+
+def test_why_a_matrix_is_iterated_on(small_counts_as_large):
+    assert preconditioned.why_iterate(transport((9, 9), 0.0)) is None
+    assert preconditioned.why_iterate(np.eye(200)) is None
+    assert preconditioned.why_iterate(transport((20, 20), 0.0))[0] == "multigrid"
+    assert preconditioned.why_iterate(transport((20, 20), 500.0))[0] == "multigrid"
+    assert preconditioned.why_iterate(biharmonic((20, 20))) is None
+    assert preconditioned.why_iterate(-transport((20, 20), 0.0)) is None
+    assert preconditioned.why_iterate(abs(transport((20, 20), 0.0))) is None
+    kind, why = preconditioned.why_iterate(biharmonic((9, 9, 9)))
+    assert kind == "incomplete factors"
+    assert "729" in why
+
+
+@pytest.mark.parametrize(("shape", "width"), [((30, 7), 7), ((12, 40), 12), ((6, 7, 8), 42)])
+def test_the_width_is_that_of_the_best_ordering_by_levels(shape, width):
+    matrix = transport(shape, 0.0)
+    shuffled = np.random.default_rng(1).permutation(matrix.shape[0])
+    found = preconditioned.bandwidth(sp.csr_array(matrix[shuffled][:, shuffled]))
+    assert 0.9 * width <= found <= 1.5 * width
+
+
+class Large:
+    """F(x) = A x + x^3 / 10 - b as an `Equation`."""
+
+    def __init__(self, matrix, *, claims=(False, False), operator=False, preconditioner=None):
+        self.matrix, self.claims, self.operator = matrix, claims, operator
+        n = matrix.shape[0]
+        self.b = np.cos(np.arange(n))
+        self.start = np.zeros(n)
+        if preconditioner is not None:
+            self.preconditioner = preconditioner
+
+    def residual(self, x):
+        return self.matrix @ x + 0.1 * x**3 - self.b
+
+    def linearize(self, x):
+        derivative = sp.csr_array(self.matrix + sp.diags_array(0.3 * x**2))
+        return ssn.Linearization(
+            self.residual(x), aslinearoperator(derivative) if self.operator else derivative,
+            symmetric=self.claims[0], positive_definite=self.claims[1],
+        )  # fmt: skip
+
+
+@pytest.mark.parametrize(
+    ("matrix", "claims", "words"),
+    [
+        (transport((20, 20), 0.0), (True, True), "multigrid (400 unknowns, the diagonal dominates)"),
+        (transport((20, 20), 0.0), (False, False), "multigrid"),
+        (transport((20, 20), 300.0), (False, False), "multigrid"),
+        (biharmonic((8, 8, 8)), (False, False), "incomplete factors"),
+    ],
+)
+def test_large_general_equations_are_iterated_on(small_counts_as_large, matrix, claims, words):
+    found = ssn.solve(Large(matrix, claims=claims), tolerance=1e-10)
+    assert found.converged
+    assert words in found.choices["linear"]
+    assert sum(step.inner_iterations for step in found.steps) > 0
+    assert all(step.linear_residual <= 1.01 * step.forcing for step in found.steps)
+    small = ssn.solve(Large(matrix, claims=claims), tolerance=1e-12, linear="general")
+    np.testing.assert_allclose(found.x, small.x, atol=1e-7 * abs(small.x).max())
+
+
+def test_a_failing_iteration_gives_way_to_factors(small_counts_as_large, monkeypatch):
+    monkeypatch.setattr(preconditioned, "ITERATIONS", 1)
+    found = ssn.solve(Large(transport((20, 20), 0.0)), tolerance=1e-11)
+    assert found.converged
+    assert "direct, the iteration with multigrid left" in found.choices["linear"]
+    assert found.steps[-1].inner_iterations == 0
+
+
+@pytest.mark.parametrize("operator", [False, True])
+@pytest.mark.parametrize("claims", [(False, False), (True, True)])
+def test_a_preconditioner_of_the_equation_is_used(operator, claims):
+    matrix = transport((15, 15), 0.0)
+    inverse = aslinearoperator(np.linalg.inv(matrix.toarray()))
+    found = ssn.solve(Large(matrix, claims=claims, operator=operator, preconditioner=inverse))
+    assert found.converged
+    counts = [step.inner_iterations for step in found.steps]
+    assert 0 < max(counts) <= 12
+    if operator:
+        without = ssn.solve(Large(matrix, claims=claims, operator=True))
+        assert max(step.inner_iterations for step in without.steps) > 2 * max(counts)
+
+
+def test_a_preconditioner_of_the_linearisation_comes_first():
+    matrix = transport((15, 15), 50.0)
+    calls = []
+
+    class Own(Large):
+        def linearize(self, x):
+            lin = super().linearize(x)
+            inverse = np.linalg.inv(lin.derivative.toarray())
+            calls.append(1)
+            return replace(lin, preconditioner=aslinearoperator(inverse))
+
+    found = ssn.solve(Own(matrix, preconditioner=aslinearoperator(np.eye(225))))
+    assert found.converged
+    assert calls
+    assert max(step.inner_iterations for step in found.steps) <= 2
+
+
+@pytest.mark.parametrize("bad", [np.eye(225), aslinearoperator(np.eye(3))])
+def test_a_preconditioner_that_does_not_fit_is_refused(bad):
+    with pytest.raises(ssn.InputError, match="preconditioner"):
+        ssn.solve(Large(transport((15, 15), 0.0), preconditioner=bad))
+
+
+def test_a_useless_preconditioner_gives_way_to_factors():
+    zero = LinearOperator((225, 225), matvec=lambda x: 0.0 * x, dtype=float)
+    found = ssn.solve(Large(transport((15, 15), 0.0), preconditioner=zero))
+    assert found.converged
+    assert "direct" in found.choices["linear"]
+
+
+@pytest.mark.parametrize("wind", [0.0, 80.0])
+def test_large_reduced_systems_are_iterated_on(small_counts_as_large, monkeypatch, wind):
+    matrix = transport((24, 24), wind)
+    load = np.sin(np.arange(576) / 40.0) / 50.0
+    small = 1e-3 * np.ones(576)
+    problem = ssn.ComplementarityProblem(ssn.AffineMap(matrix, load), -small, 30 * small)
+    found = ssn.solve(problem)
+    assert found.converged
+    assert "multigrid" in found.choices["linear"]
+    monkeypatch.setattr(preconditioned, "LARGE", 10**9)
+    direct = ssn.solve(problem)
+    assert "linear" not in direct.choices
+    np.testing.assert_allclose(found.x, direct.x, atol=1e-8 * abs(direct.x).max())
+
+
+@pytest.mark.parametrize("symmetric", [True, False])
+def test_reduced_operators_take_the_preconditioner_of_the_map(symmetric):
+    n = 225
+    matrix = transport((15, 15), 0.0 if symmetric else 60.0)
+    _, weights, at, _ = natural_case(1, n, symmetric=True, share=0.3, scalar_step=True)
+    d = at.data.derivative.diagonal
+    full = np.eye(n) - d[:, None] * (np.eye(n) - 0.3 / weights[:, None] * matrix.toarray())
+    expected = np.linalg.solve(full, -at.residual)
+    counts = []
+    for given in (None, aslinearoperator(np.linalg.inv(matrix.toarray()))):
+        equation = Natural(aslinearoperator(matrix), weights, symmetric=symmetric)
+        equation.map = SimpleNamespace(preconditioner=given)
+        found = ReducedSolver(equation).solve(at, 1e-11)
+        assert found.status == "solved"
+        np.testing.assert_allclose(found.vector, expected, rtol=1e-6, atol=1e-8)
+        counts.append(found.inner_iterations)
+    assert counts[1] < counts[0]
+
+
+def test_transport_without_a_preconditioner_does_not_stall():
+    """With SciPy's own restart of 20 it takes more than ten times as many iterations."""
+    n = 90
+    matrix = sp.csr_array(transport((n,), 5.0))
+    at = SimpleNamespace(
+        x=np.zeros(n), residual=np.ones(n), norm=1.0,
+        data=SimpleNamespace(derivative=DiagonalDerivative(np.ones(n)), step=0.3),
+    )  # fmt: skip
+    equation = Natural(aslinearoperator(matrix), np.ones(n), symmetric=False)
+    found = ReducedSolver(equation).solve(at, 1e-8)
+    assert found.status == "solved"
+    assert found.inner_iterations <= 2 * n
+    np.testing.assert_allclose(0.3 * (matrix @ found.vector), -at.residual, atol=1e-6)

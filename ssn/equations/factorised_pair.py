@@ -1,0 +1,85 @@
+"""The optimality system of a control problem in state and adjoint, where the state equation can be solved exactly.
+
+`CoupledEquation` for E symmetric or not: what that estimates by multigrid cycles is a solve here, so that the residual
+norm of each evaluation is the bound of its distance to the solution.
+"""
+
+from __future__ import annotations
+
+from dataclasses import replace
+from typing import Any
+
+import numpy as np
+import numpy.typing as npt
+
+from ..inner import InnerProduct, relative
+from ..linear.schur import SchurOperators
+from ..pieces import Pieces
+from ..protocols import Evaluation
+from ..records import Certificate
+from .coupled import EPS, CoupledEquation, CoupledPoint
+
+FloatArray = npt.NDArray[np.float64]
+
+
+class FactorisedPairEquation(CoupledEquation):
+    """F(y, p) = 0 with x = [y, p] as iterate, and a state model that solves.
+
+    Parameters
+    ----------
+    problem : ControlProblem
+        One that `ssn.linear.schur.refusal` has nothing against.
+    """
+
+    def __init__(self, problem: Any) -> None:
+        # not that of the base class, which builds a hierarchy
+        self.problem, self.alpha, self.cost, self.work = problem, problem.alpha, problem.cost, problem.work
+        self.operators: Any = SchurOperators(problem)
+        self.size = self.operators.size
+        self.piecewise_affine = bool(getattr(problem.cost, "piecewise_affine", True))
+        weight = problem.observations
+        self.has_dual = problem.observation is None
+        self._weight = weight.vector if weight.vector is not None else weight.matrix
+        whole = problem.observation is None and weight.vector is not None
+        mass = weight.vector if whole else np.ones(self.size)
+        self.inner = InnerProduct(np.concatenate([mass, mass / self.alpha]))
+        self._source = np.zeros(self.size) if problem.source is None else problem.source
+
+    def residuals(self, x: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
+        """r1, r2, the argument of the proximal map, and u."""
+        y, p = x[: self.size], x[self.size :]
+        self.work.operator_products += 2
+        v = self.problem.pull_back(p) / self.alpha
+        self.work.proximal_maps += 1
+        u = self.cost.prox(v, 1.0 / self.alpha)
+        first = self.operators.matrix @ p + self.state_load(y)
+        second = self.operators.state @ y - self.control_load(u)
+        return first, second, v, u
+
+    def evaluate(self, x: FloatArray) -> Evaluation:
+        """Both residuals, and two solves with the state operator for their norm."""
+        first, second, v, u = self.residuals(x)
+        residual = np.concatenate([first, second])
+        if not np.isfinite(residual).all():
+            return Evaluation(x, residual, np.inf, np.inf, Pieces())
+        step = 1.0 / self.alpha
+        errors = self.operators.errors(second, first / self.operators.root)
+        norm = self.size_of(*errors)
+        accuracy = relative(norm / self.operators.root, self.control_size(u, v))
+        data = CoupledPoint(v, u, self.cost.prox_derivative(v, step), errors)
+        return Evaluation(x, residual, norm, accuracy, self.cost.pieces(v, step), data)
+
+    def rounding(self, x: FloatArray, u: FloatArray) -> float:
+        """The energy that rounding errors of the residuals leave, estimated with signs without order."""
+        y, p = x[: self.size], x[self.size :]
+        signs = EPS * (((np.arange(self.size) * 2654435761) >> 16 & 2) - 1.0)
+        second = abs(self.operators.state) @ abs(y) + abs(self.control_load(u))
+        first = abs(self.operators.matrix) @ abs(p) + abs(self.state_load(y))
+        return self.energy(signs * first, signs * second)
+
+    def collect(self, x: FloatArray) -> tuple[FloatArray, float, dict[str, Any]]:
+        """Control, accuracy computed afresh, and the fields of `Solution` at an iterate."""
+        u, accuracy, fields = super().collect(x)
+        certificate: Certificate = fields["certificate"]
+        fields["certificate"] = replace(certificate, method="residuals of state and adjoint equation")
+        return u, accuracy, fields
