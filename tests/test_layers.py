@@ -73,6 +73,7 @@ LEVELS: dict[str, float] = {
     "primal_dual_path": 2.25,
     # what "auto" decides, and the end of a solve
     "extragradient": 2.1,
+    "plans": 2.28,
     "prepare": 2.3,
     "finish": 2.4,
     # front doors

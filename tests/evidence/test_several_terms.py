@@ -113,7 +113,7 @@ def test_a_wrong_adjoint_is_caught():
 
 
 def test_a_wrong_newton_step_is_caught(monkeypatch):
-    monkeypatch.setattr("ssn.prepare.PrimalDualSolver", HalfStep)
+    monkeypatch.setattr("ssn.plans.sums.PrimalDualSolver", HalfStep)
     problem = variation()
     solution = ssn.solve(problem).require()
     failing = {c.name for c in check_derivative(problem, solution.x) if not c.holds}

@@ -13,7 +13,8 @@ from ssn.linear.algebraic_multigrid import AlgebraicHierarchy
 from ssn.linear.coupled import CoupledOperators, CoupledSolver, refusal
 from ssn.linear.grid_multigrid import GridHierarchy
 from ssn.linear.stencil import coarsen, dense, interpolation_weights, recognise
-from ssn.prepare import COUPLED_FROM, prepare
+from ssn.plans.control import COUPLED_FROM
+from ssn.prepare import prepare
 
 
 def laplacian(*shape):
@@ -340,7 +341,7 @@ def test_it_is_taken_for_many_states_and_says_why():
 
 
 def test_where_the_cycle_fails_the_dual_equation_takes_over(monkeypatch):
-    monkeypatch.setattr("ssn.prepare.COUPLED_FROM", 10)
+    monkeypatch.setattr("ssn.plans.control.COUPLED_FROM", 10)
     problem = grid_problem(16, 16)
     monkeypatch.setattr(GridHierarchy, "correct", lambda self, f, g: (1e-3 * f, 1e-3 * g))
     solution = ssn.solve(problem).require()
