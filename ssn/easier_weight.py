@@ -20,8 +20,8 @@ from .status import Outcome
 
 # the larger weight, and the accuracy asked of its solution
 FACTOR, ROUGH = 100.0, 0.1
-# steps after which a search that creeps is given up for the detour: the last of them shorter than half a step
-TRIED, SHORT, CREEPING = 10, 0.5, 3
+# steps after which a search that creeps is given up for the detour: the last of them shorter than a quarter
+TRIED, SHORT, CREEPING = 10, 0.25, 3
 # alpha over ||S||^2 below which the detour comes first
 TINY = 1e-4
 
@@ -58,31 +58,25 @@ def run_with_detour(
     steps: list[StepRecord] = []
     first: LoopResult | None = None
     if not detour.at_once:
-        first = run(
-            equation, solver, globalization, start, replace(limits, max_steps=min(TRIED, limits.max_steps)),
-            callback=callback,
-        )  # fmt: skip
+        first = run(equation, solver, globalization, start, limits, callback=callback, pause=_creeps)
         steps = first.steps
         if first.outcome is not Outcome.STEP_LIMIT or len(steps) >= limits.max_steps:
             return first
-        if not _creeps(first):
-            start = first.last.x
-    if first is None or _creeps(first):
-        easier, easier_solver = detour.make(FACTOR)
-        left = max(limits.max_steps - len(steps), 1)
-        rough = run(
-            easier, easier_solver, globalization, start,
-            replace(limits, tolerance=max(ROUGH, limits.tolerance), max_steps=left), callback=callback,
-            first_index=len(steps) + 1, stage=f"control weight {FACTOR:g} times larger",
-        )  # fmt: skip
-        carry_over = getattr(solver, "carry_over", None)
-        if carry_over is not None:
-            carry_over(easier_solver)
-        first = first if first is not None else replace(rough, steps=[])
-        steps = steps + rough.steps
-        if rough.outcome in (Outcome.INTERRUPTED, Outcome.STOPPED):
-            return replace(rough, steps=steps)
-        start = rough.last.x if rough.last.finite else start
+    easier, easier_solver = detour.make(FACTOR)
+    left = max(limits.max_steps - len(steps), 1)
+    rough = run(
+        easier, easier_solver, globalization, start,
+        replace(limits, tolerance=max(ROUGH, limits.tolerance), max_steps=left), callback=callback,
+        first_index=len(steps) + 1, stage=f"control weight {FACTOR:g} times larger",
+    )  # fmt: skip
+    carry_over = getattr(solver, "carry_over", None)
+    if carry_over is not None:
+        carry_over(easier_solver)
+    first = first if first is not None else replace(rough, steps=[])
+    steps = steps + rough.steps
+    if rough.outcome in (Outcome.INTERRUPTED, Outcome.STOPPED):
+        return replace(rough, steps=steps)
+    start = rough.last.x if rough.last.finite else start
     left = limits.max_steps - len(steps)
     if left <= 0:
         last = equation.evaluate(start)
@@ -105,6 +99,10 @@ def run_with_detour(
 
 
 def _creeps(result: LoopResult) -> bool:
-    """Whether the last steps were short and the solution is still far."""
+    """Whether the last steps of the first few were short and the solution is still far."""
     recent = result.steps[-CREEPING:]
-    return result.last.accuracy > ROUGH and all(step.length < SHORT for step in recent)
+    return (
+        len(result.steps) == TRIED
+        and result.last.accuracy > ROUGH
+        and all(step.length < SHORT for step in recent)
+    )

@@ -183,8 +183,9 @@ def run(
     callback: Callable[[StepRecord], None] | None = None,
     first_index: int = 1,
     stage: str = "",
+    pause: Callable[[LoopResult], bool] | None = None,
 ) -> LoopResult:
-    """Iterate from x until a stop rule holds.
+    """Iterate from x until a stop rule holds, or ``pause(result)`` is true after a step: then as at a step limit.
 
     The callback gets each `StepRecord` and may raise `StopSolve`. Ctrl-C ends with `Outcome.INTERRUPTED` and the
     best iterate; the caller turns that into an exception.
@@ -197,6 +198,8 @@ def run(
                 break
             if callback is not None:
                 callback(record)
+            if pause is not None and pause(loop.result):
+                break
     except StopSolve as stop:
         loop.result.outcome, loop.result.message = Outcome.STOPPED, str(stop)
     except KeyboardInterrupt:

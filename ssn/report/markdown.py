@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Sequence
 from pathlib import Path
 
 from ..errors import InputError
-from ..evidence import KnownValue
+from ..evidence import Assessment, KnownValue
+from ..evidence.own_methods import FILES_REFERENCE
 from .numbers import seconds, small
 from .verify_tables import Verified
 
@@ -42,13 +44,12 @@ def _row(one: Verified) -> list[str]:
         steps += f" [{', '.join(map(str, v.study.nested_steps))}]"
     work, certificate = a.solution.work, a.solution.certificate
     order = f" {a.rate.order:.1f}" if a.rate.verdict == "superlinear" and a.rate.order else ""
-    reference = a.methods[1].name if len(a.methods) > 1 else "-"
     return [
         a.name.replace("_", " "),
         f"{a.unknowns:,}",
         steps,
         a.rate.verdict + order,
-        f"{reference}, {a.agreement_tolerance:.0e}" + ("" if a.agreement == "holds" else f": {a.agreement}"),
+        _reference(a),
         _outside(a.known),
         small(None if certificate is None else certificate.relative),
         str(work.state_solves + work.linear_solves + work.multigrid_cycles),
@@ -57,11 +58,24 @@ def _row(one: Verified) -> list[str]:
     ]
 
 
+def _reference(a: Assessment) -> str:
+    """The problem's own reference or else the method nearest to ours, its distance, and what is asked."""
+    others = [m for m in a.methods[1:] if math.isfinite(m.distance)]
+    own = [m for m in others if m.name == FILES_REFERENCE]
+    if not others:
+        return a.agreement
+    chosen = own[0] if own else min(others, key=lambda m: m.distance)
+    verdict = "" if a.agreement == "holds" else f"{a.agreement}: "
+    return f"{verdict}{chosen.name} {chosen.distance:.0e} ({a.agreement_tolerance:.0e})"
+
+
 def _outside(known: Sequence[KnownValue]) -> str:
-    """The first value and how many there are; where one does not hold, that one."""
+    """A value and how many there are: one that does not hold, else the first that is not zero, else the first."""
     if not known:
         return "-"
-    first = next((value for value in known if not value.holds), known[0])
+    failing = [value for value in known if not value.holds]
+    figures = [value for value in known if value.expected not in (0, 0.0)]
+    first = [*failing, *figures, *known][0]
     held = sum(value.holds for value in known)
     text = f"{first.what}: {_short(first.computed)} for {_short(first.expected)} ({held} of {len(known)})"
     return text.replace("|", "\\|")
