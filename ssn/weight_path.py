@@ -11,7 +11,7 @@ import scipy.sparse as sp
 from scipy.sparse.csgraph import connected_components
 
 from .control import ControlProblem
-from .costs import Bounds, SparseCost
+from .costs import Bounds, GroupSparseCost, SparseCost
 from .errors import InputError
 from .follow import Path, follow
 from .plotting import new_figure
@@ -157,11 +157,14 @@ def weight_path(family: Callable[[float], Any], weights: Sequence[float], **opti
 
 
 def vanishing_weight(problem: Any) -> float:
-    """Return the smallest L1 weight for which the zero control is optimal: max |grad f(0)|, over the weight's profile.
+    """Return the smallest weight of the sparse cost for which the zero control is optimal.
+
+    For L1 it is max |grad f(0)| over the weight's profile, for group costs the largest norm of the groups of grad f(0);
+    what points out of a bound at zero does not count.
 
     Parameters
     ----------
-    problem : ControlProblem or CompositeProblem with a SparseCost
+    problem : ControlProblem or CompositeProblem with a SparseCost or GroupSparseCost
         Its own weight only matters as a profile: with a vector beta the result multiplies beta / max(beta).
 
     Returns
@@ -172,17 +175,17 @@ def vanishing_weight(problem: Any) -> float:
     Raises
     ------
     InputError
-        Where the cost is no SparseCost, or its bounds exclude zero.
+        Where the cost is none of the two, or its bounds exclude zero.
     """
-    cost = problem.cost
-    if not isinstance(cost, SparseCost):
-        raise InputError(f"vanishing_weight needs a SparseCost, got {type(cost).__name__}")
+    cost = _sparse_cost(problem, "vanishing_weight")
     if (cost.lower > 0).any() or (cost.upper < 0).any():
         raise InputError("zero is not within the bounds, so no weight makes the unknown vanish")
     _, gradient = problem.smooth(np.zeros(problem.unknowns))
     wanted = np.where(
         gradient < 0, np.where(cost.upper > 0, -gradient, 0.0), np.where(cost.lower < 0, gradient, 0.0)
     )
+    if isinstance(cost, GroupSparseCost):
+        wanted = cost.norms(wanted)
     profile = cost.beta / cost.beta.max() if cost.beta.max() > 0 else np.ones_like(cost.beta)
     if (profile == 0).any():
         raise InputError("beta is zero somewhere: no multiple of it makes the unknown vanish")
@@ -190,11 +193,11 @@ def vanishing_weight(problem: Any) -> float:
 
 
 def refit(problem: Any, support: Any) -> Any:
-    """Return the problem on a given support with the quadratic cost only: amplitudes without the bias of the L1 cost.
+    """Return the problem on a given support with the quadratic cost only: amplitudes without the sparse cost's bias.
 
     Parameters
     ----------
-    problem : ControlProblem or CompositeProblem with a SparseCost
+    problem : ControlProblem or CompositeProblem with a SparseCost or GroupSparseCost
     support : bool array, shape (n,), or Solution
         Components that may differ from zero; of a `Solution`, its nonzero components.
 
@@ -203,9 +206,7 @@ def refit(problem: Any, support: Any) -> Any:
     problem of the same kind
         With `Bounds` that are the old ones on the support and zero elsewhere; it shares the state model and its factor.
     """
-    cost = problem.cost
-    if not isinstance(cost, SparseCost):
-        raise InputError(f"refit needs a SparseCost, got {type(cost).__name__}")
+    cost = _sparse_cost(problem, "refit")
     mask = support.x != 0 if isinstance(support, Solution) else np.asarray(support)
     if mask.dtype != np.bool_ or mask.shape != (problem.unknowns,):
         raise InputError(
@@ -215,6 +216,13 @@ def refit(problem: Any, support: Any) -> Any:
     if ((lower > 0) | (upper < 0))[~mask].any():
         raise InputError("the bounds exclude zero off the support")
     return problem.with_cost(Bounds(np.where(mask, lower, 0.0), np.where(mask, upper, 0.0)))
+
+
+def _sparse_cost(problem: Any, name: str) -> SparseCost | GroupSparseCost:
+    cost = problem.cost
+    if not isinstance(cost, SparseCost | GroupSparseCost):
+        raise InputError(f"{name} needs a SparseCost or a GroupSparseCost, got {type(cost).__name__}")
+    return cost
 
 
 def placements(support: Any, graph: Any) -> list[FloatArray]:

@@ -109,3 +109,31 @@ def test_plot(tmp_path):
 def test_refused(call, message):
     with pytest.raises(ssn.InputError, match=message):
         call()
+
+
+def test_group_costs_have_a_vanishing_weight_and_a_refit():
+    rng = np.random.default_rng(5)
+    A, b = rng.standard_normal((12, 9)), rng.standard_normal(12)
+    profile = np.array([1.0, 0.5, 0.8])
+
+    def problem(weight, lower=-np.inf, upper=np.inf):
+        cost = ssn.GroupSparseCost(
+            weight * profile, shape=(3, 3), axis=0, inner_weights=0.5, lower=lower, upper=upper
+        )
+        return ssn.CompositeProblem(smooth=ssn.LeastSquares(A, b), cost=cost)
+
+    for bounds in ({}, {"lower": 0.0}, {"upper": 0.0}):
+        largest = ssn.vanishing_weight(problem(0.7, **bounds))
+        assert np.count_nonzero(ssn.solve(problem(largest * (1 + 1e-9), **bounds)).x) == 0
+        assert np.count_nonzero(ssn.solve(problem(largest * (1 - 1e-3), **bounds)).x) > 0
+    sparse = ssn.solve(problem(0.5 * largest, upper=0.0)).require()
+    again = ssn.solve(ssn.refit(problem(0.5 * largest, upper=0.0), sparse)).require()
+    on = sparse.x != 0
+    assert (again.x[~on] == 0).all() and (again.x <= 0).all()
+    assert np.linalg.norm(A @ again.x - b) < np.linalg.norm(A @ sparse.x - b)
+    with pytest.raises(ssn.InputError, match="zero is not within the bounds"):
+        ssn.vanishing_weight(problem(1.0, lower=0.1))
+    with pytest.raises(ssn.InputError, match="needs a SparseCost or a GroupSparseCost, got HuberCost"):
+        ssn.vanishing_weight(
+            ssn.CompositeProblem(smooth=ssn.LeastSquares(A, b), cost=ssn.HuberCost(1.0, 1.0))
+        )
