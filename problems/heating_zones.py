@@ -6,7 +6,7 @@ only one; the set point, a warm spot, moves over the plate. y is the temperature
     y' - kappa Lap y + loss y = sum_i u_i(t) chi_i in the unit square, 0 < t < 1, no flux through the edges, y(0) = 0,
 
 chi_i the indicator of zone i: halves (2), quarters (4), or a grid of 4 by 2 (8), each of area a. The powers per area
-u_i are chosen by
+u_i, cooling where negative, are chosen by
 
     minimise 1/2 ||y - z||^2 + alpha/2 a sum_i int u_i^2 dt + beta/2 int (a sum_i |u_i|)^2 dt.
 
@@ -32,8 +32,8 @@ steps.
 
 Caution: a design aid. Heaters that overheat or switch fast burn people and wear contactors: limits, thermostats and
 protection follow local codes and are the work of qualified people. How often the supply switches is not limited here.
-For alpha <= 1e-6 the worths of the zones agree to many digits, and steps may run out: follow alpha down from 1e-3 at the
-same beta.
+For alpha <= 1e-6 the worths of the zones agree to many digits, and steps may run out: follow alpha down from 1e-3 at
+the same beta.
 """
 
 from collections.abc import Callable
