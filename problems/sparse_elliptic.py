@@ -10,6 +10,8 @@ case="tracking": z = sin(2 pi x1) sin(2 pi x2) exp(2 x1) / 6, f = 0.
 case="manufactured": the solution is known for all alpha, beta and bound: p = sin(2 pi x1) sin(2 pi x2),
     y = sin(pi x1) sin(pi x2), u = clip(soft(p, beta) / alpha, -bound, bound), f = 2 pi^2 y - u, z = y + 8 pi^2 p.
     alpha = 0.01, beta = 0.3, bound = 50 have regions at zero, at both bounds and between.
+dimension=3: both cases in the unit cube, with one more sine in each product, f = 3 pi^2 y - u, z = y + 12 pi^2 p, the
+    seven-point matrix and multigrid; our own extension.
 
 Caution: for alpha <= 1e-5 plain full steps cycle on many of these problems (`PLAIN_STEPS_FAIL`), and small alpha
 magnifies the discretisation error of the control: errors of p are divided by alpha.
@@ -34,6 +36,8 @@ SIZES = (32, 64, 128)
 #: max |S* z| of case "tracking" in the limit of the mesh: above it the control vanishes. Computed by an independent
 #: program to the digits shown.
 VANISHING_BETA = 0.0100348289
+#: The same in three dimensions, from the solution in closed form (tests/problems/test_sparse_elliptic.py).
+VANISHING_BETA_3D = 0.0065463841
 
 #: (n, alpha), other parameters as by default: globalization="full" fails from zero, the default does not.
 PLAIN_STEPS_FAIL = (
@@ -51,7 +55,7 @@ PLAIN_STEPS_FAIL = (
 
 @dataclass(frozen=True)
 class MeshData:
-    """What `transfer`, `known` and `picture` need; arrays of shape (n * n,), x1 varies slowest."""
+    """What `transfer`, `known` and `picture` need; arrays of shape (n ** dimension,), x1 varies slowest."""
 
     n: int
     h: float
@@ -62,10 +66,22 @@ class MeshData:
     bound: float
     case: str
     exact_control: FloatArray | None
+    dimension: int = 2
+    x3: FloatArray | None = None
+
+    @property
+    def points(self) -> FloatArray:
+        """Coordinates, shape (n ** dimension, dimension)."""
+        return np.column_stack([x for x in (self.x1, self.x2, self.x3) if x is not None])
 
 
 def build(
-    n: int = 64, alpha: float = 1e-5, beta: float = 1e-3, bound: float = 30.0, case: str = "tracking"
+    n: int = 64,
+    alpha: float = 1e-5,
+    beta: float = 1e-3,
+    bound: float = 30.0,
+    case: str = "tracking",
+    dimension: int = 2,
 ) -> ssn.ControlProblem:
     """Build the control problem.
 
@@ -80,6 +96,7 @@ def build(
     bound : float
         |u| <= bound, positive; may be infinite.
     case : {"tracking", "manufactured"}
+    dimension : {2, 3}
 
     Raises
     ------
@@ -94,22 +111,29 @@ def build(
         raise ssn.InputError(f"bound must be positive, got {bound!r}")
     if case not in ("tracking", "manufactured"):
         raise ssn.InputError(f"case must be 'tracking' or 'manufactured', got {case!r}")
+    if dimension not in (2, 3):
+        raise ssn.InputError(f"dimension must be 2 or 3, got {dimension!r}")
     h = 1.0 / (n + 1)
     line = np.arange(1, n + 1) * h
-    x1, x2 = (x.ravel() for x in np.meshgrid(line, line, indexing="ij"))
-    mass = np.full(n * n, h * h)
-    p = np.sin(2 * np.pi * x1) * np.sin(2 * np.pi * x2)
+    x = [c.ravel() for c in np.meshgrid(*[line] * dimension, indexing="ij")]
+    mass = np.full(n**dimension, h**dimension if dimension > 2 else h * h)
+    p = np.sin(2 * np.pi * x[0]) * np.sin(2 * np.pi * x[1])
+    y = np.sin(np.pi * x[0]) * np.sin(np.pi * x[1])
+    if dimension == 3:
+        p, y = p * np.sin(2 * np.pi * x[2]), y * np.sin(np.pi * x[2])
     cost = ssn.SparseCost(beta, -bound, bound)
     source = exact = None
     if case == "tracking":
-        target = p * np.exp(2 * x1) / 6
+        target = p * np.exp(2 * x[0]) / 6
     else:
-        y = np.sin(np.pi * x1) * np.sin(np.pi * x2)
         exact = np.clip((p - np.clip(p, -beta, beta)) / alpha, -bound, bound)
-        source = mass * (2 * np.pi**2 * y - exact)
-        target = y + 8 * np.pi**2 * p
+        source = mass * (dimension * np.pi**2 * y - exact)
+        target = y + 4 * dimension * np.pi**2 * p
+    plane = dimension == 2
     problem = ssn.ControlProblem(
-        state=ssn.SteadyState(five_point(n)),
+        state=ssn.SteadyState(five_point(n))
+        if plane
+        else ssn.SteadyState(seven_point(n), solver="multigrid"),
         target=target,
         cost=cost,
         control_weight=alpha,
@@ -117,7 +141,10 @@ def build(
         state_mass=mass,
         control_mass=mass,
     )
-    problem.mesh_data = MeshData(int(n), h, x1, x2, float(alpha), float(beta), float(bound), case, exact)
+    weights = (float(alpha), float(beta), float(bound))
+    problem.mesh_data = MeshData(
+        int(n), h, x[0], x[1], *weights, case, exact, int(dimension), None if plane else x[2]
+    )
     return problem
 
 
@@ -129,14 +156,22 @@ def five_point(n: int) -> sp.csr_array:
     return sp.csr_array(sp.kron(second, identity) + sp.kron(identity, second))
 
 
+def seven_point(n: int) -> sp.csr_array:
+    """Stiffness matrix of linear elements on cubes cut into six tetrahedra each, n x n x n interior points."""
+    ones = np.ones(n - 1)
+    second = sp.diags_array([-ones, 2.0 * np.ones(n), -ones], offsets=[-1, 0, 1])
+    identity = sp.eye_array(n)
+    plane = sp.kron(second, identity) + sp.kron(identity, second)
+    return sp.csr_array((sp.kron(plane, identity) + sp.kron(sp.eye_array(n * n), second)) / (n + 1))
+
+
 def transfer(coarse: ssn.ControlProblem, fine: ssn.ControlProblem) -> Callable[[FloatArray], FloatArray]:
-    """Return the function that carries a control of `coarse` to `fine`: bilinear, zero on the boundary."""
+    """Return the function that carries a control of `coarse` to `fine`: multilinear, zero on the boundary."""
     mesh, line = coarse.mesh_data, np.linspace(0.0, 1.0, coarse.mesh_data.n + 2)
-    points = np.column_stack([fine.mesh_data.x1, fine.mesh_data.x2])
 
     def carry(control: FloatArray) -> FloatArray:
-        padded = np.pad(np.reshape(control, (mesh.n, mesh.n)), 1)
-        return RegularGridInterpolator((line, line), padded)(points)
+        padded = np.pad(np.reshape(control, (mesh.n,) * mesh.dimension), 1)
+        return RegularGridInterpolator((line,) * mesh.dimension, padded)(fine.mesh_data.points)
 
     return carry
 
@@ -171,16 +206,16 @@ def _zero_below_beta(problem: ssn.ControlProblem, solution: ssn.Solution) -> dic
 def _control_error(problem: ssn.ControlProblem, solution: ssn.Solution) -> dict[str, Any]:
     """The discrete problem's u_h satisfies alpha ||u_h - u|| <= ||p_h(u) - p||, by strong convexity.
 
-    The exact y and p are eigenvectors of the five-point matrix, so the right-hand side is known exactly.
+    The exact y and p are eigenvectors of the five- (seven-) point matrix, so the right-hand side is known exactly.
     """
     mesh = problem.mesh_data
 
     def excess(k: int) -> float:
-        """Relative error of the discrete inverse of -Lap on sin(k pi x1) sin(k pi x2)."""
+        """Relative error of the discrete inverse of -Lap on the product of sin(k pi x_i), in any dimension."""
         return 2 * (k * np.pi) ** 2 / (8 / mesh.h**2 * np.sin(k * np.pi * mesh.h / 2) ** 2) - 1
 
-    state_part = excess(1) * (1 + excess(1)) / (2 * np.pi**2)
-    bound = 0.5 * np.hypot(excess(2), state_part) / mesh.alpha
+    state_part = excess(1) * (1 + excess(1)) / (mesh.dimension * np.pi**2)
+    bound = 0.5 ** (0.5 * mesh.dimension) * np.hypot(excess(2), state_part) / mesh.alpha
     bound += 10 * solution.tolerance * problem.controls.norm(mesh.exact_control)
     error = problem.controls.norm(solution.x - mesh.exact_control)
     return {
@@ -197,18 +232,24 @@ def _control_error(problem: ssn.ControlProblem, solution: ssn.Solution) -> dict[
 def _vanishing(problem: ssn.ControlProblem) -> list[dict[str, Any]]:
     mesh = problem.mesh_data
     threshold = float(np.abs(problem.adjoint(problem.reduced_target())).max())
-    tolerance = 6.0 * mesh.h**2
-    above = build(mesh.n, mesh.alpha, threshold * (1 + 1e-9), mesh.bound)
+    # the largest value lies between nodes
+    factor = 6 if mesh.dimension == 2 else 12
+    tolerance = factor * mesh.h**2
+    above = build(mesh.n, mesh.alpha, threshold * (1 + 1e-9), mesh.bound, dimension=mesh.dimension)
+    expected = VANISHING_BETA
+    source = "max |S* z| in the limit of the mesh, by an independent program; Stadler (2009) for the data"
+    if mesh.dimension == 3:
+        expected, source = VANISHING_BETA_3D, "max |S* z|, separation of variables in closed form"
     largest = float(np.abs(ssn.solve(above).x).max())
     return [
         {
-            "what": "beta from which the control vanishes (relative, 6 h^2)",
+            "what": f"beta from which the control vanishes (relative, {factor} h^2)",
             "kind": "relative",
-            "expected": VANISHING_BETA,
+            "expected": expected,
             "computed": threshold,
             "tolerance": tolerance,
-            "source": "max |S* z| in the limit of the mesh, by an independent program; Stadler (2009) for the data",
-            "holds": bool(abs(threshold - VANISHING_BETA) <= tolerance * VANISHING_BETA),
+            "source": source,
+            "holds": bool(abs(threshold - expected) <= tolerance * expected),
         },
         {
             "what": "largest |u| for beta just above this mesh's max |S* z| (absolute)",
@@ -223,16 +264,20 @@ def _vanishing(problem: ssn.ControlProblem) -> list[dict[str, Any]]:
 
 
 def picture(problem: ssn.ControlProblem, solution: ssn.Solution) -> Any:
-    """Draw the control, grey where it is exactly zero, and the state."""
+    """Draw the control, grey where it is exactly zero, and the state; in three dimensions in the plane x3 = 1/4."""
     mesh = problem.mesh_data
     figure = new_figure(9.0, 4.0)
     left, right = figure.subplots(1, 2, sharex=True, sharey=True)
     extent = (mesh.h / 2, 1 - mesh.h / 2) * 2
-    shape = (mesh.n, mesh.n)
+    plane = round(0.25 * (mesh.n + 1)) - 1
+
+    def section(values: FloatArray) -> FloatArray:
+        field = values.reshape((mesh.n,) * mesh.dimension)
+        return field if mesh.dimension == 2 else field[:, :, plane]
 
     def show(axes: Any, values: FloatArray, limit: float, title: str) -> Any:
         image = axes.imshow(
-            values.reshape(shape).T, origin="lower", extent=extent, cmap="RdBu_r", vmin=-limit, vmax=limit
+            section(values).T, origin="lower", extent=extent, cmap="RdBu_r", vmin=-limit, vmax=limit
         )
         axes.set(title=title, xlabel="$x_1$", xlim=(0, 1), ylim=(0, 1), aspect="equal")
         figure.colorbar(image, ax=axes, shrink=0.85)
@@ -242,14 +287,15 @@ def picture(problem: ssn.ControlProblem, solution: ssn.Solution) -> Any:
     show(left, np.where(solution.x == 0, np.nan, solution.x), largest, "control; grey: exactly zero")
     line = np.linspace(mesh.h, 1 - mesh.h, mesh.n)
     at_bound = (np.abs(solution.x) >= mesh.bound).astype(float)
-    if at_bound.any() and not at_bound.all():
-        left.contour(line, line, at_bound.reshape(shape).T, levels=[0.5], colors="black", linewidths=0.8)
+    if section(at_bound).any() and not section(at_bound).all():
+        left.contour(line, line, section(at_bound).T, levels=[0.5], colors="black", linewidths=0.8)
         left.set_title("control; grey: exactly zero, line: at the bound")
     show(right, solution.state, float(np.abs(solution.state).max()) or 1.0, "state")
     left.set_ylabel("$x_2$")
     zero = float((solution.x == 0).mean())
+    where = "" if mesh.dimension == 2 else " in a cube"
     figure.suptitle(
-        rf"Sparse control: n = {mesh.n}, $\alpha$ = {mesh.alpha:g}, $\beta$ = {mesh.beta:g}, "
+        rf"Sparse control{where}: n = {mesh.n}, $\alpha$ = {mesh.alpha:g}, $\beta$ = {mesh.beta:g}, "
         rf"$|u| \leq$ {mesh.bound:g}; zero on {zero:.0%}"
     )
     return figure

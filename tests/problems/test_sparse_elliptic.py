@@ -28,6 +28,8 @@ PLAIN_FAILURES = (ssn.Outcome.CYCLING, ssn.Outcome.STEP_LIMIT)
         ({"n": 33} | MANUFACTURED, 2),
         ({"n": 64, "case": "manufactured"}, 2),
         ({"n": 32, "case": "manufactured", "alpha": 1e-3, "beta": 0.0, "bound": np.inf}, 2),
+        ({"n": 13, "dimension": 3}, 3),
+        ({"n": 11, "dimension": 3} | MANUFACTURED, 2),
     ],
 )
 def test_known_values_hold(parameters, checks):
@@ -35,6 +37,17 @@ def test_known_values_hold(parameters, checks):
     known = sparse_elliptic.known(problem, ssn.solve(problem).require())
     assert len(known) == checks
     assert [check for check in known if not check["holds"]] == []
+
+
+def test_vanishing_weights_are_those_of_the_closed_form():
+    """S* z = X(x1) times sines of the other coordinates, -X'' + (d - 1) 4 pi^2 X = sin(2 pi x) exp(2 x) / 6."""
+    x = np.linspace(0.5, 1.0, 200001)
+    for d, value in ((2, sparse_elliptic.VANISHING_BETA), (3, sparse_elliptic.VANISHING_BETA_3D)):
+        c, rate = 4 * np.pi**2 * (d - 1), 2 + 2j * np.pi
+        k = np.sqrt(c)
+        left, right, inside = ((np.exp(rate * at) / 6 / (c - rate**2)).imag for at in (0.0, 1.0, x))
+        X = inside - (left * np.sinh(k * (1 - x)) + right * np.sinh(k * x)) / np.sinh(k)
+        assert np.abs(X).max() == pytest.approx(value, rel=2e-8)
 
 
 def test_known_values_reject_another_control():
@@ -55,6 +68,33 @@ def test_manufactured_control_converges_at_order_h2():
     slope = np.polyfit(np.log(widths), np.log(errors), 1)[0]
     assert 1.9 < slope < 2.1
     assert errors[-1] < 2e-3  # of a control between -50 and 50
+
+
+def test_manufactured_control_converges_at_order_h2_in_a_cube():
+    errors, widths = [], []
+    for n in (7, 11, 17):
+        problem = sparse_elliptic.build(n, dimension=3, **MANUFACTURED)
+        solution = ssn.solve(problem).require()
+        assert set(np.unique(solution.pieces["control"])) == {0, 1, 2, 3, 4}
+        errors.append(problem.controls.norm(solution.x - problem.mesh_data.exact_control))
+        widths.append(problem.mesh_data.h)
+    slope = np.polyfit(np.log(widths), np.log(errors), 1)[0]
+    assert 1.7 < slope < 2.3
+    assert errors[-1] < 1.0  # of a control between -50 and 50
+
+
+def test_steps_from_zero_do_not_grow_with_the_mesh_in_a_cube():
+    for alpha in (1e-4, 1e-6):
+        steps = [
+            len(ssn.solve(sparse_elliptic.build(n, alpha, dimension=3)).require().steps) for n in (7, 11, 17)
+        ]
+        assert max(steps) <= 14 and steps[-1] <= steps[0] + 3
+
+
+def test_transfer_in_a_cube():
+    coarse, fine = (sparse_elliptic.build(n, dimension=3) for n in (7, 15))
+    hats = [np.minimum(p.mesh_data.points, 1 - p.mesh_data.points).prod(axis=1) for p in (coarse, fine)]
+    assert np.abs(sparse_elliptic.transfer(coarse, fine)(hats[0]) - hats[1]).max() <= 1e-14
 
 
 @pytest.mark.parametrize("alpha", [1e-4, 1e-5, 1e-6, 1e-7])
@@ -163,6 +203,7 @@ def test_transfer_carries_the_solution_to_a_finer_mesh(coarse_n, fine_n):
         ({"bound": 0.0}, "bound must"),
         ({"bound": np.nan}, "bound must"),
         ({"case": "other"}, "case must"),
+        ({"dimension": 1}, "dimension must be 2 or 3"),
     ],
 )
 def test_unusable_parameters_are_named(parameters, complaint):
@@ -170,9 +211,11 @@ def test_unusable_parameters_are_named(parameters, complaint):
         sparse_elliptic.build(**parameters)
 
 
-@pytest.mark.parametrize("parameters", [{}, {"beta": 1.0}, {"bound": np.inf}, MANUFACTURED])
+@pytest.mark.parametrize(
+    "parameters", [{}, {"beta": 1.0}, {"bound": np.inf}, MANUFACTURED, {"n": 8, "dimension": 3}]
+)
 def test_picture_is_drawn(parameters):
-    problem = sparse_elliptic.build(16, **parameters)
+    problem = sparse_elliptic.build(**{"n": 16} | parameters)
     buffer = io.BytesIO()
     sparse_elliptic.picture(problem, ssn.solve(problem)).savefig(buffer, format="png", dpi=40)
     assert buffer.getvalue().startswith(b"\x89PNG")
