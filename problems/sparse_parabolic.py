@@ -18,6 +18,8 @@ case="manufactured": known for sparsity="both" and all alpha, beta and bound: p 
     sin(2 pi x2), y = cos(2 t) sin(pi x1) sin(pi x2), u = clip(soft(p, beta) / alpha, -bound, bound), f = y' +
     2 kappa pi^2 y - u, z = y - p' + 8 kappa pi^2 p. alpha = 0.01, beta = 0.3, bound = 50 have regions at zero, at both
     bounds and between.
+dimension=3: the unit cube, with one more coordinate in each square and one more sine in each product, 2 kappa replaced
+    by 3 kappa and 8 by 12; the source, of width 0.12, moves in the plane x3 = 1/2. The seven-point matrix, mass h^3.
 
 Caution: plain full steps fail where bounds and small alpha meet (`PLAIN_STEPS_FAIL`). Without bounds and with
 alpha <= 1e-5 the Newton systems take most of the time.
@@ -54,6 +56,7 @@ PLAIN_STEPS_FAIL = (
 
 KAPPA = 0.1
 STRENGTH, WIDTH, RADIUS, TURN = 30.0, 0.08, 0.25, 0.75
+WIDTH_3D = 0.12
 
 #: sparsity -> objective for n = 8 and all other parameters as by default, by a general interior-point solver on an
 #: assembly without ssn (tests/problems/test_sparse_parabolic.py).
@@ -62,7 +65,8 @@ REFERENCE_OBJECTIVE = {"both": 0.0514011293766, "space": 0.0742504903288, "time"
 
 @dataclass(frozen=True)
 class MeshData:
-    """What `transfer`, `known` and `picture` need; fields on the mesh have shape (steps, n, n)."""
+    """What `transfer`, `known` and `picture` need; fields on the mesh have shape (steps, n, n)
+    or (steps, n, n, n)."""
 
     n: int
     steps: int
@@ -73,9 +77,14 @@ class MeshData:
     exact_control: FloatArray | None
 
     @property
-    def shape(self) -> tuple[int, int, int]:
-        """(steps, n, n)."""
-        return self.steps, self.n, self.n
+    def dimension(self) -> int:
+        """2 or 3."""
+        return int(self.parameters["dimension"])
+
+    @property
+    def shape(self) -> tuple[int, ...]:
+        """(steps, n, n) or (steps, n, n, n)."""
+        return (self.steps, *[self.n] * self.dimension)
 
 
 def build(
@@ -87,6 +96,7 @@ def build(
     sparsity: str = "both",
     scheme: str = "implicit Euler",
     case: str = "moving source",
+    dimension: int = 2,
 ) -> ssn.ControlProblem:
     """Build the control problem.
 
@@ -105,6 +115,8 @@ def build(
     sparsity : {"both", "space", "time"}
     scheme : {"implicit Euler", "Crank-Nicolson"}
     case : {"moving source", "manufactured"}
+    dimension : {2, 3}
+        In the cube n = 20 with 128 steps makes 1.0e6 unknowns of the state, in the square n = 63 with 256.
 
     Raises
     ------
@@ -128,24 +140,28 @@ def build(
             raise ssn.InputError(f"{name} must be one of {', '.join(choices)}, got {parameters[name]!r}")
     if case == "manufactured" and sparsity != "both":
         raise ssn.InputError("case='manufactured' is known for sparsity='both' only")
-    n, steps = int(n), int(steps or 2 * n)
+    if dimension not in (2, 3):
+        raise ssn.InputError(f"dimension must be 2 or 3, got {dimension!r}")
+    n, steps, d = int(n), int(steps or 2 * n), int(dimension)
     h = 1.0 / (n + 1)
     line = np.arange(1, n + 1) * h
+    cell = h * h if d == 2 else h**3
+    stiffness = five_point(n) if d == 2 else seven_point(n)
     state = ssn.TimeDependentState(
-        np.full(n * n, h * h), KAPPA * five_point(n), steps=steps, duration=1.0, scheme=scheme
+        np.full(n**d, cell), KAPPA * stiffness, steps=steps, duration=1.0, scheme=scheme
     )
     source = exact = None
     if case == "moving source":
-        target = state.solve(state.source(h * h * true_source(state.load_times, line)))
+        target = state.solve(state.source(cell * true_source(state.load_times, line, d)))
     else:
         eigen = KAPPA * np.pi**2
-        first, second = (_mode(k, line) for k in (1, 2))
+        first, second = (_mode(k, line, d) for k in (1, 2))
         t, levels = state.load_times[:, None], state.times[1:, None]
         p = np.cos(0.5 * np.pi * t) * second
         exact = np.clip((p - np.clip(p, -beta, beta)) / alpha, -bound, bound).ravel()
-        load = _heat(t, eigen) * first - exact.reshape(steps, -1)
-        source = state.source(h * h * load, initial=first)
-        target = (np.cos(2 * levels) * first + _misfit(levels, eigen) * second).ravel()
+        load = _heat(t, d * eigen) * first - exact.reshape(steps, -1)
+        source = state.source(cell * load, initial=first)
+        target = (np.cos(2 * levels) * first + _misfit(levels, 4 * d * eigen) * second).ravel()
     problem = ssn.ControlProblem(
         state=state,
         target=target,
@@ -157,7 +173,7 @@ def build(
         observation_mass=state.observation_mass(),
     )
     problem.mesh_data = MeshData(
-        n, steps, h, line, state.load_times, parameters | {"n": n, "steps": steps}, exact
+        n, steps, h, line, state.load_times, parameters | {"n": n, "steps": steps, "dimension": d}, exact
     )
     return problem
 
@@ -179,51 +195,65 @@ def five_point(n: int) -> sp.csr_array:
     return sp.csr_array(sp.kron(second, identity) + sp.kron(identity, second))
 
 
+def seven_point(n: int) -> sp.csr_array:
+    """Stiffness matrix of linear elements on cubes cut into six tetrahedra each, n x n x n interior points."""
+    ones = np.ones(n - 1)
+    second = sp.diags_array([-ones, 2.0 * np.ones(n), -ones], offsets=[-1, 0, 1])
+    identity = sp.eye_array(n)
+    return sp.csr_array((sp.kron(five_point(n), identity) + sp.kron(sp.eye_array(n * n), second)) / (n + 1))
+
+
 def centre(times: FloatArray) -> tuple[FloatArray, FloatArray]:
     """Where the true source is."""
     angle = 2 * np.pi * TURN * times
     return 0.5 + RADIUS * np.cos(angle), 0.5 + RADIUS * np.sin(angle)
 
 
-def true_source(times: FloatArray, line: FloatArray) -> FloatArray:
+def true_source(times: FloatArray, line: FloatArray, dimension: int = 2) -> FloatArray:
     """The source whose temperature is the target, shape (times, points)."""
     c1, c2 = (c[:, None, None] for c in centre(times))
     square = (line[:, None] - c1) ** 2 + (line - c2) ** 2
-    return STRENGTH * np.exp(-square / (2 * WIDTH**2)).reshape(times.size, -1)
+    width = WIDTH
+    if dimension == 3:
+        square, width = square[..., None] + (line - 0.5) ** 2, WIDTH_3D
+    return STRENGTH * np.exp(-square / (2 * width**2)).reshape(times.size, -1)
 
 
-# the manufactured case: amplitudes in time of the two modes sin(k pi x1) sin(k pi x2)
+# the manufactured case: amplitudes in time of the two modes sin(k pi x1) sin(k pi x2) (sin(k pi x3)), whose eigenvalues
+# of -kappa Lap are given
 
 
-def _mode(k: int, line: FloatArray) -> FloatArray:
+def _mode(k: int, line: FloatArray, dimension: int) -> FloatArray:
     wave = np.sin(k * np.pi * line)
-    return np.outer(wave, wave).ravel()
+    plane = np.outer(wave, wave).ravel()
+    return plane if dimension == 2 else np.outer(plane, wave).ravel()
 
 
 def _heat(t: FloatArray, eigen: float) -> FloatArray:
     """Amplitude of y' - kappa Lap y."""
-    return -2 * np.sin(2 * t) + 2 * eigen * np.cos(2 * t)
+    return -2 * np.sin(2 * t) + eigen * np.cos(2 * t)
 
 
 def _misfit(t: FloatArray, eigen: float) -> FloatArray:
     """Amplitude of z - y = -p' - kappa Lap p."""
-    return 0.5 * np.pi * np.sin(0.5 * np.pi * t) + 8 * eigen * np.cos(0.5 * np.pi * t)
+    return 0.5 * np.pi * np.sin(0.5 * np.pi * t) + eigen * np.cos(0.5 * np.pi * t)
 
 
 def transfer(coarse: ssn.ControlProblem, fine: ssn.ControlProblem) -> Callable[[FloatArray], FloatArray]:
-    """Return the function that carries a control of `coarse` to `fine`: linear, zero on the boundary of the square."""
+    """Return the function that carries a control of `coarse` to `fine`: multilinear, zero on the boundary."""
     old, new = coarse.mesh_data, fine.mesh_data
     space = np.concatenate([[0.0], old.line, [1.0]])
     times = np.concatenate([[0.0], old.control_times, [1.0]])
     # control_times may end at 1: a doubled last time would be no grid
     last = 2 if old.control_times[-1] < 1.0 else 1
     times = times[: old.steps + last]
-    points = np.stack(np.meshgrid(new.control_times, new.line, new.line, indexing="ij"), axis=-1)
+    axes = [space] * old.dimension
+    points = np.stack(np.meshgrid(new.control_times, *[new.line] * old.dimension, indexing="ij"), axis=-1)
 
     def carry(control: FloatArray) -> FloatArray:
-        padded = np.pad(np.reshape(control, old.shape), ((0, 0), (1, 1), (1, 1)))
+        padded = np.pad(np.reshape(control, old.shape), ((0, 0), *[(1, 1)] * old.dimension))
         padded = np.concatenate([padded[:1], padded, padded[-1:]])[: times.size]
-        return RegularGridInterpolator((times, space, space), padded)(points).ravel()
+        return RegularGridInterpolator((times, *axes), padded)(points).ravel()
 
     return carry
 
@@ -257,12 +287,12 @@ def known(problem: ssn.ControlProblem, solution: ssn.Solution) -> list[dict[str,
 def strength(problem: ssn.ControlProblem, field: FloatArray) -> FloatArray:
     """What is compared with beta, for each value of an adjoint state or control: |p|, or the norm of its group."""
     mesh = problem.mesh_data
-    square = np.reshape(field, (mesh.steps, mesh.n**2)) ** 2
+    square = np.reshape(field, (mesh.steps, mesh.n**mesh.dimension)) ** 2
     sparsity = mesh.parameters["sparsity"]
     if sparsity == "space":
         square = np.broadcast_to(square.mean(axis=0), square.shape)
     elif sparsity == "time":
-        square = np.broadcast_to(mesh.h**2 * square.sum(axis=1, keepdims=True), square.shape)
+        square = np.broadcast_to(mesh.h**mesh.dimension * square.sum(axis=1, keepdims=True), square.shape)
     return np.sqrt(square).ravel()
 
 
@@ -300,8 +330,8 @@ def _vanishing(problem: ssn.ControlProblem) -> dict[str, Any]:
 def _control_error(problem: ssn.ControlProblem, solution: ssn.Solution) -> dict[str, Any]:
     """The discrete problem's u_h satisfies alpha ||u_h - u|| <= ||p_h(u) - p||, by strong convexity.
 
-    The exact y and p are eigenvectors of the five-point matrix times an amplitude in time, so that p_h(u) - p follows
-    from recursions in one variable for each of the two modes.
+    The exact y and p are eigenvectors of the five- (seven-) point matrix times an amplitude in time, so that p_h(u) - p
+    follows from recursions in one variable for each of the two modes.
     """
     mesh = problem.mesh_data
     bound = adjoint_error(mesh) / mesh.parameters["alpha"]
@@ -323,7 +353,8 @@ def adjoint_error(mesh: MeshData) -> float:
     theta = 1.0 if mesh.parameters["scheme"] == "implicit Euler" else 0.5
     tau, eigen = 1.0 / mesh.steps, KAPPA * np.pi**2
     levels = np.arange(1, mesh.steps + 1) * tau
-    first, second = (KAPPA * 8 / mesh.h**2 * np.sin(0.5 * k * np.pi * mesh.h) ** 2 for k in (1, 2))
+    d = mesh.dimension
+    first, second = (KAPPA * (4 * d) / mesh.h**2 * np.sin(0.5 * k * np.pi * mesh.h) ** 2 for k in (1, 2))
 
     def sweep(loads: FloatArray, eigenvalue: float, value: float) -> FloatArray:
         result = np.empty_like(loads)
@@ -332,19 +363,19 @@ def adjoint_error(mesh: MeshData) -> float:
             result[k] = value
         return result
 
-    y = sweep(tau * _heat(mesh.control_times, eigen), first, 1.0)
+    y = sweep(tau * _heat(mesh.control_times, d * eigen), first, 1.0)
     weights = np.full(mesh.steps, tau)
     weights[-1] *= theta
     errors = [
         sweep((weights * (np.cos(2 * levels) - y))[::-1], first, 0.0)[::-1],
-        sweep((weights * _misfit(levels, eigen))[::-1], second, 0.0)[::-1]
+        sweep((weights * _misfit(levels, 4 * d * eigen))[::-1], second, 0.0)[::-1]
         - np.cos(0.5 * np.pi * mesh.control_times),
     ]
-    return float(np.sqrt(0.25 * tau * sum(e @ e for e in errors)))
+    return float(np.sqrt(0.5**d * tau * sum(e @ e for e in errors)))
 
 
 def picture(problem: ssn.ControlProblem, solution: ssn.Solution) -> Any:
-    """Draw when and where the control acts: in time and one coordinate, and in the square; grey: never."""
+    """Draw when and where the control acts: in time and one coordinate, and in the plane; grey: never."""
     mesh = problem.mesh_data
     control = np.reshape(solution.x, mesh.shape)
     figure = new_figure(11.0, 3.8)
@@ -352,9 +383,11 @@ def picture(problem: ssn.ControlProblem, solution: ssn.Solution) -> Any:
     edge = (mesh.h / 2, 1 - mesh.h / 2)
 
     def largest(axis: int) -> FloatArray:
-        """The value of largest size along an axis, NaN where all are zero."""
-        where = np.abs(control).argmax(axis=axis, keepdims=True)
-        values = np.take_along_axis(control, where, axis=axis).squeeze(axis)
+        """The value of largest size along an axis, and along x3, NaN where all are zero."""
+        values = control
+        for along in (3, axis) if mesh.dimension == 3 else (axis,):
+            where = np.abs(values).argmax(axis=along, keepdims=True)
+            values = np.take_along_axis(values, where, axis=along).squeeze(along)
         return np.where(values == 0, np.nan, values)
 
     limit = float(np.abs(control).max()) or 1.0
@@ -372,9 +405,10 @@ def picture(problem: ssn.ControlProblem, solution: ssn.Solution) -> Any:
         if mesh.parameters["case"] == "moving source":
             axes.plot(*line, color="black", lw=0.8, ls="--")
         axes.set(xlabel=labels[0], ylabel=labels[1], xlim=(0, 1), ylim=(0, 1))
-    left.set_title("largest over $x_2$")
-    middle.set_title("largest over $x_1$")
-    right.set_title("largest over time")
+    more = ", $x_3$" if mesh.dimension == 3 else ""
+    left.set_title(f"largest over $x_2${more}")
+    middle.set_title(f"largest over $x_1${more}")
+    right.set_title(f"largest over time{more}")
     figure.colorbar(image, ax=right)
     p = mesh.parameters
     dashed = "; dashed: the true source" if p["case"] == "moving source" else ""

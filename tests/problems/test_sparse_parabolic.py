@@ -32,6 +32,10 @@ SCHEMES = {"implicit Euler": 1.0, "Crank-Nicolson": 0.5}
         ({"n": 16} | MANUFACTURED, 2),
         ({"n": 16, "steps": 20, "scheme": "Crank-Nicolson"} | MANUFACTURED, 2),
         ({"n": 16, "case": "manufactured", "alpha": 1e-3, "beta": 0.0, "bound": np.inf}, 2),
+        ({"n": 7, "dimension": 3}, 2),
+        ({"n": 6, "dimension": 3, "sparsity": "space"}, 2),
+        ({"n": 6, "dimension": 3, "sparsity": "time"}, 2),
+        ({"n": 7, "steps": 10, "scheme": "Crank-Nicolson", "dimension": 3} | MANUFACTURED, 2),
     ],
 )
 def test_known_values_hold(parameters, checks):
@@ -63,6 +67,39 @@ def test_manufactured_control_converges_at_the_order_of_the_scheme(scheme):
     slope = np.polyfit(np.log(widths), np.log(errors), 1)[0]
     assert 1.8 < slope < 2.2
     assert errors[-1] < 6e-2  # of a control between -50 and 50
+
+
+def test_manufactured_control_converges_at_order_h2_in_a_cube():
+    errors, widths = [], []
+    for n in (7, 11, 15):
+        problem = sparse_parabolic.build(n, n + 1, scheme="Crank-Nicolson", dimension=3, **MANUFACTURED)
+        solution = ssn.solve(problem).require()
+        assert set(np.unique(solution.pieces["control"])) == {0, 1, 2, 3, 4}
+        errors.append(problem.controls.norm(solution.x - problem.mesh_data.exact_control))
+        widths.append(problem.mesh_data.h)
+    slope = np.polyfit(np.log(widths), np.log(errors), 1)[0]
+    assert 1.7 < slope < 2.3
+    assert errors[-1] < 1.0  # of a control between -50 and 50
+
+
+@pytest.mark.parametrize("sparsity", PATTERNS)
+def test_steps_from_zero_do_not_grow_with_the_mesh_in_a_cube(sparsity):
+    steps = []
+    for n in (4, 6, 9):
+        solution = ssn.solve(sparse_parabolic.build(n, alpha=1e-3, sparsity=sparsity, dimension=3)).require()
+        steps.append(len(solution.steps))
+    assert max(steps) <= 20 and steps[-1] <= steps[0] + 3
+
+
+def test_the_cube_is_the_square_times_a_line():
+    """The seven-point matrix against products of one-dimensional ones, and a mode that decays at its own rate."""
+    n = 5
+    h = 1.0 / (n + 1)
+    line = np.arange(1, n + 1) * h
+    waves = [np.sin(k * np.pi * line) for k in (1, 2, 3)]
+    mode = np.einsum("i,j,k->ijk", *waves).ravel()
+    eigenvalue = sum(4 / h**2 * np.sin(k * np.pi * h / 2) ** 2 for k in (1, 2, 3))
+    assert np.abs(sparse_parabolic.seven_point(n) @ mode - h**3 * eigenvalue * mode).max() < 1e-14
 
 
 # agreement with a general solver on an assembly of its own
@@ -245,6 +282,16 @@ def test_transfer_carries_a_trilinear_control():
         assert np.abs(carried - fields[1]).max() <= 1e-13
 
 
+def test_transfer_in_a_cube():
+    coarse, fine = (sparse_parabolic.build(n, 6, dimension=3) for n in (3, 7))
+    fields = []
+    for problem in (coarse, fine):
+        hat = np.minimum(problem.mesh_data.line, 1 - problem.mesh_data.line)
+        t = problem.mesh_data.control_times
+        fields.append(np.einsum("t,i,j,k->tijk", t, hat, hat, hat).ravel())
+    assert np.abs(sparse_parabolic.transfer(coarse, fine)(fields[0]) - fields[1]).max() <= 1e-14
+
+
 @pytest.mark.parametrize(
     ("parameters", "complaint"),
     [
@@ -261,6 +308,7 @@ def test_transfer_carries_a_trilinear_control():
         ({"sparsity": "none"}, "sparsity must be one of both, space, time"),
         ({"scheme": "explicit"}, "scheme must be one of"),
         ({"case": "other"}, "case must be one of"),
+        ({"dimension": 4}, "dimension must be 2 or 3"),
         ({"case": "manufactured", "sparsity": "time"}, "known for sparsity='both' only"),
     ],
 )
@@ -270,7 +318,8 @@ def test_unusable_parameters_are_named(parameters, complaint):
 
 
 @pytest.mark.parametrize(
-    "parameters", [{}, {"beta": 10.0}, {"sparsity": "space"}, {"sparsity": "time"}, MANUFACTURED]
+    "parameters",
+    [{}, {"beta": 10.0}, {"sparsity": "space"}, {"sparsity": "time"}, MANUFACTURED, {"dimension": 3}],
 )
 def test_picture_is_drawn(parameters):
     problem = sparse_parabolic.build(6, **parameters)
