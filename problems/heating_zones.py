@@ -95,7 +95,7 @@ class MeshData:
 
 
 def build(
-    n: int = 16, steps: int = 0, zones: int = 4, alpha: float = 1e-4, beta: float = 0.04
+    n: int = 16, steps: int = 0, zones: int = 4, alpha: float = 2e-4, beta: float = 0.04
 ) -> ssn.ControlProblem:
     """Build the control problem.
 
