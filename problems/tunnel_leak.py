@@ -96,7 +96,7 @@ class MeshData:
 
 
 def build(
-    n: int = 30, steps: int = 0, alpha: float = 0.1, beta: float = 0.4, noise: float = 0.03, seed: int = 1
+    n: int = 30, steps: int = 0, alpha: float = 0.15, beta: float = 0.4, noise: float = 0.03, seed: int = 1
 ) -> ssn.ControlProblem:
     """Build the problem.
 
@@ -151,7 +151,7 @@ def build(
     return problem
 
 
-_DEFAULTS = {"alpha": 0.1, "beta": 0.4, "noise": 0.03, "seed": 1}
+_DEFAULTS = {"alpha": 0.15, "beta": 0.4, "noise": 0.03, "seed": 1}
 
 
 def default_steps(n: int) -> int:
@@ -374,14 +374,18 @@ def refit_leaks(
 ) -> tuple[list[Leak], Any]:
     """Return the leaks from inlet to outlet, and the solution with one place for each and without the sparsity term.
 
-    Connected places are one leak, at their mean weighted by amount; what is less than `least` of the total is left out.
+    Connected places whose amounts exceed a fifth of the largest, and that make a twentieth of all gas, are one leak;
+    what enters elsewhere is counted with the nearest one, and a leak lies at the mean of all it is counted with.
     In the second stage places move along the floor, one node at a time, as long as the objective falls.
     """
     data = problem.mesh_data
     amounts = amount(problem, solution.x)
     beside = sp.diags_array([np.ones(data.x.size - 1)] * 2, offsets=[-1, 1], shape=(data.x.size,) * 2)
-    parts = [p for p in ssn.placements(amounts > 0, beside) if amounts[p].sum() > least * amounts.sum()]
-    parts.sort(key=lambda part: data.x[part[0]])
+    strong = ssn.placements(amounts > 0.2 * amounts.max(), beside)
+    strong = [part for part in strong if amounts[part].sum() > 0.05 * amounts.sum()]
+    middles = np.sort([float(data.x[part] @ amounts[part] / amounts[part].sum()) for part in strong])
+    owner = np.abs(data.x[:, None] - middles).argmin(axis=1) if strong else np.empty(0, dtype=int)
+    parts = [np.flatnonzero((owner == k) & (amounts > 0)) for k in range(len(strong))]
     places = [float(data.x[part] @ amounts[part] / amounts[part].sum()) for part in parts]
 
     @cache
@@ -402,8 +406,8 @@ def refit_leaks(
     again = at(nodes)
     rates, leaks = np.reshape(again.x, data.shape), []
     for part, place, node in zip(parts, places, nodes, strict=True):
-        strong = np.flatnonzero(rates[:, node] > 0.5 * rates[:, node].max())
-        opens, closes = (BLOCK * strong[0], BLOCK * (strong[-1] + 1)) if strong.size else (0.0, 0.0)
+        open_at = np.flatnonzero(rates[:, node] > 0.5 * rates[:, node].max())
+        opens, closes = (BLOCK * open_at[0], BLOCK * (open_at[-1] + 1)) if open_at.size else (0.0, 0.0)
         after = float(amount(problem, again.x)[node])
         leaks.append(
             Leak(place, float(amounts[part].sum()), float(data.x[node]), after, float(opens), float(closes))
