@@ -232,8 +232,11 @@ def _refusal(entry: Mapping[str, Any] | None, case: Measured) -> str:
 
 
 def _another_problem(before: Mapping[str, Any], now: Mapping[str, Any]) -> str:
-    """In which respect two problems differ; empty where they do not."""
-    if before["parameters"] != now["parameters"]:
+    """In which respect two problems differ; empty where they do not.
+
+    A parameter that only the present problem has is no difference by itself: its values at fixed points tell.
+    """
+    if before["parameters"] != {k: v for k, v in now["parameters"].items() if k in before["parameters"]}:
         return f"parameters {_shown(before['parameters'])}, now {_shown(now['parameters'])}"
     if before["unknowns"] != now["unknowns"]:
         return f"{before['unknowns']} unknowns, now {now['unknowns']}"

@@ -286,6 +286,14 @@ def test_rounding_in_the_statement_is_the_same_problem():
     assert judged(False, {"statement": [1.0 + 1e-9, None, 3.0, 4.0]}).usable
 
 
+def test_a_parameter_more_is_the_same_problem_where_its_values_are():
+    more = {"parameters": {"n": 4, "dimension": 2}}
+    assert judged(False, more).usable
+    assert "values at fixed points" in judged(False, more | {"statement": [1.0, 2.0, 3.0, 4.0]}).refusals[0]
+    fewer = {"parameters": {"dimension": 2}}
+    assert "parameters n: 4, now dimension: 2" in judged(False, fewer).refusals[0]
+
+
 def test_figures_on_one_side_only_are_refused():
     case = Measured("a", "a, n = 4", IDENTITY, BEFORE | {"colour": 1})
     assert "figures on one side only (colour)" in decide(STORED, [case], exact=True).refusals[0]
