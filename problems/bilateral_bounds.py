@@ -17,9 +17,9 @@ case="boundary_term": -Lap y + y = u + f, no flux through the boundary, 0 <= u <
 The boundary term is a linear one of the state; it is brought into the tracking term: 1/2 ||y - z||^2 + b'y is
 1/2 ||y - (z - b/mass)||^2 and a constant, which `functional` adds.
 
-Caution: for alpha = 0 the problem has no strong convexity: no distance bound is reported, the control is as accurate as
-the lines where p changes its sign, and the number of steps grows with the mesh (1, 6, 18 on n = 33, 65, 129); where
-lines of nodes lie on them (even n) steps may run out. In three dimensions multigrid solves the state equation.
+Caution: for alpha = 0 the problem has no strong convexity: a duality gap is reported instead of a distance, and the
+control is as accurate as the lines where p changes its sign; where lines of nodes lie on them (even n) more steps are
+needed. In three dimensions multigrid solves the state equation.
 """
 
 from collections.abc import Callable

@@ -85,6 +85,15 @@ def test_bang_bang_limit():
     assert between == sorted(between, reverse=True) and between[-1] == 0.0
 
 
+def test_the_limit_ends_with_a_duality_gap_on_every_mesh():
+    for n in (33, 65, 129):
+        problem = bilateral_bounds.build(n, 0.0)
+        solution = ssn.solve(problem).require()
+        assert len(solution.steps) <= 6
+        assert (np.abs(solution.x) == 1.0).mean() > 0.99
+        assert solution.certificate is not None and solution.certificate.relative < 1e-9
+
+
 def test_functional_of_the_exact_solution():
     """The integrals in closed form against a midpoint rule."""
     for d in (2, 3):
