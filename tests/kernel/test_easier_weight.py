@@ -1,15 +1,10 @@
 """The detour by a larger control weight: taken where the dual search creeps, and nowhere else."""
 
-import sys
-from pathlib import Path
-
 import pytest
 
 import ssn
 from ssn import easier_weight
-
-sys.path.insert(0, str(Path(__file__).resolve().parents[1] / "problems"))
-from loading import load
+from tests.problems.loading import load
 
 sparse_elliptic = load("sparse_elliptic")
 
