@@ -504,7 +504,7 @@ def picture(problem: ssn.ControlProblem, solution: ssn.Solution) -> Any:
         xlabel="angle along the surface (degrees)",
         ylabel="irradiance (mW/cm²)",
         xlim=(0, 360),
-        ylim=(0, None),
+        ylim=(0, 1.3 * max(float(solution.x.max()), float(even.max()), 1e-9)),  # room for the legend
     )
     right.legend(frameon=False, loc="upper center")
     errors = list(stage.errors.values())
