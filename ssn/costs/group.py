@@ -10,6 +10,7 @@ import numpy.typing as npt
 from ..errors import InputError
 from ..pieces import Pieces
 from ..validate import bound_arrays
+from .blocks import BLOCK, by_blocks
 from .derivative import GroupDerivative
 from .grouping import Groups
 from .piecewise import not_negative
@@ -87,6 +88,7 @@ class GroupSparseCost:
             raise InputError(f"beta has shape {self.beta.shape} for {self.groups.number} groups")
         line = None if shape is None else (tuple(shape), axis % len(shape))
         self.inner_weights = self.groups.weights(inner_weights, "inner_weights", line)
+        self._plain = bool((self.inner_weights == 1.0).all())
         low, high = bound_arrays(lower, upper)
         for name, array in (("lower", low), ("upper", high)):
             if array.shape not in ((), (1,), (self.size,)):
@@ -115,7 +117,10 @@ class GroupSparseCost:
 
     def norms(self, u: FloatArray) -> FloatArray:
         """||u_g|| for each group, in the inner weights."""
-        return np.sqrt(self.groups.sum(self.inner_weights * u * u))
+        square = u * u
+        if not self._plain:
+            square *= self.inner_weights
+        return np.sqrt(self.groups.sum(square))
 
     def value(self, u: FloatArray, weights: FloatArray | None = None) -> float:
         """Return g(u) for weights outer times inner; inf where a bound is violated."""
@@ -202,13 +207,15 @@ class GroupSparseCost:
             return v.through_prox(self, step)
         _, factor, zero = self._solve(v, step)
         if not self.bounded:
-            return v * self.groups.spread(factor)
+            return self._scaled(v, factor)
         u = np.clip(v * self.groups.spread(factor), self.lower, self.upper)
         return np.where(self.groups.spread(zero), 0.0, u)
 
     def prox_derivative(self, v: FloatArray, step: float) -> GroupDerivative:
         """Return factor (I + a multiple of u u') on the components that are free, 0 elsewhere."""
         r, factor, zero = self._solve(v, step)
+        if not self.bounded:
+            return self._free_derivative(v, r, factor, self._threshold(step))
         t, spread = self._threshold(step), self.groups.spread
         scaled = v * spread(factor)
         free = ~spread(zero) & (scaled > self.lower) & (scaled < self.upper)
@@ -226,6 +233,47 @@ class GroupSparseCost:
             self.inner_weights * unit,
             self.groups,
         )
+
+    def _scaled(self, v: FloatArray, factor: FloatArray) -> FloatArray:
+        """Each component times the factor of its group."""
+        line = self.groups.line
+        if line is not None:
+            result = v.reshape(-1, *line) * factor.reshape(-1, 1, line[1])
+            return result.reshape(v.shape)
+
+        def fill(cut: slice, out: FloatArray) -> None:
+            np.take(factor, self.groups.labels[cut], out=out, mode="clip")
+            np.multiply(out, v[cut], out=out)
+
+        return by_blocks(fill, v.size)
+
+    def _free_derivative(
+        self, v: FloatArray, r: FloatArray, factor: FloatArray, t: FloatArray
+    ) -> GroupDerivative:
+        """Without bounds: factor I + (1 - factor) y y', y = v / ||v||, on the groups that are not zero."""
+        curved = (r > 0) & (t > 0)
+        inverse = np.where(curved, 1.0 / np.where(curved, r + t, 1.0), 0.0)
+        bend = t * inverse * inverse  # (1 - factor) / ||v||, without cancellation
+        n = self.size
+        entries, left, right = np.empty(n), np.empty(n), np.empty(n)
+        line = self.groups.line
+        if line is not None:
+            shape = (-1, *line)
+            columns = [part.reshape(-1, 1, line[1]) for part in (factor, bend, inverse)]
+            entries.reshape(shape)[...] = columns[0]
+            np.multiply(v.reshape(shape), columns[1], out=left.reshape(shape))
+            np.multiply(v.reshape(shape), columns[2], out=right.reshape(shape))
+        else:
+            labels = self.groups.labels
+            for begin in range(0, n, BLOCK):
+                cut = slice(begin, begin + BLOCK)
+                for table, out in ((factor, entries), (bend, left), (inverse, right)):
+                    np.take(table, labels[cut], out=out[cut], mode="clip")
+                left[cut] *= v[cut]
+                right[cut] *= v[cut]
+        if not self._plain:
+            right *= self.inner_weights
+        return GroupDerivative(entries, left, right, self.groups)
 
     def pieces(self, v: FloatArray, step: float) -> Pieces:
         """Label each component: its group is zero, or it is free (nonzero) or at a bound."""

@@ -32,9 +32,10 @@ class Groups:
         self.size = labels.size
         self.counts = np.bincount(self.labels).astype(np.float64)
         self.number = self.counts.size
-        self._gather = sp.csr_array(
-            (np.ones(self.size), (self.labels, np.arange(self.size))), shape=(self.number, self.size)
-        )
+        self._gather: sp.csr_array | None = None
+        self._sorted = bool((np.diff(self.labels) >= 0).all())
+        # (m, s): component i = (j m + k) s + l, k < m, belongs to group j s + l; set where the groups are such lines
+        self.line: tuple[int, int] | None = None
 
     @classmethod
     def given(cls, groups: Any) -> Groups:
@@ -81,16 +82,26 @@ class Groups:
             raise InputError(f"axis must be one of the {len(sizes)} axes of shape {sizes}, got {axis!r}")
         rest = sizes[: axis % len(sizes)] + sizes[axis % len(sizes) + 1 :]
         lines = np.arange(int(np.prod(rest))).reshape(rest)
-        return cls(np.broadcast_to(np.expand_dims(lines, axis % len(sizes)), sizes).ravel())
+        result = cls(np.broadcast_to(np.expand_dims(lines, axis % len(sizes)), sizes).ravel())
+        result.line = sizes[axis % len(sizes)], int(np.prod(sizes[axis % len(sizes) + 1 :]))
+        return result
 
     @property
     def gather(self) -> sp.csr_array:
         """The matrix (number, n) that sums over groups."""
+        if self._gather is None:
+            self._gather = sp.csr_array(
+                (np.ones(self.size), (self.labels, np.arange(self.size))), shape=(self.number, self.size)
+            )
         return self._gather
 
     def sum(self, x: FloatArray) -> FloatArray:
         """Sums over the groups, (number,) or (number, k)."""
-        return np.asarray(self._gather @ x)
+        if x.ndim == 1 and self.line is not None and self.line[1] > 1:
+            return np.asarray(np.sum(x.reshape(-1, *self.line), axis=1)).ravel()
+        if x.ndim == 1 and not self._sorted:  # the matrix would be read in leaps
+            return np.asarray(np.bincount(self.labels, weights=x), dtype=np.float64)
+        return np.asarray(self.gather @ x)
 
     def spread(self, x: npt.NDArray[Any]) -> npt.NDArray[Any]:
         """The value of its group for each component."""

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import copy
+from collections.abc import Callable
 from typing import Any
 
 import numpy as np
@@ -10,12 +12,17 @@ import numpy.typing as npt
 from ..errors import InputError
 from ..pieces import Pieces
 from ..validate import bound_arrays, float_array
+from .blocks import BLOCK, by_blocks, cut_parameter
 from .derivative import DiagonalDerivative
 
 FloatArray = npt.NDArray[np.float64]
+ByteArray = npt.NDArray[np.int8]
+BoolArray = npt.NDArray[np.bool_]
 
 # a jump of the derivative below this fraction of its terms is the rounding of none
 ROUNDING = 1e-14
+# breakpoints up to which labels fit into a byte
+SHORT = 60
 
 
 class PiecewiseQuadraticCost:
@@ -205,16 +212,55 @@ class PiecewiseQuadraticCost:
 
     # the proximal map
 
-    def _labels(self, v: FloatArray, step: float) -> npt.NDArray[np.int64]:
-        labels = np.ones(v.shape, dtype=np.int64)
+    def _labels(self, v: FloatArray, step: float) -> npt.NDArray[np.integer]:
+        kind = np.int8 if len(self._points) <= SHORT else np.int64
+        if v.ndim == 1 and v.size > BLOCK:
+            if self.size is None and kind is np.int8:
+                fill = self._labels_filler(step)
+                return by_blocks(lambda cut, out, spare: fill(v[cut], out, spare), v.size, kind, [np.bool_])
+
+            def part(cut: slice, out: npt.NDArray[np.integer]) -> None:
+                out[:] = self._part(cut)._labels(v[cut], step)
+
+            return by_blocks(part, v.size, kind)
+        labels = np.ones(v.shape, dtype=kind)
         for j, b in enumerate(self._points):
             first, last = b + step * self._left[j], b + step * self._right[j]
             jump = self._right[j] > self._left[j]
             labels += np.where(jump, v >= first, v > first)
             labels += v > last
         low, high = self._ends(step)
-        labels = np.where(v >= high, 2 * len(self._points) + 2, labels)
-        return np.where((v <= low) | (self.lower == self.upper), 0, labels)
+        labels[v >= high] = 2 * len(self._points) + 2
+        labels[(v <= low) | (self.lower == self.upper)] = 0
+        return labels
+
+    def _labels_filler(self, step: float) -> Callable[[FloatArray, ByteArray, BoolArray], None]:
+        """A function that writes labels where all components have the same parameters."""
+        tests: list[tuple[Any, float]] = []
+        for j, b in enumerate(self._points):
+            first = b + step * self._left[j]
+            tests.append((np.greater_equal if self._right[j] > self._left[j] else np.greater, first.item()))
+            tests.append((np.greater, (b + step * self._right[j]).item()))
+        low, high = (end.item() for end in self._ends(step))
+        last = np.int8(2 * len(self._points) + 2)
+        fixed = bool((self.lower == self.upper).item())
+
+        def fill(v: FloatArray, labels: ByteArray, spare: BoolArray) -> None:
+            labels.fill(0 if fixed else 1)
+            if fixed:
+                return
+            counted = spare.view(np.int8)
+            for test, where in tests:
+                test(v, where, out=spare)
+                labels += counted
+            np.greater_equal(v, high, out=spare)
+            counted *= last
+            np.maximum(labels, counted, out=labels)
+            np.less_equal(v, low, out=spare)
+            np.logical_not(spare, out=spare)  # not v > low: NaN must stay NaN
+            labels *= counted
+
+        return fill
 
     def _ends(self, step: float) -> tuple[FloatArray, FloatArray]:
         """Up to which v the lower and from which on the upper bound holds."""
@@ -228,21 +274,91 @@ class PiecewiseQuadraticCost:
         """Return the exact minimiser of step phi_i(u) + 1/2 (u - v_i)^2 for each component."""
         if hasattr(v, "through_prox"):  # a traced array: with derivative, pieces and smoothed form
             return v.through_prox(self, step)
+        if v.ndim == 1 and v.size > BLOCK:
+            if self.size is None and len(self._points) <= SHORT:
+                return self._from_tables(v, step)
+
+            def fill(cut: slice, out: FloatArray) -> None:
+                out[:] = self._part(cut)._exact(v[cut], step)
+
+            return by_blocks(fill, v.size)
+        return self._exact(v, step)
+
+    def _part(self, cut: slice) -> PiecewiseQuadraticCost:
+        """The cost of the components of a slice, as far as the proximal map needs it."""
+        if self.size is None:
+            return self
+        other = copy.copy(self)
+        other.lower, other.upper = cut_parameter(self.lower, cut), cut_parameter(self.upper, cut)
+        for name in ("_points", "_slopes", "_curvatures", "_left", "_right"):
+            setattr(other, name, [cut_parameter(table, cut) for table in getattr(self, name)])
+        return other
+
+    def _exact(self, v: FloatArray, step: float) -> FloatArray:
         labels = self._labels(v, step)
-        u = (v - step * self._slopes[0]) / (1.0 + step * self._curvatures[0])
+        u = np.asarray((v - step * self._slopes[0]) / (1.0 + step * self._curvatures[0]))
         for j, b in enumerate(self._points):
             inner = (v - step * self._slopes[j + 1]) / (1.0 + step * self._curvatures[j + 1])
             u = np.where(labels == 2 * j + 2, b, np.where(labels > 2 * j + 2, inner, u))
         u = np.where(labels == 0, self.lower, u)
         return np.clip(np.where(labels == 2 * len(self._points) + 2, self.upper, u), self.lower, self.upper)
 
+    def _from_tables(self, v: FloatArray, step: float) -> FloatArray:
+        """The map where all components have the same parameters: a few numbers, looked up by label."""
+        k, write_labels = len(self._points), self._labels_filler(step)
+        shift, stretch, fixed = np.zeros(2 * k + 3), np.ones(2 * k + 3), np.zeros(2 * k + 3)
+        shift[1::2] = step * np.ravel(self._slopes)
+        stretch[1::2] = 1.0 + step * np.ravel(self._curvatures)
+        fixed[0::2] = [self.lower.item(), *(b.item() for b in self._points), self.upper.item()]
+        bent = bool((stretch != 1.0).any())
+
+        def fill(
+            cut: slice, out: FloatArray, labels: ByteArray, which: Any, spare: FloatArray, still: BoolArray
+        ) -> None:
+            write_labels(v[cut], labels, still)
+            np.copyto(which, labels)
+            np.take(shift, which, out=spare, mode="clip")
+            np.subtract(v[cut], spare, out=out)
+            if bent:
+                np.take(stretch, which, out=spare, mode="clip")
+                np.divide(out, spare, out=out)
+            np.take(fixed, which, out=spare, mode="clip")
+            np.bitwise_and(labels, 1, out=labels)
+            np.equal(labels, 0, out=still)
+            np.copyto(out, spare, where=still)
+            np.clip(out, self.lower, self.upper, out=out)
+
+        return by_blocks(fill, v.size, scratch=[np.int8, np.intp, np.float64, np.bool_])
+
     def prox_derivative(self, v: FloatArray, step: float) -> DiagonalDerivative:
         """Return the diagonal: 1/(1 + step c_j) on piece j, 0 on kinks and bounds."""
+        if v.ndim == 1 and v.size > BLOCK:
+            if self.size is None and len(self._points) <= SHORT:
+                table = np.zeros(2 * len(self._points) + 3)
+                table[1::2] = 1.0 / (1.0 + step * np.ravel(self._curvatures))
+                write_labels = self._labels_filler(step)
+
+                def look_up(
+                    cut: slice, out: FloatArray, labels: ByteArray, which: Any, spare: BoolArray
+                ) -> None:
+                    write_labels(v[cut], labels, spare)
+                    np.copyto(which, labels)
+                    np.take(table, which, out=out, mode="clip")
+
+                return DiagonalDerivative(by_blocks(look_up, v.size, scratch=[np.int8, np.intp, np.bool_]))
+
+            def fill(cut: slice, out: FloatArray) -> None:
+                out[:] = self._part(cut)._slopes_at(v[cut], step)
+
+            return DiagonalDerivative(by_blocks(fill, v.size))
+        return DiagonalDerivative(self._slopes_at(v, step))
+
+    def _slopes_at(self, v: FloatArray, step: float) -> FloatArray:
         labels = self._labels(v, step)
         diagonal = np.zeros(v.shape)
         for j, bend in enumerate(self._curvatures):
             diagonal = np.where(labels == 2 * j + 1, 1.0 / (1.0 + step * bend), diagonal)
-        return DiagonalDerivative(diagonal)
+        return diagonal
 
     def _legend(self) -> tuple[str, ...]:
         if self._words is not None:

@@ -10,9 +10,11 @@ import numpy.typing as npt
 from ..errors import InputError
 from ..pieces import Pieces
 from ..validate import bound_arrays, float_array
+from .blocks import BLOCK, by_blocks, cut_parameter
 from .derivative import DiagonalDerivative
 
 FloatArray = npt.NDArray[np.float64]
+BoolArray = npt.NDArray[np.bool_]
 
 # a slope that differs from beta by less than this fraction of both does not differ
 ROUNDING = 1e-12
@@ -110,14 +112,48 @@ class SparseCost:
         """Return clip(soft(v, step * beta), lower, upper)."""
         if hasattr(v, "through_prox"):  # a traced array: with derivative, pieces and smoothed form
             return v.through_prox(self, step)
+        if v.ndim == 1 and v.size > BLOCK:
+
+            def fill(cut: slice, out: FloatArray, spare: FloatArray) -> None:
+                beta, lower, upper = self._parameters(cut)
+                _shrink_into(out, v[cut], step, beta, spare)
+                np.clip(out, lower, upper, out=out)
+
+            return by_blocks(fill, v.size, scratch=[np.float64])
         result = self._shrink(v, step)
         return np.clip(result, self.lower, self.upper, out=result)
 
+    def _parameters(self, cut: slice) -> tuple[FloatArray, FloatArray, FloatArray]:
+        """beta, lower and upper of the components of a slice."""
+        return cut_parameter(self.beta, cut), cut_parameter(self.lower, cut), cut_parameter(self.upper, cut)
+
     def prox_derivative(self, v: FloatArray, step: float) -> DiagonalDerivative:
         """Return the diagonal with 1 on the sloped pieces and 0 on the constant ones and at kinks."""
+        weighted = bool(self.beta.any())
+        if v.ndim == 1 and v.size > BLOCK:
+
+            def fill(
+                cut: slice, out: FloatArray, spare: FloatArray, one: BoolArray, other: BoolArray
+            ) -> None:
+                beta, lower, upper = self._parameters(cut)
+                shrunk = v[cut]
+                if weighted:
+                    _shrink_into(out, shrunk, step, beta, spare)
+                    shrunk = out
+                np.greater(shrunk, lower, out=one)
+                np.less(shrunk, upper, out=other)
+                one &= other
+                if weighted:
+                    np.not_equal(shrunk, 0.0, out=other)
+                    if not beta.all():
+                        other |= beta == 0.0
+                    one &= other
+                np.copyto(out, one)
+
+            return DiagonalDerivative(by_blocks(fill, v.size, scratch=[np.float64, np.bool_, np.bool_]))
         shrunk = self._shrink(v, step)
         sloped = (shrunk > self.lower) & (shrunk < self.upper)
-        if self.beta.any():
+        if weighted:
             sloped &= (shrunk != 0.0) | (self.beta == 0.0)
         return DiagonalDerivative(sloped.astype(np.float64))
 
@@ -189,6 +225,19 @@ class SparseCost:
         rest = subgradient - sparsity
         at_bound = (u <= self.lower) | (u >= self.upper)
         return {"sparsity": sparsity, "bounds": np.where(at_bound, rest, 0.0)}
+
+
+def _shrink_into(out: FloatArray, v: FloatArray, step: float, beta: FloatArray, spare: FloatArray) -> None:
+    """Write v shrunk by step beta to `out`; `spare` is a scratch array of its size."""
+    if beta.size == 1:
+        threshold = step * beta
+        np.clip(v, -threshold, threshold, out=out)
+    else:
+        np.multiply(beta, step, out=spare)
+        np.minimum(v, spare, out=out)
+        np.negative(spare, out=spare)
+        np.maximum(out, spare, out=out)
+    np.subtract(v, out, out=out)
 
 
 def _smooth_max(a: FloatArray, b: FloatArray | float, eps: float) -> tuple[FloatArray, FloatArray]:
