@@ -16,6 +16,7 @@ from .linear.boundary import as_matrix, as_square, product, transpose_product
 from .protocols import Cost
 from .records import Certificate
 from .states import StateModel
+from .time_tracking import by_levels, tracking
 from .validate import bound_arrays, float_array, scalar, weight_array
 from .work import WorkCounts
 
@@ -299,6 +300,9 @@ class ControlProblem(ControlStatement):
         """Value and gradient (Riesz representative in the control product) of the smooth part; two state solves."""
         if self.state_bounded:
             return self._penalised_smooth(u)
+        if by_levels(self):
+            value, gradient = tracking(self, u)
+            return value + 0.5 * self.alpha * self.controls.dot(u, u), gradient + self.alpha * u
         misfit = self.forward(u) - self.reduced_target()
         value = 0.5 * self.observations.dot(misfit, misfit) + 0.5 * self.alpha * self.controls.dot(u, u)
         return value, self.adjoint(misfit) + self.alpha * u

@@ -43,6 +43,9 @@ class TimeDependentState(TimeGrid):
         K equal steps from 0 to `duration`, instead of `times`.
     scheme : {"implicit Euler", "Crank-Nicolson"} or float
         The float is theta, between 1/2 and 1: below 1/2 the scheme is not stable for all steps.
+    memory : int, optional
+        Bytes for a trajectory in gradients of a control problem. A longer one is kept at checkpoints and computed again
+        from there (`ssn.checkpoints`), where the whole state is observed with a lumped mass.
 
     Attributes
     ----------
@@ -109,7 +112,9 @@ class TimeDependentState(TimeGrid):
         steps: int | None = None,
         duration: float | None = None,
         scheme: str | float = "implicit Euler",
+        memory: int | None = None,
     ) -> None:
+        self.memory = None if memory is None else count(memory, "memory")
         self.A = as_square(A, "A")
         if isinstance(self.A, LinearOperator) or isinstance(M, LinearOperator):
             raise InputError(
@@ -156,15 +161,24 @@ class TimeDependentState(TimeGrid):
                 ) from error
         return self._factors[which]
 
+    def advance(self, k: int, earlier: FloatArray | None, load: FloatArray) -> FloatArray:
+        """Level k, 1 to K, from the one before (None: zero) and its part of the right-hand side."""
+        if earlier is not None and k > 1:
+            load = load + self._explicit[self._size_of_step[k - 1]] @ earlier
+        return self._factor(k - 1).solve(load)
+
+    def retreat(self, k: int, later: FloatArray | None, load: FloatArray) -> FloatArray:
+        """Level k of the adjoint from the one after (None at the end) and its part of the right-hand side."""
+        if later is not None:
+            load = load + self._transposed[self._size_of_step[k]] @ later
+        return self._factor(k - 1).solve(load, transposed=not self.symmetric)
+
     def solve(self, rhs: FloatArray) -> FloatArray:
         """Solve E y = rhs by a sweep forward in time; one state solve."""
         loads = self.levels(rhs)
         result = np.empty((self.steps, self.points))
         for k in range(self.steps):
-            load = loads[k]
-            if k:
-                load = load + self._explicit[self._size_of_step[k]] @ result[k - 1]
-            result[k] = self._factor(k).solve(load)
+            result[k] = self.advance(k + 1, result[k - 1] if k else None, loads[k])
         self.work.state_solves += 1
         return result.ravel()
 
@@ -173,10 +187,7 @@ class TimeDependentState(TimeGrid):
         loads = self.levels(rhs)
         result = np.empty((self.steps, self.points))
         for k in reversed(range(self.steps)):
-            load = loads[k]
-            if k + 1 < self.steps:
-                load = load + self._transposed[self._size_of_step[k + 1]] @ result[k + 1]
-            result[k] = self._factor(k).solve(load, transposed=not self.symmetric)
+            result[k] = self.retreat(k + 1, result[k + 1] if k + 1 < self.steps else None, loads[k])
         self.work.state_solves += 1
         return result.ravel()
 

@@ -41,6 +41,8 @@ LEVELS: dict[str, float] = {
     "states": 1.5,
     "time_grid": 1.2,
     "time_state": 1.5,
+    "checkpoints": 0,
+    "time_tracking": 1.5,
     "environment": 1.5,
     "duality": 1.5,
     "nonlinear_states": 1.6,

@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import doctest
 import itertools
+import math
+import tracemalloc
 
 import numpy as np
 import pytest
@@ -13,6 +15,7 @@ import scipy.sparse as sp
 
 import ssn
 import ssn.time_state
+from ssn.checkpoints import Checkpoints
 
 THETAS = {"implicit Euler": 1.0, 0.75: 0.75, "Crank-Nicolson": 0.5}
 GRIDS = {
@@ -470,3 +473,98 @@ def test_the_example_of_the_docstring_runs():
     results = doctest.testmod(ssn.time_state)
     assert results.attempted >= 5
     assert results.failed == 0
+
+
+# trajectories kept at checkpoints
+
+
+@pytest.mark.parametrize("steps", [1, 2, 7, 40, 123])
+@pytest.mark.parametrize("stored", [1, 2, 3, 5, 200])
+def test_checkpoints_give_all_levels_backwards(steps, stored):
+    """The same bits, for a recursion that is not linear, and no more levels alive than allowed."""
+    alive = 0
+    most = 0
+
+    class Level(np.ndarray):
+        def __del__(self):
+            nonlocal alive
+            alive -= 1
+
+    def advance(k, level):
+        nonlocal alive, most
+        result = np.array(np.cos(3.0 * np.asarray(level)) + 1.0 / k).view(Level)
+        alive += 1
+        most = max(most, alive)
+        return result
+
+    start = np.linspace(0.0, 1.0, 11)
+    expected = [start]
+    for k in range(1, steps + 1):
+        expected.append(np.cos(3.0 * expected[-1]) + 1.0 / k)
+    found = Checkpoints(advance, start, steps, stored * start.nbytes)
+    numbers = []
+    for k, level in found.backward():
+        numbers.append(k)
+        np.testing.assert_array_equal(level, expected[k])
+        del level
+    assert numbers == list(range(steps, 0, -1))
+    assert most <= found.stored + 3  # those in store, the one that is read, and the ends of an advance
+    repeats = next(r for r in range(1, steps + 1) if math.comb(found.stored + r, r) >= steps)
+    assert steps <= found.advances <= (repeats + 1) * steps
+
+
+@pytest.mark.parametrize("levels", [1, 3, 9])
+@pytest.mark.parametrize("scheme", THETAS)
+@pytest.mark.parametrize("lasting", [False, True])
+def test_gradients_from_checkpoints_are_those_from_the_whole_trajectory(lasting, scheme, levels):
+    n, grid = 12, np.concatenate([np.linspace(0.0, 0.4, 12), np.linspace(0.5, 1.0, 9)])
+
+    def problem(memory):
+        state = ssn.TimeDependentState(
+            np.full(n, 0.1), stiffness(n) + wind(n), grid, scheme=scheme, memory=memory
+        )
+        amplitudes = np.ones((20, 1)) if lasting else None
+        return ssn.ControlProblem(
+            state=state, target=np.sin(np.arange(state.size)), cost=ssn.SparseCost(0.01), control_weight=1e-3,
+            control_operator=state.control_operator(amplitudes=amplitudes), source=np.cos(np.arange(state.size)) / 50,
+            control_mass=state.control_mass(amplitudes=amplitudes), observation_mass=state.observation_mass(),
+        )  # fmt: skip
+
+    whole, short = problem(None), problem(levels * n * 8)
+    u = np.random.default_rng(3).standard_normal(whole.unknowns)
+    value, gradient = whole.smooth(u)
+    before = short.work.state_solves
+    found, slope = short.smooth(u)
+    assert short.work.state_solves > before + 2  # levels were computed again
+    assert found == pytest.approx(value, rel=1e-13)
+    np.testing.assert_allclose(slope, gradient, rtol=1e-11, atol=1e-13 * abs(gradient).max())
+    solutions = [ssn.solve(one) for one in (whole, short)]
+    np.testing.assert_array_equal(solutions[0].x, solutions[1].x)
+
+
+def test_checkpoints_need_less_memory():
+    n, steps = 400, 600
+    state = ssn.TimeDependentState(
+        np.full(n, 0.1), stiffness(n), steps=steps, duration=1.0, memory=20 * n * 8
+    )
+    problem = ssn.ControlProblem(
+        state=state, target=np.zeros(state.size), cost=ssn.SparseCost(0.01), control_weight=1e-3,
+        control_operator=state.control_operator(amplitudes=np.ones((steps, 1))),
+        control_mass=state.control_mass(amplitudes=np.ones((steps, 1))), observation_mass=state.observation_mass(),
+    )  # fmt: skip
+    u = np.ones(problem.unknowns)
+    problem.smooth(u)  # factorises
+    peaks = []
+    for memory in (state.memory, None):
+        state.memory = memory
+        tracemalloc.start()
+        problem.smooth(u)
+        peaks.append(tracemalloc.get_traced_memory()[1])
+        tracemalloc.stop()
+    assert peaks[0] < 60 * n * 8
+    assert peaks[0] < 0.05 * peaks[1]
+
+
+def test_memory_is_a_whole_number():
+    with pytest.raises(ssn.InputError, match="memory"):
+        ssn.TimeDependentState(np.ones(3), stiffness(3), steps=2, duration=1.0, memory=0)
