@@ -14,7 +14,7 @@ from .errors import InputError
 from .linear.boundary import as_square, is_symmetric
 from .linear.direct import Factorization, SingularMatrixError
 from .time_grid import TimeGrid
-from .validate import float_array
+from .validate import count, float_array
 from .work import WorkCounts
 
 FloatArray = npt.NDArray[np.float64]
