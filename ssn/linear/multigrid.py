@@ -24,6 +24,22 @@ class MultigridError(ArithmeticError):
     """The multigrid solve did not reach its accuracy."""
 
 
+def one_cycle(matrix: Any) -> Any:
+    """One multigrid cycle as an operator: a preconditioner for a matrix with a dominant diagonal, symmetric or not."""
+    import pyamg
+
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore")
+        hierarchy: Any = pyamg.ruge_stuben_solver(
+            sp.csr_matrix(matrix),
+            strength=("classical", {"theta": 0.25, "norm": "min"}),
+            CF=("RS", {"second_pass": True}),
+            presmoother=("gauss_seidel", {"sweep": "forward"}),
+            postsmoother=("gauss_seidel", {"sweep": "backward"}),
+        )
+    return hierarchy.aspreconditioner(cycle="V")
+
+
 class MultigridSolver:
     """Solve A x = b, A sparse symmetric positive definite, to a relative residual.
 
@@ -48,21 +64,10 @@ class MultigridSolver:
         max_iterations: int = 200,
         work: WorkCounts | None = None,
     ) -> None:
-        import pyamg
-
         self.matrix = sp.csr_array(matrix)
         self.accuracy, self.max_iterations = accuracy, max_iterations
         self.work = work if work is not None else WorkCounts()
-        with warnings.catch_warnings():
-            warnings.simplefilter("ignore")
-            hierarchy: Any = pyamg.ruge_stuben_solver(
-                sp.csr_matrix(self.matrix),
-                strength=("classical", {"theta": 0.25, "norm": "min"}),
-                CF=("RS", {"second_pass": True}),
-                presmoother=("gauss_seidel", {"sweep": "forward"}),
-                postsmoother=("gauss_seidel", {"sweep": "backward"}),
-            )
-        self.cycle: Any = hierarchy.aspreconditioner(cycle="V")
+        self.cycle: Any = one_cycle(self.matrix)
         self.work.factorizations += 1
         known = 1.5 + np.sin(np.arange(self.matrix.shape[0]) * 0.7)
         if float(np.linalg.norm(self.solve(self.matrix @ known) - known)) > LOST_DIGITS * float(

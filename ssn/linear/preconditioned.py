@@ -21,7 +21,7 @@ from ..errors import InputError
 from ..work import WorkCounts
 from .direct import SingularMatrixError
 from .krylov import conjugate_residuals
-from .multigrid import MultigridSolver
+from .multigrid import one_cycle
 
 FloatArray = npt.NDArray[np.float64]
 
@@ -95,10 +95,10 @@ class PreconditionedMatrix:
         self.matrix, self.work = sp.csr_array(matrix), work
         self.definite = definite and kind == "multigrid"
         if kind == "multigrid":
-            self.preconditioner: LinearOperator = MultigridSolver(self.matrix, work=work).cycle
+            self.preconditioner: LinearOperator = one_cycle(self.matrix)
         else:
             self.preconditioner = _incomplete(self.matrix)
-            work.factorizations += 1
+        work.factorizations += 1
 
     def solve(self, rhs: FloatArray, forcing: float) -> tuple[FloatArray, float, int]:
         """Return x, its relative residual (computed), and the iterations it took."""

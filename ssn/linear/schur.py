@@ -32,7 +32,7 @@ from ..protocols import Direction, Evaluation
 from .boundary import is_symmetric, product, transpose_product
 from .direct import Factorization, SingularMatrixError
 from .krylov import conjugate_residuals
-from .multigrid import MultigridSolver
+from .multigrid import MultigridSolver, one_cycle
 
 FloatArray = npt.NDArray[np.float64]
 
@@ -104,7 +104,8 @@ class SchurOperators:
         root = sp.diags_array(np.sqrt(self._match))
         matched = sp.csr_array(self.state + root @ self.mass @ root)
         if self.multigrid:
-            self._factor = MultigridSolver(matched, work=self.work)
+            self._factor = one_cycle(matched)
+            self.work.factorizations += 1
         elif self._factor is None:
             definite = self.symmetric and bool((self.state.diagonal() > 0).all())
             self._factor = Factorization(
@@ -117,7 +118,7 @@ class SchurOperators:
     def _solve(self, rhs: FloatArray, *, transposed: bool) -> FloatArray:
         if self.multigrid:
             self.work.multigrid_cycles += 1
-            return np.asarray(self._factor.cycle @ rhs)
+            return np.asarray(self._factor @ rhs)
         self.work.linear_solves += 1
         return np.asarray(self._factor.solve(rhs, transposed=transposed and not self.symmetric))
 
