@@ -23,7 +23,7 @@ def _baseline_path(context: click.Context, parameter: click.Parameter, text: str
 
 
 # several times what the slowest reference of the problems here needs
-ITERATIONS = 5000
+ITERATIONS = 100_000
 
 
 @click.command("gate")

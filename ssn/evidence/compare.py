@@ -10,6 +10,7 @@ from typing import Any
 
 import numpy as np
 
+from ..nonlinear_control import NonlinearControlProblem
 from ..solution import Solution
 from ..solve import solve
 from ..sum_problem import SumProblem
@@ -31,6 +32,8 @@ SLOW = 0.3
 LARGE = 20_000
 # iterations of a reference at the last penalty of hard state bounds, where it does not get anywhere
 BRIEF = 500
+# and where each of them solves a nonlinear state equation
+NONLINEAR = 100
 
 
 @dataclass(frozen=True)
@@ -204,6 +207,8 @@ def assess(
     patience = min(budget, 2.0) if slow_reference else budget
     if iterations is not None and slow_reference:
         iterations = min(iterations, BRIEF)
+    if iterations is not None and isinstance(stated, NonlinearControlProblem):
+        iterations = min(iterations, NONLINEAR)
     others, checks = _others(problem, solution, own_methods, patience, agreement_tolerance, tell, iterations)
     if slow_reference if libraries is None else libraries:
         others += library_results(stated, problem, solution, set(own_methods), budget, tell)

@@ -7,7 +7,7 @@ import numpy as np
 from ..pieces import Pieces
 from ..protocols import Evaluation, FloatArray
 from .check import Check
-from .decay import decay
+from .decay import RESOLUTION, decay
 from .local import EPS, Local
 
 # An error of the derivative below this, relative to the image, is not looked for.
@@ -128,7 +128,7 @@ def pieces(local: Local, x: FloatArray) -> Pieces | None:
 def _along(
     local: Local, x: FloatArray, h: FloatArray, rng: np.random.Generator
 ) -> tuple[bool, float, str] | None:
-    """Whether the quotient tends to zero along h, its last figure, and the reason; None outside the domain."""
+    """Whether the quotient tends to zero along h, its last figure, the reason; None outside the domain or in noise."""
     base = local.evaluate(x)
     if not base.finite:
         return None
@@ -151,6 +151,8 @@ def _along(
             continue
         figures.append(local.residual_norm(change - image) / scale if scale > 0.0 else 0.0)
         rounding.append(max(30.0 * noise / scale, NEGLIGIBLE) if scale > 0.0 else NEGLIGIBLE)
+    if min(rounding) > RESOLUTION:
+        return None  # noise hides every size: this direction says nothing, the others do
     kept = _without_noise(figures)
     judged = decay(sizes[:kept], figures[:kept], rounding[:kept])
     least = min(figures[:kept])

@@ -20,6 +20,8 @@ from .local import EPS, smooth_sequence
 # An error of the derivative below this, relative to it, is not looked for.
 NEGLIGIBLE = 1e-8
 SIZES = tuple(10.0**-k for k in range(7))
+# a large penalty of state bounds bends the value within the last of these
+FINER = tuple(10.0**-k for k in range(10))
 
 
 def gradient(
@@ -40,12 +42,13 @@ def gradient(
         if scale == 0.0:
             scale = 1.0
         figures, rounding = [], []
-        for t in SIZES:
+        sizes = FINER if getattr(problem, "state_bounded", False) else SIZES
+        for t in sizes:
             with np.errstate(all="ignore"):
                 up, down = value(u + t * h), value(u - t * h)
                 figures.append(_figure(abs((up - down) / (2 * t) - slope) / scale))
                 rounding.append(50.0 * EPS * (abs(up) + abs(down)) / (2 * t * scale))
-        judged = decay(SIZES, figures, [max(r, NEGLIGIBLE) if np.isfinite(r) else 0.0 for r in rounding])
+        judged = decay(sizes, figures, [max(r, NEGLIGIBLE) if np.isfinite(r) else 0.0 for r in rounding])
         last = max(last, 0.0 if judged.kind == "exact" else judged.last)
         if judged.kind not in ("exact", "falls") and not _vanishes(figures, rounding):
             failures.append(f"{what} direction: the error {judged.reason}")

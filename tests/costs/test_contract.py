@@ -354,7 +354,7 @@ class Case:
         return found
 
     def direction(self) -> np.ndarray:
-        return np.array(self.draw(DIRECTIONS))[: self.n]
+        return np.resize(self.draw(DIRECTIONS), self.n)
 
 
 def kind(cost: Any) -> type:
