@@ -361,7 +361,8 @@ class PlanarMultiBangCost:
             for _ in range(HALVINGS):
                 trial = p + length * move
                 shares, new, _ = value_at(trial)
-                short = new > value + 1e-4 * length * expected + noise
+                # where values no longer tell, the full step is the better one
+                short = (new > value + 1e-4 * length * expected + noise) & (np.abs(expected) > noise)
                 if not short.any():
                     break
                 length = np.where(short, 0.5 * length, length)
