@@ -47,6 +47,7 @@ import numpy as np
 import numpy.typing as npt
 import scipy.sparse as sp
 import skfem
+from scipy.integrate import trapezoid
 from skfem.helpers import grad
 
 import ssn
@@ -328,7 +329,7 @@ def plug_flow(n: int) -> tuple[float, float]:
     load = np.zeros(state.points)
     load[z.size :: z.size] = length[1:]
     outlet = ssn.SteadyState(state.A).solve(load).reshape(x.size, z.size)[-1]
-    computed = float(np.trapezoid(outlet, z)) / HEIGHT
+    computed = float(trapezoid(outlet, z)) / HEIGHT
     reach = max(SPREAD_X, 0.5 * LENGTH / n * SPEED) / SPEED
     exact = (LENGTH - reach * (1.0 - np.exp(-LENGTH / reach))) / (HEIGHT * SPEED)
     return computed, float(exact)

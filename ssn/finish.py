@@ -48,7 +48,7 @@ def finish(plan: Plan, result: LoopResult, limits: Limits, before: Any) -> Solut
     elif isinstance(plan.equation, FullSpaceEquation):
         x, accuracy, fields = collect(plan.equation, best)
     elif isinstance(plan.equation, CoupledEquation):
-        x, accuracy, fields = plan.equation.collect(best.x)
+        x, accuracy, fields = plan.equation.collect(best.x, limits.tolerance)
     elif isinstance(plan.equation, SettledEquation):
         x, accuracy, fields = collect_gap(plan.equation, result)
         fields["doubt"] = _gap_doubt(fields)

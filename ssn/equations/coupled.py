@@ -49,8 +49,8 @@ FINAL_CYCLES, LEFT = 12, 0.05
 START_CYCLES = 25
 # a cycle leaves a fifth of an error: what it finds, times this, is no less than the error
 CAUTION = 1.25
-# distance bound, relative to the control, from which on a solution counts as inaccurate
-DOUBTFUL = 1e-7
+# distance bound, relative to the control, from which on a solution counts as inaccurate, and in units of the tolerance
+DOUBTFUL, LOOSE = 1e-7, 100.0
 
 
 @dataclass(frozen=True)
@@ -213,7 +213,7 @@ class CoupledEquation:
         """None: another equation takes over where this one fails."""
         return None
 
-    def collect(self, x: FloatArray) -> tuple[FloatArray, float, dict[str, Any]]:
+    def collect(self, x: FloatArray, tolerance: float) -> tuple[FloatArray, float, dict[str, Any]]:
         """Control, accuracy computed afresh, and the fields of `Solution` at an iterate."""
         problem, step = self.problem, 1.0 / self.alpha
         at = self.evaluate(x.copy())
@@ -230,7 +230,7 @@ class CoupledEquation:
         method = "residuals of state and adjoint equation, by multigrid"
         share = relative(bound, self.control_size(u, v))
         doubt = None
-        if share > DOUBTFUL:
+        if share > max(DOUBTFUL, LOOSE * tolerance):
             doubt = f"state and adjoint equation are solved to {share:.1e} of the control only"
         return u, at.accuracy, {
             "doubt": None if doubt is None else (Outcome.INACCURATE, doubt),

@@ -77,9 +77,9 @@ class FactorisedPairEquation(CoupledEquation):
         first = abs(self.operators.matrix) @ abs(p) + abs(self.state_load(y))
         return self.energy(signs * first, signs * second)
 
-    def collect(self, x: FloatArray) -> tuple[FloatArray, float, dict[str, Any]]:
+    def collect(self, x: FloatArray, tolerance: float) -> tuple[FloatArray, float, dict[str, Any]]:
         """Control, accuracy computed afresh, and the fields of `Solution` at an iterate."""
-        u, accuracy, fields = super().collect(x)
+        u, accuracy, fields = super().collect(x, tolerance)
         certificate: Certificate = fields["certificate"]
         fields["certificate"] = replace(certificate, method="residuals of state and adjoint equation")
         return u, accuracy, fields
