@@ -58,7 +58,7 @@ def run(tmp_path: Path, *arguments: str) -> subprocess.CompletedProcess[str]:
 
 
 def test_one_benchmark_runs_and_is_published(tmp_path):
-    result = run(tmp_path, "--bench", r"zoo\.Obstacle\..*newton_steps")
+    result = run(tmp_path, "--bench", r"zoo\.Obstacle.*newton_steps")
     assert result.returncode == 0, result.stdout + result.stderr
     assert "1 results in" in result.stdout
     (path,) = (tmp_path / "asv" / ".asv" / "results").glob("*/*-existing-*.json")
