@@ -45,7 +45,7 @@ PROBLEMS = Path(__file__).resolve().parents[1] / "problems"
 ALPHAS = (1e-4, 1e-5, 1e-6, 1e-7)
 BETA, BOUND = 1e-3, 30.0
 # tolerance on the coarser of nested meshes, whose solutions are starts
-COARSE = 1e-2
+COARSE = 1e-3
 
 missed: list[str] = []
 
