@@ -9,8 +9,7 @@ with itself and the monotonicity of the proximal map give
 
 so that the right-hand side bounds the distance to the exact discrete solution. At the end e1 and e2 are computed by
 multigrid cycles until these leave a twentieth, which enters the certificate. In the iteration the residual norm is the
-same expression for the first cycle of the next Newton step in place of (e2, e1): the step needs it
-anyway.
+same expression for the first cycle of the next Newton step in place of (e2, e1): the step needs it anyway.
 
 Where the whole state is observed, y can be eliminated, and the second residual is minus the gradient of the convex dual
 function
@@ -80,7 +79,7 @@ class CoupledEquation:
 
     def __init__(self, problem: Any) -> None:
         self.problem, self.alpha, self.cost, self.work = problem, problem.alpha, problem.cost, problem.work
-        self.operators = CoupledOperators(problem)
+        self.operators: Any = self._operators_of(problem)
         self.size = self.operators.size
         self.piecewise_affine = bool(getattr(problem.cost, "piecewise_affine", True))
         weight = problem.observations
@@ -91,6 +90,10 @@ class CoupledEquation:
         )
         self.inner = InnerProduct(np.concatenate([mass, mass / self.alpha]))
         self._source = np.zeros(self.size) if problem.source is None else problem.source
+
+    def _operators_of(self, problem: Any) -> Any:
+        """The operators of the pair, with what estimates its errors."""
+        return CoupledOperators(problem)
 
     def start(
         self, control: FloatArray | None, pair: tuple[FloatArray, FloatArray] | None = None
@@ -234,7 +237,7 @@ class CoupledEquation:
             doubt = f"state and adjoint equation are solved to {share:.1e} of the control only"
         return u, at.accuracy, {
             "doubt": None if doubt is None else (Outcome.INACCURATE, doubt),
-            "pieces": self.cost.pieces(v, step),
+            "pieces": at.pieces,
             "margins": self.cost.margins(v, step),
             "multipliers": self.cost.multipliers(u, problem.pull_back(p) - self.alpha * u),
             "objective": value + self.cost.value(u, problem.weights),

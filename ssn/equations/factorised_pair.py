@@ -12,7 +12,7 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from ..inner import InnerProduct, relative
+from ..inner import relative
 from ..linear.schur import SchurOperators
 from ..pieces import Pieces
 from ..protocols import Evaluation
@@ -31,19 +31,9 @@ class FactorisedPairEquation(CoupledEquation):
         One that `ssn.linear.schur.refusal` has nothing against.
     """
 
-    def __init__(self, problem: Any) -> None:
-        # not that of the base class, which builds a hierarchy
-        self.problem, self.alpha, self.cost, self.work = problem, problem.alpha, problem.cost, problem.work
-        self.operators: Any = SchurOperators(problem)
-        self.size = self.operators.size
-        self.piecewise_affine = bool(getattr(problem.cost, "piecewise_affine", True))
-        weight = problem.observations
-        self.has_dual = problem.observation is None
-        self._weight = weight.vector if weight.vector is not None else weight.matrix
-        whole = problem.observation is None and weight.vector is not None
-        mass = weight.vector if whole else np.ones(self.size)
-        self.inner = InnerProduct(np.concatenate([mass, mass / self.alpha]))
-        self._source = np.zeros(self.size) if problem.source is None else problem.source
+    def _operators_of(self, problem: Any) -> Any:
+        """The operators of the pair, with exact solves: no hierarchy is built."""
+        return SchurOperators(problem)
 
     def residuals(self, x: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
         """r1, r2, the argument of the proximal map, and u."""
