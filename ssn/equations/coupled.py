@@ -128,7 +128,7 @@ class CoupledEquation:
         self.work.proximal_maps += 1
         u = self.cost.prox(v, 1.0 / self.alpha)
         first = self.operators.matrix @ p + self.state_load(y)
-        second = self.operators.matrix @ y - self.control_load(u)
+        second = self.operators.state @ y - self.control_load(u)
         return first, second, v, u
 
     def evaluate(self, x: FloatArray) -> Evaluation:

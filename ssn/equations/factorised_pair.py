@@ -35,17 +35,6 @@ class FactorisedPairEquation(CoupledEquation):
         """The operators of the pair, with exact solves: no hierarchy is built."""
         return SchurOperators(problem)
 
-    def residuals(self, x: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
-        """r1, r2, the argument of the proximal map, and u."""
-        y, p = x[: self.size], x[self.size :]
-        self.work.operator_products += 2
-        v = self.problem.pull_back(p) / self.alpha
-        self.work.proximal_maps += 1
-        u = self.cost.prox(v, 1.0 / self.alpha)
-        first = self.operators.matrix @ p + self.state_load(y)
-        second = self.operators.state @ y - self.control_load(u)
-        return first, second, v, u
-
     def evaluate(self, x: FloatArray) -> Evaluation:
         """Both residuals, and two solves with the state operator for their norm."""
         first, second, v, u = self.residuals(x)

@@ -75,7 +75,7 @@ class CoupledOperators:
     def __init__(self, problem: Any) -> None:
         self.problem, self.work = problem, problem.work
         self.root = float(np.sqrt(problem.alpha))
-        self.matrix = problem.state.matrix
+        self.matrix = self.state = problem.state.matrix  # E', which is E
         self.size = int(self.matrix.shape[0])
         self.control = problem.control_operator
         self.diagonal = _diagonal(self.control)
